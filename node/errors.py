@@ -1,0 +1,36 @@
+"""The exceptions of the node.
+
+``NodeError``
+    anything that keeps a frame from being computed, sent or received
+    ├── ``ConfigError``: the configuration is at fault; says the key's path, the value and what is allowed
+    ├── ``VolumeError``: the working volume cannot be seen by both cameras of this rig
+    ├── ``PairError``: this one pair is unusable; the node counts it and goes on
+    ├── ``WireError``: bytes that are no message of ours
+    └── ``NoFrameError``: nothing arrived in time; the peer or the network, not the caller, is at fault
+"""
+
+from __future__ import annotations
+
+
+class NodeError(RuntimeError):
+    """A frame cannot be computed, sent or received; the message names the remedy."""
+
+
+class ConfigError(NodeError):
+    """A configuration value is missing, unknown or out of range."""
+
+
+class VolumeError(NodeError):
+    """The working volume cannot be covered by this rig."""
+
+
+class PairError(NodeError):
+    """One pair of images cannot be used; the next one may."""
+
+
+class WireError(NodeError):
+    """Bytes that are not a message of this format and version."""
+
+
+class NoFrameError(NodeError, TimeoutError):
+    """No frame arrived within the time allowed."""

@@ -1,0 +1,1 @@
+"""Where images come from: one small class each behind one protocol."""

@@ -1,0 +1,1 @@
+"""What people run: the command line, the virtual cell, benchmarks and examples."""

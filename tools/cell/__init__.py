@@ -1,0 +1,1 @@
+"""The virtual cell: two cameras over a bench, rendered with known truth."""

@@ -131,7 +131,8 @@ class Camera:
             inside = np.einsum("ij,ij->i", flat, flat) <= self.field_limit**2
             flat[~inside] = np.nan
             normalised[ahead] = _distort(flat, self.distortion)
-        return normalised @ self.K[:2, :2].T + self.K[:2, 2]
+        pixels: FloatArray = normalised @ self.K[:2, :2].T + self.K[:2, 2]
+        return pixels
 
     def undistort(self, pixels: ArrayLike) -> FloatArray:
         """Take pixels to normalised, undistorted image coordinates (x/z, y/z).

@@ -170,7 +170,8 @@ class Camera:
         flat = _invert_distortion(distorted, self.distortion)
         flat[np.einsum("ij,ij->i", flat, flat) > self.field_limit**2] = np.nan
         rays = np.column_stack([flat, np.ones(len(flat))])
-        return rays / np.linalg.norm(rays, axis=1, keepdims=True)
+        units: FloatArray = rays / np.linalg.norm(rays, axis=1, keepdims=True)
+        return units
 
     @cached_property
     def field_limit(self) -> float:

@@ -1,14 +1,23 @@
 """All that happens to a frame, from a pair of images to a robot program. Imports nothing of the tools."""
 
+from .engine import DepthEngine
 from .errors import ConfigError, NodeError, NoFrameError, PairError, VolumeError, WireError
 from .frame import DepthFrame
+from .match import MatchSettings
+from .status import NodeStatus
+from .subscriber import DepthSubscriber, StatusSubscriber
 
 __all__ = [
     "ConfigError",
+    "DepthEngine",
     "DepthFrame",
+    "DepthSubscriber",
+    "MatchSettings",
     "NoFrameError",
     "NodeError",
+    "NodeStatus",
     "PairError",
+    "StatusSubscriber",
     "VolumeError",
     "WireError",
 ]

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import time
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from types import MappingProxyType
 from typing import Literal
 
 import numpy as np
@@ -46,6 +48,8 @@ class DepthFrame:
         When the node handed the frame to the network, nanoseconds since the Unix epoch; 0 before that.
     picture : ndarray of shape (H, W), uint8, or None
         Camera A's image in the same view, grey, pixel for pixel with the depth, where it was asked for.
+    stages_ms : mapping
+        What each stage of the computation took, in milliseconds; stays with the node that made the frame.
     """
 
     depth: NDArray[np.float32]
@@ -62,6 +66,7 @@ class DepthFrame:
     session: str = ""
     published_ns: int = 0
     picture: NDArray[np.uint8] | None = None
+    stages_ms: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
 
     @property
     def coverage(self) -> float:

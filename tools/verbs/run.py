@@ -1,0 +1,145 @@
+"""``skewline run``: the node, from a configuration file."""
+
+from __future__ import annotations
+
+import argparse
+import logging
+import signal
+import threading
+from collections.abc import Iterator
+from contextlib import contextmanager
+from types import FrameType
+
+import msgspec
+
+from ...calib import Rig
+from ...node import NodeStatus
+from ...node.config import load_config
+from ...node.publisher import Publisher
+from ...node.runner import run_node
+from ...node.sources import BUILT_IN, SourceKind
+from ..cli import CAUTION
+from ..live_line import LiveLine, make_log, standard_error
+from ..virtual_source import VirtualSettings, VirtualSource
+
+SOURCES = {**BUILT_IN, "virtual": SourceKind(VirtualSettings, VirtualSource)}
+
+_LOG_EVERY = 10
+"""On anything but a terminal, every tenth status (one each ten seconds) becomes a log line."""
+
+_DESCRIPTION = "Run the node: pairs of images in, metric depth frames out over ZeroMQ, until it is stopped."
+
+_EXAMPLE = """\
+example: this node.toml reads image files ten times a second and publishes on this host
+
+  rig = "bench.rig.json"           # paths start from this file's folder
+
+  [volume]
+  near_m = 0.45
+  far_m = 1.20
+
+  [source]
+  kind = "folder"                  # or "virtual"
+  a = "images/a*.png"
+  b = "images/b*.png"
+  rate_hz = 10                     # leave out: every pair, as fast as can be
+  loop = true
+
+  [match]                          # may be left out
+  matcher = "block"                # or "semiglobal"
+
+  [publish]                        # may be left out
+  depth = "tcp://127.0.0.1:7601"
+  status = "tcp://127.0.0.1:7602"
+  picture = true                   # frames carry camera A's picture in the same view
+
+  skewline run node.toml
+
+In another terminal: skewline listen tcp://127.0.0.1:7601
+Ctrl-C, SIGINT or SIGTERM ends it within a second, with status 0.
+"""
+
+
+def configure(parser: argparse.ArgumentParser) -> None:
+    """Add description, example and options."""
+    parser.description = _DESCRIPTION
+    parser.epilog = f"{_EXAMPLE}\n{CAUTION}"
+    parser.add_argument("config", metavar="node.toml", help="the node's configuration")
+    parser.add_argument("--json", action="store_true", help="at the end, print the figures of the run as JSON")
+
+
+def run(arguments: argparse.Namespace) -> int:
+    """Run the node; 0 when it was stopped or its source ended."""
+    line = standard_error()
+    log = make_log("skewline", line)
+    with _stop_on_signals() as stop:
+        config = load_config(arguments.config, SOURCES)
+        try:
+            summary = run_node(
+                config,
+                SOURCES,
+                stop,
+                log=log,
+                on_ready=lambda rig, publisher: _greet(log, rig, publisher),
+                on_status=_Display(line, log),
+            )
+        finally:
+            line.end()
+    if arguments.json:
+        print(msgspec.json.format(msgspec.json.encode(summary), indent=2).decode())
+    log.info("ended: %s", status_line(summary))
+    return 0
+
+
+@contextmanager
+def _stop_on_signals() -> Iterator[threading.Event]:
+    """Turn SIGINT and SIGTERM into an event while the node runs."""
+    stop = threading.Event()
+
+    def handle(_number: int, _frame: FrameType | None) -> None:
+        stop.set()
+
+    before = {number: signal.signal(number, handle) for number in (signal.SIGINT, signal.SIGTERM)}
+    try:
+        yield stop
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
+def _greet(log: logging.Logger, rig: Rig, publisher: Publisher) -> None:
+    log.info("%s", CAUTION)
+    log.info("rig %s, baseline %.1f mm", rig.fingerprint, rig.baseline_m * 1e3)
+    log.info("depth on %s", publisher.depth_address)
+    log.info("status on %s", publisher.status_address)
+
+
+class _Display:
+    """Shows each status on the terminal's line, or logs every tenth, the first among them."""
+
+    def __init__(self, line: LiveLine, log: logging.Logger) -> None:
+        self._line = line
+        self._log = log
+        self._seen = 0
+
+    def __call__(self, status: NodeStatus) -> None:
+        text = status_line(status)
+        self._line.show(text)
+        if not self._line.live and self._seen % _LOG_EVERY == 0:
+            self._log.info("%s", text)
+        self._seen += 1
+
+
+def status_line(status: NodeStatus) -> str:
+    """Say a status in one line for a person."""
+    parts = [
+        f"published {status.published} of {status.paired} ({status.rate_out_hz:.1f} of {status.rate_in_hz:.1f} /s)"
+    ]
+    if status.latency_p50_ms is not None:
+        percentiles = (status.latency_p50_ms, status.latency_p90_ms or 0.0, status.latency_p99_ms or 0.0)
+        parts.append("latency p50 p90 p99 " + " ".join(f"{value:.0f}" for value in percentiles) + " ms")
+    lost = ", ".join(f"{reason} {count}" for reason, count in sorted(status.lost.items()))
+    parts += [f"dropped {status.dropped_busy}", f"bad {status.bad_pairs}", f"lost {lost or 0}"]
+    if status.peak_memory_mb is not None:
+        parts.append(f"{status.peak_memory_mb:.0f} MB")
+    return ", ".join(parts)

@@ -1,0 +1,96 @@
+"""The virtual cell as a source of the node: a few pairs rendered at the start, then shown round and round."""
+
+from __future__ import annotations
+
+import itertools
+import threading
+import time
+from collections.abc import Iterator
+from pathlib import Path
+from types import TracebackType
+from typing import TYPE_CHECKING, Annotated, Any, Self
+
+import numpy as np
+from msgspec import Meta, Struct
+
+from ..node.pairing import LostPair, Pair, StampedImage
+from ..node.sources import Pace
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+Images = tuple["NDArray[Any]", "NDArray[Any]"]
+
+
+class VirtualSettings(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
+    """Keys of ``[source]`` with ``kind = "virtual"``.
+
+    Attributes
+    ----------
+    frames : int
+        How many different pairs to render, over one turn of the moving parts; rendering takes a moment for each.
+    rate_hz : float, optional
+        Pairs a second, as a camera would give them: a busy node drops the older. Without it every pair is processed.
+    loop : bool
+        Begin again after the last pair.
+    seed : int
+        Of the images' noise.
+    yaw_deg : float
+        How far camera B is turned in towards A; the rig file must be of a cell with the same yaw.
+    """
+
+    frames: Annotated[int, Meta(ge=1, le=200)] = 6
+    rate_hz: Annotated[float, Meta(gt=0, le=1000)] | None = None
+    loop: bool = True
+    seed: Annotated[int, Meta(ge=0, le=2**32 - 1)] = 0
+    yaw_deg: Annotated[float, Meta(ge=-60, le=60)] = 15.0
+
+
+class VirtualSource:
+    """Rendered pairs at a given rate, or as fast as the node takes them.
+
+    Parameters
+    ----------
+    settings : VirtualSettings
+        How many, how fast, of which cell.
+    base : Path
+        Not used: a rendered cell reads no files.
+    """
+
+    def __init__(self, settings: VirtualSettings, base: Path) -> None:  # noqa: ARG002 - every opener is given it
+        self._settings = settings
+
+    @property
+    def live(self) -> bool:
+        """Whether a rate is set."""
+        return self._settings.rate_hz is not None
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        pass  # images live as long as the generator that shows them
+
+    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostPair]:
+        """Give the rendered pairs in order, stamped with the moment at which their turn comes."""
+        # Rendered here, in the reading thread: the node stays ready to stop meanwhile.
+        images = list(_render(self._settings, stop))
+        pace = Pace(self._settings.rate_hz, stop)
+        for image_a, image_b in itertools.cycle(images) if self._settings.loop else images:
+            if not pace.wait():
+                return
+            stamp_ns = time.time_ns()
+            yield Pair(StampedImage(image_a, stamp_ns), StampedImage(image_b, stamp_ns))
+
+
+def _render(settings: VirtualSettings, stop: threading.Event) -> Iterator[Images]:
+    from .cell import make_cell, render_pair  # the renderer loads only where it is wanted
+
+    cell = make_cell(yaw_deg=settings.yaw_deg)
+    rng = np.random.default_rng(settings.seed)
+    for number in range(settings.frames):
+        if stop.is_set():
+            return
+        yield render_pair(cell, rng, number / settings.frames)

@@ -2,7 +2,8 @@
 
 ``CalibrationError``
     anything that keeps a camera, a rig or a calibration from being made, read or used
-    └── ``RigFileError``: the file, not the caller, is at fault; a node keeps the rig it has
+    ├── ``RigFileError``: the file, not the caller, is at fault; a node keeps the rig it has
+    └── ``ImageFileError``: one image file is missing or unreadable; a node counts it and goes on
 """
 
 from __future__ import annotations
@@ -14,3 +15,11 @@ class CalibrationError(ValueError):
 
 class RigFileError(CalibrationError):
     """A rig file is missing, cut short, edited or of another version."""
+
+
+class ImageFileError(CalibrationError):
+    """An image file is missing or unreadable; ``reason`` says which in two words, for counting."""
+
+    def __init__(self, reason: str, message: str) -> None:
+        super().__init__(message)
+        self.reason = reason

@@ -131,6 +131,11 @@ class DepthEngine:
             stages_ms=clock.result(),
         )
 
+    @property
+    def seen(self) -> tuple[Grey, Grey]:
+        """Where each working image shows a real picture: 255 there, 0 where the camera's nearest edge is repeated."""
+        return self._map_a.seen, self._map_b.seen
+
     def rectify(self, image_a: NDArray[Any], image_b: NDArray[Any]) -> tuple[Grey, Grey]:
         """Give both working images, uint8 and of one size, before any turning upright: a point lies on one row in both.
 

@@ -44,6 +44,14 @@ def npz_bytes(frame: DepthFrame) -> bytes:
     return file.getvalue()
 
 
+def load_npz(file: Path) -> DepthFrame:
+    """Read a frame that :func:`npz_bytes` packed."""
+    with np.load(file, allow_pickle=False) as arrays:
+        values = {name: arrays[name] for name in arrays.files}
+    plain = {name: value.item() if value.ndim == 0 else value for name, value in values.items()}
+    return DepthFrame(**plain)
+
+
 def png_bytes(frame: DepthFrame) -> bytes:
     """Give the depth as 16-bit grey in counts of 0.1 mm; 0 where there is none, or beyond 6.5535 m."""
     done, data = cv2.imencode(".png", to_counts(frame.depth, PNG_UNIT_M))

@@ -2,20 +2,17 @@
 
 from __future__ import annotations
 
-import glob
-import re
 import threading
 import time
 from collections.abc import Iterator
 from pathlib import Path
 from types import TracebackType
-from typing import Annotated, Any, Self
+from typing import Annotated, Self
 
-import cv2
-import numpy as np
 from msgspec import Meta, Struct
-from numpy.typing import NDArray
 
+from ...calib import CalibrationError, ImageFileError
+from ...calib.images import find_images, read_image
 from ..errors import ConfigError
 from ..pairing import LostPair, Pair, StampedImage
 from .pace import Pace
@@ -44,14 +41,6 @@ class FolderSettings(Struct, frozen=True, kw_only=True, forbid_unknown_fields=Tr
     b: Files
     rate_hz: Annotated[float, Meta(gt=0, le=1000)] | None = None
     loop: bool = False
-
-
-class _ImageLostError(Exception):
-    """One image cannot be had; carries the reason and the detail."""
-
-    def __init__(self, reason: str, detail: str) -> None:
-        super().__init__(detail)
-        self.reason = reason
 
 
 class FolderSource:
@@ -115,44 +104,15 @@ class FolderSource:
 
 
 def _find(files: str | list[str], base: Path, key: str) -> list[Path]:
-    """Give the files in order: those of a pattern by the numbers in their names, those of a list as listed."""
-    found: list[Path] = []
-    for pattern in [files] if isinstance(files, str) else files:
-        path = base / pattern
-        matches = [path] if path.is_file() else sorted(map(Path, glob.glob(str(path), recursive=True)), key=_natural)
-        if not matches:
-            raise ConfigError(
-                f"{key} is {pattern!r}, which matches no file in {base}; expected images: mend the pattern"
-            )
-        found += matches
-    return found
-
-
-def _natural(path: Path) -> list[str | int]:
-    """Order img2 before img10: pieces of text and whole numbers take turns."""
-    return [int(piece) if piece.isdecimal() else piece for piece in re.split(r"([0-9]+)", str(path))]
+    try:
+        return find_images(files, base)
+    except CalibrationError as exc:
+        raise ConfigError(f"{key} is {files!r}: {exc}") from exc
 
 
 def _read_pair(file_a: Path, file_b: Path) -> Pair | LostPair:
     stamp_ns = time.time_ns()
     try:
-        return Pair(StampedImage(_read_image(file_a), stamp_ns), StampedImage(_read_image(file_b), stamp_ns))
-    except _ImageLostError as exc:
+        return Pair(StampedImage(read_image(file_a), stamp_ns), StampedImage(read_image(file_b), stamp_ns))
+    except ImageFileError as exc:
         return LostPair(exc.reason, str(exc))
-
-
-def _read_image(file: Path) -> NDArray[Any]:
-    """Read one image as it is stored, 8 or 16 bits, grey or colour; a transparency layer is left out."""
-    try:
-        data = file.read_bytes()
-    except FileNotFoundError as exc:
-        raise _ImageLostError("file missing", f"{file} is gone") from exc
-    except OSError as exc:
-        raise _ImageLostError("file unreadable", f"{file} cannot be read: {exc.strerror}") from exc
-    try:
-        image = cv2.imdecode(np.frombuffer(data, np.uint8), cv2.IMREAD_UNCHANGED) if data else None
-    except cv2.error as exc:
-        raise _ImageLostError("file unreadable", f"{file} cannot be decoded: {exc.err}") from exc
-    if image is None:
-        raise _ImageLostError("file unreadable", f"{file} ({len(data)} bytes) is no whole image in a known format")
-    return image[..., :3] if image.ndim == 3 and image.shape[2] == 4 else image

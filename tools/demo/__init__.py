@@ -1,0 +1,1 @@
+"""The demonstration: the everyday commands at work on the virtual cell, scored against its truth."""

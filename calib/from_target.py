@@ -31,6 +31,9 @@ _GOOD_TILT_DEG = 20.0
 _OUTLYING_VIEW = 2.5
 """Limits of the warnings: common practice, no source."""
 
+_NO_POSE = 5.0
+"""How many times worse than each camera alone a pair may fit before it is no pair: far above a knock or a blur."""
+
 _COVERAGE_GRID = (8, 6)
 _COEFFICIENTS = (5, 8)
 _STOP = (cv2.TERM_CRITERIA_EPS | cv2.TERM_CRITERIA_COUNT, 200, 1e-9)
@@ -143,7 +146,14 @@ def calibrate_pair(
     fit_b = _fit_camera(target, seen_b, size_b, coefficients)
     corners_a = [a for _, a, _ in both]
     corners_b = _same_numbering(target, fit_a.camera, fit_b.camera, corners_a, [b for _, _, b in both])
-    rig, rms = _joint(target, fit_a.camera, fit_b.camera, corners_a, corners_b, coefficients)
+    views_of_both = corners_a, corners_b
+    lens = _lens_flags(coefficients)
+    held, held_rms = _solve_pose(target, fit_a.camera, fit_b.camera, *views_of_both, lens | cv2.CALIB_FIX_INTRINSIC)
+    _refuse_unlike_pairs(max(fit_a.rms_px, fit_b.rms_px), held_rms, held)
+    together = lens | cv2.CALIB_USE_INTRINSIC_GUESS
+    rig, rms = _solve_pose(target, fit_a.camera, fit_b.camera, *views_of_both, together)
+    _refuse_folding_lens("A", rig.a, corners_a, coefficients)
+    _refuse_folding_lens("B", rig.b, corners_b, coefficients)
     distances = [rig_epipolar_distances_px(rig, a, b) for a, b in zip(corners_a, corners_b, strict=True)]
     whole = np.concatenate(distances)
     result = CalibrationResult(
@@ -190,15 +200,15 @@ def _fit_camera(target: Chessboard, seen: dict[str, FloatArray], size: tuple[int
     )
 
 
-def _joint(
+def _solve_pose(
     target: Chessboard,
     a: Camera,
     b: Camera,
     corners_a: Sequence[FloatArray],
     corners_b: Sequence[FloatArray],
-    coefficients: int,
+    flags: int,
 ) -> tuple[Rig, float]:
-    """Refine both cameras and the pose together, starting from each camera on its own."""
+    """Find the pose with both cameras held as they are, or refine all together from there, as the flags say."""
     lenses = [np.array(camera.distortion) for camera in (a, b)]
     try:
         rms, K_a, lens_a, K_b, lens_b, R, t, _, _ = cv2.stereoCalibrate(
@@ -210,15 +220,37 @@ def _joint(
             np.array(b.K),
             lenses[1],
             a.size,  # with a start for the intrinsics the size is not looked at: the two may differ
-            flags=_lens_flags(coefficients) | cv2.CALIB_USE_INTRINSIC_GUESS,
+            flags=flags,
             criteria=_STOP,
         )
     except cv2.error as exc:
         raise CalibrationError(
             f"the {len(corners_a)} common views do not settle the pose ({exc.err}); expected views from different sides"
         ) from exc
-    cameras = _camera(K_a, lens_a, a.size, coefficients), _camera(K_b, lens_b, b.size, coefficients)
-    return Rig(a=cameras[0], b=cameras[1], R=np.asarray(R, dtype=np.float64), t=np.ravel(t)), float(rms)
+    found_a = _camera(K_a, lens_a, a.size, a.distortion.size)
+    found_b = _camera(K_b, lens_b, b.size, b.distortion.size)
+    return Rig(a=found_a, b=found_b, R=np.asarray(R, dtype=np.float64), t=np.ravel(t)), float(rms)
+
+
+def _refuse_unlike_pairs(alone_rms_px: float, rms_px: float, rig: Rig) -> None:
+    """Refuse pairs that no one pose can explain."""
+    if rms_px > max(_NO_POSE * alone_rms_px, _NO_POSE * _GOOD_RMS_PX):
+        raise CalibrationError(
+            f"each camera fits on its own (RMS {alone_rms_px:.2f} px) but no one pose fits the pairs (RMS {rms_px:.1f} px, "
+            f"baseline {rig.baseline_m * 1e3:.0f} mm); expected pairs of one instant, in the same order for A and B, from "
+            "cameras that stayed where they were: check the two lists of images"
+        )
+
+
+def _refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray], coefficients: int) -> None:
+    """Refuse a lens that fits its corners but has no ray for some of them: too many coefficients for the views."""
+    rays = camera.rays(np.concatenate(list(corners)))
+    lost = 1 - float(np.isfinite(rays).all(axis=1).mean())
+    if lost:
+        raise CalibrationError(
+            f"camera {name}'s lens with {coefficients} coefficients is not one to one where {lost:.1%} of its corners were "
+            f"seen; expected a lens that is: use {min(_COEFFICIENTS)} coefficients, or more views that reach its edges"
+        )
 
 
 def _same_numbering(
@@ -262,6 +294,7 @@ def _lens_flags(coefficients: int) -> int:
 
 
 def _camera(K: NDArray[Any], distortion: NDArray[Any], size: tuple[int, int], coefficients: int) -> Camera:
+    # OpenCV may pad the coefficients it was given with zeros.
     return Camera(width=size[0], height=size[1], K=K, distortion=np.ravel(distortion)[:coefficients])
 
 
@@ -280,8 +313,8 @@ def _with_warnings(result: CalibrationResult, pair_medians_px: dict[str, float])
     alone = max(result.a.rms_px, result.b.rms_px)
     if result.rms_px > max(2 * alone, _GOOD_RMS_PX):
         warnings.append(
-            f"each camera fits on its own (RMS {alone:.2f} px) but the pair does not ({result.rms_px:.2f} px): are the "
-            "pairs of one instant and in the same order, and was nothing moved between views?"
+            f"each camera fits on its own (RMS {alone:.2f} px), both together less well ({result.rms_px:.2f} px): was the "
+            "target still in every pair, and was no camera moved between pairs?"
         )
     typical = float(np.median(list(pair_medians_px.values())))
     for name, distance in pair_medians_px.items():

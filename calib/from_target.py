@@ -152,8 +152,8 @@ def calibrate_pair(
     _refuse_unlike_pairs(max(fit_a.rms_px, fit_b.rms_px), held_rms, held)
     together = lens | cv2.CALIB_USE_INTRINSIC_GUESS
     rig, rms = _solve_pose(target, fit_a.camera, fit_b.camera, *views_of_both, together)
-    _refuse_folding_lens("A", rig.a, corners_a, coefficients)
-    _refuse_folding_lens("B", rig.b, corners_b, coefficients)
+    refuse_folding_lens("A", rig.a, corners_a)
+    refuse_folding_lens("B", rig.b, corners_b)
     distances = [rig_epipolar_distances_px(rig, a, b) for a, b in zip(corners_a, corners_b, strict=True)]
     whole = np.concatenate(distances)
     result = CalibrationResult(
@@ -242,13 +242,27 @@ def _refuse_unlike_pairs(alone_rms_px: float, rms_px: float, rig: Rig) -> None:
         )
 
 
-def _refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray], coefficients: int) -> None:
-    """Refuse a lens that fits its corners but has no ray for some of them: too many coefficients for the views."""
+def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]) -> None:
+    """Refuse a lens that fits its corners but has no ray for some of them: too many coefficients for the views.
+
+    Parameters
+    ----------
+    name : str
+        The camera's, for the message.
+    camera : Camera
+    corners : sequence of ndarray of shape (N, 2)
+        Pixels.
+
+    Raises
+    ------
+    CalibrationError
+        Where a corner has no ray.
+    """
     rays = camera.rays(np.concatenate(list(corners)))
     lost = 1 - float(np.isfinite(rays).all(axis=1).mean())
     if lost:
         raise CalibrationError(
-            f"camera {name}'s lens with {coefficients} coefficients is not one to one where {lost:.1%} of its corners were "
+            f"camera {name}'s lens with {camera.distortion.size} coefficients is not one to one where {lost:.1%} of its corners were "
             f"seen; expected a lens that is: use {min(_COEFFICIENTS)} coefficients, or more views that reach its edges"
         )
 

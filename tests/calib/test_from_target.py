@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
 from skewline.calib import CalibrationError, Camera, Rig
-from skewline.calib.from_target import CalibrationResult, View, calibrate_pair
+from skewline.calib.from_target import CalibrationResult, View, calibrate_pair, refuse_folding_lens
 from skewline.calib.images import find_images, read_image
 from skewline.calib.targets import Chessboard, parse_target
 
@@ -205,6 +205,16 @@ def test_too_few_views_are_refused_with_their_number_and_the_remedy(unlike_rig: 
         calibrate_pair(BOARD, views[:2], unlike_rig.a.size, unlike_rig.b.size)
     with pytest.raises(CalibrationError, match="7 lens coefficients; expected 5 or 8"):
         calibrate_pair(BOARD, views, unlike_rig.a.size, unlike_rig.b.size, coefficients=7)
+
+
+def test_a_lens_that_folds_where_corners_were_seen_is_refused_with_the_remedy() -> None:
+    # Of r (1 - 0.5 r^2) the derivative is 0 at r = 0.816: no ray falls beyond the radius 0.544, 272 px from the centre.
+    folding = Camera(width=640, height=480, K=[[500, 0, 320], [0, 500, 240], [0, 0, 1]], distortion=[-0.5, 0, 0, 0, 0])
+    inside, outside = np.array([[320.0, 240.0], [580.0, 240.0]]), np.array([[320.0, 240.0], [600.0, 240.0]])
+
+    refuse_folding_lens("A", folding, [inside])
+    with pytest.raises(CalibrationError, match=r"not one to one where 50.0% of its corners .* use 5 coefficients"):
+        refuse_folding_lens("A", folding, [outside])
 
 
 @pytest.mark.parametrize(

@@ -262,8 +262,9 @@ def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]
     lost = 1 - float(np.isfinite(rays).all(axis=1).mean())
     if lost:
         raise CalibrationError(
-            f"camera {name}'s lens with {camera.distortion.size} coefficients is not one to one where {lost:.1%} of its corners were "
-            f"seen; expected a lens that is: use {min(_COEFFICIENTS)} coefficients, or more views that reach its edges"
+            f"the lens of camera {name} with {camera.distortion.size} coefficients is not one to one where "
+            f"{lost:.1%} of its corners were seen; expected a lens that is: use {min(_COEFFICIENTS)} coefficients, or more "
+            "views that reach its edges"
         )
 
 

@@ -68,7 +68,7 @@ def run(arguments: argparse.Namespace) -> int:
     truths = [true_view(cell, moved(cell.scene, phase), f) for phase, f in zip(stages.PHASES, frames, strict=True)]
     figures = [*calibration_figures(cell.rig, rig, calibrated["rms_px"]), *depth_figures(frames, truths), *speed]
     _write_results(out, figures, _tiles(out, rig, frames[0], truths[0]))
-    return _report(figures, out, time.monotonic() - start, as_json=arguments.json)
+    return report(figures, out, time.monotonic() - start, as_json=arguments.json)
 
 
 class _Teller:
@@ -151,7 +151,8 @@ def _as_json(figures: Sequence[Figure]) -> str:
     return json.dumps([f.as_json() for f in figures], indent=2, allow_nan=False)
 
 
-def _report(figures: Sequence[Figure], out: Path, took_s: float, *, as_json: bool) -> int:
+def report(figures: Sequence[Figure], out: Path, took_s: float, *, as_json: bool) -> int:
+    """Print the figures; return 1 where one is out of its bounds, and say which."""
     broken = [figure for figure in figures if not figure.kept]
     if as_json:
         print(_as_json(figures))

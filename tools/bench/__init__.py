@@ -1,0 +1,1 @@
+"""Benchmarks: speed with its circumstances, never as a test."""

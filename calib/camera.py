@@ -9,11 +9,13 @@ fisheye model is the equidistant one with four coefficients of Kannala and Brand
 
 from __future__ import annotations
 
+import reprlib
 from dataclasses import dataclass, field
 from functools import cached_property
-from typing import Literal, get_args
+from typing import Any, Literal, get_args
 
 import numpy as np
+from numpy.polynomial import Polynomial
 from numpy.typing import ArrayLike, NDArray
 
 from .errors import CalibrationError
@@ -27,19 +29,32 @@ _NEWTON_STEPS = 50
 _NEWTON_TOLERANCE = 1e-12
 """Step in normalised coordinates at which the inverse lens model has settled: far below any pixel."""
 
-_FIELD_SAMPLES = 2048
+_TABLE_LENGTH = 2048
+"""Samples of the radial model from which the inverse takes its start."""
+
+_WIDEST_PINHOLE = float(np.tan(np.deg2rad(89.0)))
+"""Undistorted radius x/z that no pinhole lens passes."""
 
 
-def frozen_array(value: ArrayLike, shape: tuple[int, ...], name: str) -> FloatArray:
-    """Copy to a read-only float64 array of the given shape; refuse other shapes and non-finite values."""
+def numbers(value: Any, name: str) -> FloatArray:
+    """Copy to a float64 array; refuse what holds anything but finite numbers, such as text or null from a file."""
     try:
-        array = np.array(value, dtype=np.float64)
-    except (TypeError, ValueError) as exc:
-        raise CalibrationError(f"{name} is {value!r}, which is no array of numbers; expected shape {shape}") from exc
+        array = np.asarray(value)
+    except ValueError as exc:
+        raise CalibrationError(f"{name} is {reprlib.repr(value)}; expected rows of equal length") from exc
+    if array.dtype.kind not in "iuf":
+        raise CalibrationError(f"{name} is {reprlib.repr(value)}; expected numbers only")
+    array = array.astype(np.float64)
+    if not np.isfinite(array).all():
+        raise CalibrationError(f"{name} holds {array[~np.isfinite(array)].flat[0]}; expected finite numbers only")
+    return array
+
+
+def frozen_array(value: Any, shape: tuple[int, ...], name: str) -> FloatArray:
+    """Copy to a read-only float64 array of the given shape; refuse other shapes and non-finite values."""
+    array = numbers(value, name)
     if array.shape != shape:
         raise CalibrationError(f"{name} has shape {array.shape}; expected {shape}")
-    if not np.isfinite(array).all():
-        raise CalibrationError(f"{name} holds {array[~np.isfinite(array)][0]}; expected finite numbers only")
     array.setflags(write=False)
     return array
 
@@ -86,12 +101,12 @@ class Camera:
             )
         if self.K[0, 1] != 0 or self.K[1, 0] != 0:
             raise CalibrationError(f"intrinsic matrix K has skew {self.K[0, 1]}, {self.K[1, 0]}; expected 0, 0")
-        count = np.size(self.distortion)
+        coefficients = numbers(self.distortion, "distortion").reshape(-1)
+        count = len(coefficients)
         if count not in COEFFICIENT_COUNTS[self.model]:
             allowed = ", ".join(map(str, COEFFICIENT_COUNTS[self.model]))
             raise CalibrationError(f"{count} distortion coefficients for the {self.model} model; expected {allowed}")
-        flat = frozen_array(np.reshape(self.distortion, -1), (count,), "distortion")
-        object.__setattr__(self, "distortion", flat)
+        object.__setattr__(self, "distortion", frozen_array(coefficients, (count,), "distortion"))
 
     @property
     def size(self) -> tuple[int, int]:
@@ -117,20 +132,22 @@ class Camera:
             Pixels; NaN for points behind the camera and for those outside the cone in which the lens model is
             one to one, where a polynomial would fold a far-off point back into the picture.
         """
-        xyz = np.asarray(points, dtype=np.float64).reshape(-1, 3)
+        xyz = _rows(points, 3, "points")
         normalised = np.full((len(xyz), 2), np.nan)
         if self.model == "fisheye":
             radius = np.hypot(xyz[:, 0], xyz[:, 1])
             theta = np.arctan2(radius, xyz[:, 2])
-            seen = theta <= self.field_limit
-            scale = np.where(radius > 0, _theta_distorted(theta, self.distortion) / np.maximum(radius, 1e-300), 0.0)
+            # Neither the camera's own centre nor a point straight behind it has a direction in the picture.
+            seen = (theta <= self.field_limit) & ((radius > 0) | (xyz[:, 2] > 0))
+            scale = np.divide(
+                _theta_distorted(theta, self.distortion), radius, out=np.zeros_like(radius), where=radius > 0
+            )
             normalised[seen] = xyz[seen, :2] * scale[seen, None]
         else:
-            ahead = xyz[:, 2] > 0
-            flat = xyz[ahead, :2] / xyz[ahead, 2:]
-            inside = np.einsum("ij,ij->i", flat, flat) <= self.field_limit**2
-            flat[~inside] = np.nan
-            normalised[ahead] = _distort(flat, self.distortion)
+            with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+                flat = xyz[:, :2] / xyz[:, 2:]
+                seen = (xyz[:, 2] > 0) & (np.einsum("ij,ij->i", flat, flat) <= self.field_limit**2)
+            normalised[seen] = _distort(flat[seen], self.distortion)
         pixels: FloatArray = normalised @ self.K[:2, :2].T + self.K[:2, 2]
         return pixels
 
@@ -164,11 +181,10 @@ class Camera:
         ndarray of shape (N, 3)
             Unit vectors; NaN where no ray of the lens model falls on the pixel.
         """
-        distorted = (np.asarray(pixels, dtype=np.float64).reshape(-1, 2) - self.K[:2, 2]) / np.diag(self.K)[:2]
+        distorted = (_rows(pixels, 2, "pixels") - self.K[:2, 2]) / np.diag(self.K)[:2]
         if self.model == "fisheye":
             return _fisheye_rays(distorted, self.distortion, self.field_limit)
-        flat = _invert_distortion(distorted, self.distortion)
-        flat[np.einsum("ij,ij->i", flat, flat) > self.field_limit**2] = np.nan
+        flat = _invert_distortion(distorted, self.distortion, self.field_limit)
         rays = np.column_stack([flat, np.ones(len(flat))])
         units: FloatArray = rays / np.linalg.norm(rays, axis=1, keepdims=True)
         return units
@@ -181,11 +197,15 @@ class Camera:
         ``fisheye`` the largest angle from the axis, in radians. Infinite, or pi, where it always grows.
         """
         if self.model == "fisheye":
-            theta = np.linspace(0.0, np.pi, _FIELD_SAMPLES)
-            return _end_of_growth(theta, _theta_distorted(theta, self.distortion), beyond=np.pi)
-        # tan of 89 degrees: no pinhole lens reaches further
-        radius = np.tan(np.linspace(0.0, np.deg2rad(89.0), _FIELD_SAMPLES))
-        return _end_of_growth(radius, radius * _radial_factor(radius**2, self.distortion), beyond=np.inf)
+            slope = Polynomial([1.0, *(self.distortion * (3, 5, 7, 9)[: len(self.distortion)])])
+            return min(np.sqrt(_first_root(slope)), np.pi)
+        k1, k2, _, _, k3, k4, k5, k6 = _padded(self.distortion)[:8]
+        above, below = Polynomial([1.0, k1, k2, k3]), Polynomial([1.0, k4, k5, k6])
+        r2 = Polynomial([0.0, 1.0])
+        # d(r above / below)/dr, times below squared
+        slope = above * below + 2 * r2 * (above.deriv() * below - above * below.deriv())
+        limit = np.sqrt(min(_first_root(slope), _first_root(below)))
+        return float(limit) if limit < _WIDEST_PINHOLE else float("inf")
 
     def border_pixels(self, per_side: int = 33) -> FloatArray:
         """Give pixels evenly spaced along the image border, shape (4 * per_side, 2)."""
@@ -206,6 +226,21 @@ class Camera:
         return (x >= -0.5) & (x <= self.width - 0.5) & (y >= -0.5) & (y <= self.height - 0.5)
 
 
+def _rows(value: ArrayLike, columns: int, name: str) -> FloatArray:
+    """Give float64 rows of so many columns; refuse other shapes, which would be cut up into the wrong rows."""
+    array = np.asarray(value, dtype=np.float64)
+    if array.ndim == 0 or array.shape[-1] != columns:
+        raise CalibrationError(f"{name} have shape {array.shape}; expected (N, {columns})")
+    return array.reshape(-1, columns)
+
+
+def _first_root(polynomial: Polynomial) -> float:
+    """Give the smallest positive real root, or infinity."""
+    roots = polynomial.trim().roots()
+    real = np.real(roots[np.abs(np.imag(roots)) < 1e-9 * np.abs(roots)])
+    return float(min(real[real > 0], default=np.inf))
+
+
 def _padded(distortion: FloatArray) -> FloatArray:
     """Give all 14 coefficients k1 k2 p1 p2 k3 k4 k5 k6 s1 s2 s3 s4 tx ty."""
     return np.concatenate([distortion, np.zeros(14 - len(distortion))])
@@ -222,79 +257,129 @@ def _distort(flat: FloatArray, distortion: FloatArray) -> FloatArray:
     """Apply the pinhole lens model to normalised coordinates of shape (N, 2)."""
     if not distortion.any():
         return flat.copy()
-    _, _, p1, p2, _, _, _, _, s1, s2, s3, s4, tau_x, tau_y = _padded(distortion)
+    bent = _bend(flat, distortion)
+    tau_x, tau_y = _padded(distortion)[12:]
+    return _through(_tilt(tau_x, tau_y), bent) if tau_x or tau_y else bent
+
+
+def _bend(flat: FloatArray, distortion: FloatArray) -> FloatArray:
+    """Apply the lens model but for the sensor's tilt."""
+    _, _, p1, p2, _, _, _, _, s1, s2, s3, s4, _, _ = _padded(distortion)
     x, y = flat[:, 0], flat[:, 1]
     r2 = x * x + y * y
     radial = _radial_factor(r2, distortion)
-    xd = x * radial + 2 * p1 * x * y + p2 * (r2 + 2 * x * x) + s1 * r2 + s2 * r2 * r2
-    yd = y * radial + p1 * (r2 + 2 * y * y) + 2 * p2 * x * y + s3 * r2 + s4 * r2 * r2
-    if tau_x or tau_y:
-        xd, yd = _tilt(xd, yd, tau_x, tau_y)
+    xd = x * radial + 2 * p1 * x * y + p2 * (r2 + 2 * x * x) + r2 * (s1 + s2 * r2)
+    yd = y * radial + p1 * (r2 + 2 * y * y) + 2 * p2 * x * y + r2 * (s3 + s4 * r2)
     return np.column_stack([xd, yd])
 
 
-def _tilt(x: FloatArray, y: FloatArray, tau_x: float, tau_y: float) -> tuple[FloatArray, FloatArray]:
-    """Apply the tilted-sensor homography (Louhichi et al. 2007), as OpenCV writes it."""
+def _bend_jacobian(flat: FloatArray, distortion: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Give the derivatives (dx_x, dx_y, dy_x, dy_y) of :func:`_bend`, each of shape (N,)."""
+    k1, k2, p1, p2, k3, k4, k5, k6, s1, s2, s3, s4, _, _ = _padded(distortion)
+    x, y = flat[:, 0], flat[:, 1]
+    r2 = x * x + y * y
+    radial = _radial_factor(r2, distortion)
+    below = 1 + r2 * (k4 + r2 * (k5 + r2 * k6))
+    # twice the derivative of the radial factor by r2: d(radial)/dx = x * growth
+    growth = 2 * (k1 + r2 * (2 * k2 + 3 * r2 * k3) - radial * (k4 + r2 * (2 * k5 + 3 * r2 * k6))) / below
+    prism_x, prism_y = 2 * (s1 + 2 * s2 * r2), 2 * (s3 + 2 * s4 * r2)
+    cross = x * y * growth + 2 * p1 * x + 2 * p2 * y
+    return (
+        radial + x * x * growth + 2 * p1 * y + 6 * p2 * x + prism_x * x,
+        cross + prism_x * y,
+        cross + prism_y * x,
+        radial + y * y * growth + 6 * p1 * y + 2 * p2 * x + prism_y * y,
+    )
+
+
+def _tilt(tau_x: float, tau_y: float) -> FloatArray:
+    """Give the homography of a tilted sensor (Louhichi et al. 2007), as OpenCV writes it."""
     cx, sx, cy, sy = np.cos(tau_x), np.sin(tau_x), np.cos(tau_y), np.sin(tau_y)
     turn = np.array([[cy, 0, -sy], [0, 1, 0], [sy, 0, cy]]) @ np.array([[1, 0, 0], [0, cx, sx], [0, -sx, cx]])
     onto = np.array([[turn[2, 2], 0, -turn[0, 2]], [0, turn[2, 2], -turn[1, 2]], [0, 0, 1]])
-    u, v, w = onto @ turn @ np.vstack([x, y, np.ones_like(x)])
-    return u / w, v / w
+    homography: FloatArray = onto @ turn
+    return homography
 
 
-def _invert_distortion(distorted: FloatArray, distortion: FloatArray) -> FloatArray:
-    """Undo :func:`_distort` by Newton's method with a difference Jacobian; NaN where it does not settle."""
+def _through(homography: FloatArray, flat: FloatArray) -> FloatArray:
+    """Take points of shape (N, 2) through a homography."""
+    u, v, w = homography @ np.vstack([flat.T, np.ones(len(flat))])
+    return np.column_stack([u / w, v / w])
+
+
+def _invert_distortion(distorted: FloatArray, distortion: FloatArray, limit: float) -> FloatArray:
+    """Undo :func:`_distort` up to the radius ``limit``; NaN where no point within it leads there.
+
+    The tilt is undone in closed form, a table of the radial part gives the start, and Newton's method the rest for
+    those points that have not settled yet.
+    """
     if not distortion.any():
         return distorted.copy()
-    flat = distorted.copy()
-    h = 1e-7
-    dx, dy = np.array([h, 0.0]), np.array([0.0, h])
+    tau_x, tau_y = _padded(distortion)[12:]
+    if tau_x or tau_y:
+        distorted = _through(np.linalg.inv(_tilt(tau_x, tau_y)), distorted)
+    flat = _radial_start(distorted, distortion, limit)
+    moving = np.arange(len(flat))
     with np.errstate(all="ignore"):
         for _ in range(_NEWTON_STEPS):
-            error = _distort(flat, distortion) - distorted
-            jx = (_distort(flat + dx, distortion) - _distort(flat - dx, distortion)) / (2 * h)
-            jy = (_distort(flat + dy, distortion) - _distort(flat - dy, distortion)) / (2 * h)
-            det = jx[:, 0] * jy[:, 1] - jx[:, 1] * jy[:, 0]
-            step = np.column_stack(
-                [
-                    (jy[:, 1] * error[:, 0] - jy[:, 0] * error[:, 1]) / det,
-                    (jx[:, 0] * error[:, 1] - jx[:, 1] * error[:, 0]) / det,
-                ]
-            )
-            flat = flat - step
+            step = _newton_step(flat[moving], distorted[moving], distortion)
+            flat[moving] -= step
             size = np.abs(step).max(axis=1, initial=0.0)
-            if not (size > _NEWTON_TOLERANCE).any():
+            moving = moving[size > _NEWTON_TOLERANCE * (1 + np.abs(flat[moving]).max(axis=1, initial=0.0))]
+            if not len(moving):
                 break
-        # The last step's size and the forward model both have to agree, else a far root could pass for an answer.
-        settled = (size < 1e-9) & (np.abs(_distort(flat, distortion) - distorted).max(axis=1, initial=0.0) < 1e-9)
-    flat[~settled] = np.nan
+        # A step may settle on a far root or, at a fold, on none: the model itself has the last word.
+        off = np.abs(_bend(flat, distortion) - distorted).max(axis=1, initial=0.0)
+        flat[~((off < 1e-9) & (np.einsum("ij,ij->i", flat, flat) <= limit**2))] = np.nan
     return flat
+
+
+def _radial_start(distorted: FloatArray, distortion: FloatArray, limit: float) -> FloatArray:
+    """Invert the radial part alone, by a table."""
+    # Evenly spaced angles: fine where pictures are, coarse where hardly any lens reaches.
+    table = np.tan(np.linspace(0.0, np.arctan(min(limit, _WIDEST_PINHOLE)), _TABLE_LENGTH))
+    reach = table * _radial_factor(table**2, distortion)
+    radius = np.hypot(distorted[:, 0], distorted[:, 1])
+    scale = np.divide(np.interp(radius, reach, table), radius, out=np.ones_like(radius), where=radius > 0)
+    return distorted * scale[:, None]
+
+
+def _newton_step(flat: FloatArray, distorted: FloatArray, distortion: FloatArray) -> FloatArray:
+    error = _bend(flat, distortion) - distorted
+    dx_x, dx_y, dy_x, dy_y = _bend_jacobian(flat, distortion)
+    step = np.column_stack([dy_y * error[:, 0] - dx_y * error[:, 1], dx_x * error[:, 1] - dy_x * error[:, 0]])
+    result: FloatArray = step / (dx_x * dy_y - dx_y * dy_x)[:, None]
+    return result
 
 
 def _theta_distorted(theta: FloatArray, distortion: FloatArray) -> FloatArray:
     """Kannala and Brandt (2006), eq. 6 with the first factor 1: the distorted angle."""
-    k = np.concatenate([distortion, np.zeros(4 - len(distortion))])
+    k1, k2, k3, k4 = _four(distortion)
     t2 = theta * theta
-    result: FloatArray = theta * (1 + t2 * (k[0] + t2 * (k[1] + t2 * (k[2] + t2 * k[3]))))
+    result: FloatArray = theta * (1 + t2 * (k1 + t2 * (k2 + t2 * (k3 + t2 * k4))))
     return result
+
+
+def _theta_slope(theta: FloatArray, distortion: FloatArray) -> FloatArray:
+    k1, k2, k3, k4 = _four(distortion)
+    t2 = theta * theta
+    result: FloatArray = 1 + t2 * (3 * k1 + t2 * (5 * k2 + t2 * (7 * k3 + t2 * 9 * k4)))
+    return result
+
+
+def _four(distortion: FloatArray) -> FloatArray:
+    return np.concatenate([distortion, np.zeros(4 - len(distortion))])
 
 
 def _fisheye_rays(distorted: FloatArray, distortion: FloatArray, limit: float) -> FloatArray:
     """Undo the fisheye model: a table of the growing part of the angle gives the start, Newton the rest."""
     radius = np.hypot(distorted[:, 0], distorted[:, 1])
-    table = np.linspace(0.0, limit, _FIELD_SAMPLES)
+    table = np.linspace(0.0, limit, _TABLE_LENGTH)
     reach = _theta_distorted(table, distortion)
     theta = np.interp(radius, reach, table, right=np.nan)
-    h = 1e-7
-    for _ in range(5):
-        slope = (_theta_distorted(theta + h, distortion) - _theta_distorted(theta - h, distortion)) / (2 * h)
-        theta = theta - (_theta_distorted(theta, distortion) - radius) / slope
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore"):  # at the limit itself the slope is zero
+        for _ in range(5):
+            step = (_theta_distorted(theta, distortion) - radius) / _theta_slope(theta, distortion)
+            theta = np.clip(theta - step, 0.0, limit)
         direction = np.where(radius[:, None] > 0, distorted / radius[:, None], 0.0)
     return np.column_stack([direction * np.sin(theta)[:, None], np.cos(theta)])
-
-
-def _end_of_growth(x: FloatArray, y: FloatArray, *, beyond: float) -> float:
-    """Find the first x at which the sampled y stops growing; ``beyond`` where it never does."""
-    falls = np.flatnonzero(~(np.diff(y) > 0))
-    return float(x[falls[0]]) if len(falls) else beyond

@@ -32,6 +32,9 @@ _NEWTON_TOLERANCE = 1e-12
 _TABLE_LENGTH = 2048
 """Samples of the radial model from which the inverse takes its start."""
 
+_quiet = np.errstate(all="ignore")
+"""For arithmetic on points at infinity, at the camera or of no value: they come out as NaN, which is the answer."""
+
 _WIDEST_PINHOLE = float(np.tan(np.deg2rad(89.0)))
 """Undistorted radius x/z that no pinhole lens passes."""
 
@@ -118,6 +121,7 @@ class Camera:
         """Mean of the two focal lengths, in pixels."""
         return float(self.K[0, 0] + self.K[1, 1]) / 2
 
+    @_quiet
     def project(self, points: ArrayLike) -> FloatArray:
         """Project points of the camera frame into the image.
 
@@ -144,13 +148,13 @@ class Camera:
             )
             normalised[seen] = xyz[seen, :2] * scale[seen, None]
         else:
-            with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-                flat = xyz[:, :2] / xyz[:, 2:]
-                seen = (xyz[:, 2] > 0) & (np.einsum("ij,ij->i", flat, flat) <= self.field_limit**2)
+            flat = xyz[:, :2] / xyz[:, 2:]
+            seen = (xyz[:, 2] > 0) & (np.einsum("ij,ij->i", flat, flat) <= self.field_limit**2)
             normalised[seen] = _distort(flat[seen], self.distortion)
         pixels: FloatArray = normalised @ self.K[:2, :2].T + self.K[:2, 2]
         return pixels
 
+    @_quiet
     def undistort(self, pixels: ArrayLike) -> FloatArray:
         """Take pixels to normalised, undistorted image coordinates (x/z, y/z).
 
@@ -165,10 +169,10 @@ class Camera:
             lead forward.
         """
         rays = self.rays(pixels)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            flat: FloatArray = np.where(rays[:, 2:] > 0, rays[:, :2] / rays[:, 2:], np.nan)
+        flat: FloatArray = np.where(rays[:, 2:] > 0, rays[:, :2] / rays[:, 2:], np.nan)
         return flat
 
+    @_quiet
     def rays(self, pixels: ArrayLike) -> FloatArray:
         """Give the unit vector in the camera frame along which each pixel looks.
 
@@ -198,7 +202,7 @@ class Camera:
         """
         if self.model == "fisheye":
             slope = Polynomial([1.0, *(self.distortion * (3, 5, 7, 9)[: len(self.distortion)])])
-            return min(np.sqrt(_first_root(slope)), np.pi)
+            return float(min(np.sqrt(_first_root(slope)), np.pi))
         k1, k2, _, _, k3, k4, k5, k6 = _padded(self.distortion)[:8]
         above, below = Polynomial([1.0, k1, k2, k3]), Polynomial([1.0, k4, k5, k6])
         r2 = Polynomial([0.0, 1.0])
@@ -248,8 +252,7 @@ def _padded(distortion: FloatArray) -> FloatArray:
 
 def _radial_factor(r2: FloatArray, distortion: FloatArray) -> FloatArray:
     k1, k2, _, _, k3, k4, k5, k6 = _padded(distortion)[:8]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        factor: FloatArray = (1 + r2 * (k1 + r2 * (k2 + r2 * k3))) / (1 + r2 * (k4 + r2 * (k5 + r2 * k6)))
+    factor: FloatArray = (1 + r2 * (k1 + r2 * (k2 + r2 * k3))) / (1 + r2 * (k4 + r2 * (k5 + r2 * k6)))
     return factor
 
 
@@ -317,27 +320,28 @@ def _invert_distortion(distorted: FloatArray, distortion: FloatArray, limit: flo
         return distorted.copy()
     tau_x, tau_y = _padded(distortion)[12:]
     if tau_x or tau_y:
-        distorted = _through(np.linalg.inv(_tilt(tau_x, tau_y)), distorted)
+        level: FloatArray = np.linalg.inv(_tilt(tau_x, tau_y)).astype(np.float64)
+        distorted = _through(level, distorted)
     flat = _radial_start(distorted, distortion, limit)
     moving = np.arange(len(flat))
-    with np.errstate(all="ignore"):
-        for _ in range(_NEWTON_STEPS):
-            step = _newton_step(flat[moving], distorted[moving], distortion)
-            flat[moving] -= step
-            size = np.abs(step).max(axis=1, initial=0.0)
-            moving = moving[size > _NEWTON_TOLERANCE * (1 + np.abs(flat[moving]).max(axis=1, initial=0.0))]
-            if not len(moving):
-                break
-        # A step may settle on a far root or, at a fold, on none: the model itself has the last word.
-        off = np.abs(_bend(flat, distortion) - distorted).max(axis=1, initial=0.0)
-        flat[~((off < 1e-9) & (np.einsum("ij,ij->i", flat, flat) <= limit**2))] = np.nan
+    for _ in range(_NEWTON_STEPS):
+        step = _newton_step(flat[moving], distorted[moving], distortion)
+        flat[moving] -= step
+        size = np.abs(step).max(axis=1, initial=0.0)
+        moving = moving[size > _NEWTON_TOLERANCE * (1 + np.abs(flat[moving]).max(axis=1, initial=0.0))]
+        if not len(moving):
+            break
+    # A step may settle on a far root or, at a fold, on none: the model itself has the last word.
+    off = np.abs(_bend(flat, distortion) - distorted).max(axis=1, initial=0.0)
+    flat[~((off < 1e-9) & (np.einsum("ij,ij->i", flat, flat) <= limit**2))] = np.nan
     return flat
 
 
 def _radial_start(distorted: FloatArray, distortion: FloatArray, limit: float) -> FloatArray:
     """Invert the radial part alone, by a table."""
-    # Evenly spaced angles: fine where pictures are, coarse where hardly any lens reaches.
-    table = np.tan(np.linspace(0.0, np.arctan(min(limit, _WIDEST_PINHOLE)), _TABLE_LENGTH))
+    # Evenly spaced angles: fine where pictures are, coarse where hardly any lens reaches; up to just short of a pole.
+    widest = min(limit * (1 - 1e-6), _WIDEST_PINHOLE)
+    table = np.tan(np.linspace(0.0, np.arctan(widest), _TABLE_LENGTH))
     reach = table * _radial_factor(table**2, distortion)
     radius = np.hypot(distorted[:, 0], distorted[:, 1])
     scale = np.divide(np.interp(radius, reach, table), radius, out=np.ones_like(radius), where=radius > 0)
@@ -377,9 +381,8 @@ def _fisheye_rays(distorted: FloatArray, distortion: FloatArray, limit: float) -
     table = np.linspace(0.0, limit, _TABLE_LENGTH)
     reach = _theta_distorted(table, distortion)
     theta = np.interp(radius, reach, table, right=np.nan)
-    with np.errstate(divide="ignore", invalid="ignore"):  # at the limit itself the slope is zero
-        for _ in range(5):
-            step = (_theta_distorted(theta, distortion) - radius) / _theta_slope(theta, distortion)
-            theta = np.clip(theta - step, 0.0, limit)
-        direction = np.where(radius[:, None] > 0, distorted / radius[:, None], 0.0)
+    for _ in range(5):
+        step = (_theta_distorted(theta, distortion) - radius) / _theta_slope(theta, distortion)
+        theta = np.clip(theta - step, 0.0, limit)
+    direction = np.where(radius[:, None] > 0, distorted / radius[:, None], 0.0)
     return np.column_stack([direction * np.sin(theta)[:, None], np.cos(theta)])

@@ -18,7 +18,7 @@ from typing import Any
 import cv2
 import numpy as np
 
-from .camera import Camera, FloatArray, frozen_array
+from .camera import Camera, FloatArray, frozen_array, numbers
 from .errors import CalibrationError, RigFileError
 
 FORMAT = "skewline rig"
@@ -66,9 +66,14 @@ class Rig:
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "R", _rotation(self.R, "R"))
-        object.__setattr__(self, "t", frozen_array(np.reshape(self.t, -1), (3,), "translation t"))
+        object.__setattr__(self, "t", frozen_array(numbers(self.t, "translation t").reshape(-1), (3,), "translation t"))
         if not np.linalg.norm(self.t) > 0:
             raise CalibrationError("translation t is zero; expected two cameras that stand apart: calibrate again")
+        if not isinstance(self.scale_known, (bool, np.bool_)):
+            raise CalibrationError(f"scale_known is {self.scale_known!r}; expected true or false")
+        object.__setattr__(self, "scale_known", bool(self.scale_known))
+        if not isinstance(self.notes, Mapping):
+            raise CalibrationError(f"notes are {self.notes!r}; expected names and their values")
         if self.covariance is not None:
             object.__setattr__(self, "covariance", frozen_array(self.covariance, (6, 6), "covariance"))
         if self.T_base_a is not None:
@@ -101,10 +106,13 @@ class Rig:
         Raises
         ------
         RigFileError
-            Where the folder is missing or cannot be written.
+            Where the folder is missing or cannot be written, or the notes are no plain JSON.
         """
         target = Path(path)
-        text = json.dumps({**self._header(), **self._geometry(), **self._extras()}, indent=2, allow_nan=False)
+        try:
+            text = json.dumps({**self._header(), **self._geometry(), **self._extras()}, indent=2, allow_nan=False)
+        except (TypeError, ValueError) as exc:
+            raise RigFileError(f"cannot write rig file {target}: notes hold {exc}; expected plain JSON values") from exc
         try:
             write_atomically(target, (text + "\n").encode())
         except OSError as exc:
@@ -126,7 +134,7 @@ class Rig:
             raise RigFileError(
                 f"cannot read rig file {path}: {exc.strerror}; expected a file that calibrate wrote"
             ) from exc
-        except ValueError as exc:
+        except (ValueError, RecursionError) as exc:
             raise RigFileError(f"rig file {path} is not whole JSON ({exc}); {remedy}") from exc
         if not isinstance(content, dict) or content.get("format") != FORMAT:
             raise RigFileError(f'{path} is no rig file; expected a JSON object with "format": "{FORMAT}"')
@@ -139,7 +147,7 @@ class Rig:
             return cls(**_geometry_from(content), notes=content.get("notes", {}))
         except KeyError as exc:
             raise RigFileError(f"rig file {path} lacks the key {exc}; {remedy}") from exc
-        except (CalibrationError, TypeError) as exc:
+        except CalibrationError as exc:
             raise RigFileError(f"rig file {path}: {exc}; {remedy}") from exc
 
     @classmethod
@@ -164,13 +172,17 @@ class Rig:
         unit_m : float
             Metres in one unit of T, since such files do not say: 0.001 for a board measured in millimetres.
         scale_known : bool
-            False where T is known up to scale only.
+            False where T is known up to scale only; a file of ours that says so is believed.
 
         Raises
         ------
         RigFileError
             Where a file or one of its entries is missing or has the wrong shape.
+        CalibrationError
+            Where ``unit_m`` is no positive number.
         """
+        if not (np.isfinite(unit_m) and unit_m > 0):
+            raise CalibrationError(f"unit_m is {unit_m!r}; expected the positive number of metres in one unit of T")
         inner = _read_storage(intrinsics)
         outer = inner if extrinsics is None else _read_storage(extrinsics)
         where = {"intrinsics": str(intrinsics), "extrinsics": str(extrinsics or intrinsics)}
@@ -180,12 +192,13 @@ class Rig:
                 if name in store:
                     return store[name]
             held = ", ".join(sorted(store)) or "nothing"
-            raise RigFileError(f"{where[file]} lacks {' or '.join(names)}; it holds {held}")
+            advice = "; say size_a and size_b" if names[0].startswith("size") else ""
+            raise RigFileError(f"{where[file]} lacks {' or '.join(names)}; it holds {held}{advice}")
 
         def camera(number: int, size: tuple[int, int] | None) -> Camera:
             if size is None:
-                saved = np.ravel(entry(inner, "intrinsics", f"size{number}"))
-                size = int(saved[0]), int(saved[1])
+                saved = frozen_array(entry(inner, "intrinsics", f"size{number}"), (1, 2), f"size{number}")
+                size = int(saved[0, 0]), int(saved[0, 1])
             matrix = entry(inner, "intrinsics", f"M{number}", f"K{number}")
             return Camera(width=size[0], height=size[1], K=matrix, distortion=entry(inner, "intrinsics", f"D{number}"))
 
@@ -194,8 +207,8 @@ class Rig:
                 a=camera(1, size_a),
                 b=camera(2, size_b),
                 R=entry(outer, "extrinsics", "R"),
-                t=np.reshape(entry(outer, "extrinsics", "T"), -1) * unit_m,
-                scale_known=scale_known,
+                t=entry(outer, "extrinsics", "T") * unit_m,
+                scale_known=scale_known and bool(np.all(outer.get("scale_known", True))),
                 notes={"source": "OpenCV FileStorage"},
             )
         except RigFileError:
@@ -204,7 +217,9 @@ class Rig:
             raise RigFileError(f"{where['intrinsics']}, {where['extrinsics']}: {exc}") from exc
 
     def to_opencv(self, path: str | os.PathLike[str]) -> None:
-        """Write M1 D1 M2 D2 R T (metres) and size1, size2 to one OpenCV FileStorage file (.yml, .xml or .json).
+        """Write M1 D1 M2 D2 R T (metres), size1, size2 and scale_known to one FileStorage file (.yml, .xml or .json).
+
+        Covariance, T_base_a and notes stay behind; a lens without distortion comes back with four zeros.
 
         Raises
         ------
@@ -225,6 +240,7 @@ class Rig:
             )
         store.write("R", np.array(self.R))
         store.write("T", np.array(self.t).reshape(3, 1))
+        store.write("scale_known", np.array([[self.scale_known]], dtype=np.int32))
         try:
             write_atomically(target, store.releaseAndGetString().encode())
         except OSError as exc:
@@ -248,10 +264,11 @@ def _plain(array: FloatArray) -> Any:
     return (array + 0.0).tolist()
 
 
-def _rotation(value: FloatArray, name: str) -> FloatArray:
+def _rotation(value: Any, name: str) -> FloatArray:
     matrix = frozen_array(value, (3, 3), name)
-    off = float(np.abs(matrix @ matrix.T - np.eye(3)).max())
-    if off > ROTATION_TOLERANCE or np.linalg.det(matrix) < 0:
+    with np.errstate(over="ignore", invalid="ignore"):
+        off = float(np.abs(matrix @ matrix.T - np.eye(3)).max())
+    if not off <= ROTATION_TOLERANCE or np.linalg.det(matrix) < 0:
         kind = "is a reflection" if off <= ROTATION_TOLERANCE else f"is not orthogonal (R R^T is off by {off:.2g})"
         raise CalibrationError(f"{name} {kind}; expected a rotation matrix to within {ROTATION_TOLERANCE:g}")
     return matrix
@@ -274,24 +291,23 @@ def _geometry_from(content: Mapping[str, Any]) -> dict[str, Any]:
         if not isinstance(fields, dict):
             raise CalibrationError(f"camera {name} is {fields!r}; expected an object")
         cameras[name] = Camera(**{key: fields[key] for key in ("width", "height", "K", "distortion", "model")})
-    if not isinstance(content["scale_known"], bool):
-        raise CalibrationError(f"scale_known is {content['scale_known']!r}; expected true or false")
     optional = {key: content.get(key) for key in ("covariance", "T_base_a")}
     return {**cameras, "R": content["R"], "t": content["t"], "scale_known": content["scale_known"], **optional}
 
 
 def _read_storage(path: str | os.PathLike[str]) -> dict[str, Any]:
-    """Read every matrix of an OpenCV FileStorage file."""
+    """Read every matrix of an OpenCV FileStorage file; dates, counts and other entries are passed over."""
     if not Path(path).is_file():
         raise RigFileError(f"{path} is missing; expected an OpenCV FileStorage file (.yml, .xml or .json)")
     try:
         store = cv2.FileStorage(str(path), cv2.FileStorage_READ)
         root = store.root()
-        found = {name: root.getNode(name).mat() for name in root.keys()}  # noqa: SIM118 - a FileNode is no mapping
+        nodes = {name: root.getNode(name) for name in root.keys()}  # noqa: SIM118 - a FileNode is no mapping
+        matrices = {name: node.mat() for name, node in nodes.items() if node.isMap() and not node.getNode("dt").empty()}
+        store.release()
     except (cv2.error, SystemError) as exc:
-        raise RigFileError(f"{path} is no OpenCV FileStorage file: {exc}") from exc
-    store.release()
-    return {name: matrix for name, matrix in found.items() if matrix is not None}
+        raise RigFileError(f"{path} is no whole OpenCV FileStorage file (.yml, .xml or .json)") from exc
+    return {name: matrix for name, matrix in matrices.items() if matrix is not None}
 
 
 def write_atomically(path: Path, data: bytes) -> None:

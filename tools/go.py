@@ -64,11 +64,20 @@ def show_progress(process: subprocess.Popen[str], log: Path) -> str:
     return "\n".join(tail)
 
 
+def usable() -> bool:
+    """Tell whether ``.venv`` is of this Python and has pip; one that was cut off while being made has none."""
+    probe = [str(PYTHON), "-c", "import pip, sys; print(sys.version)"]
+    try:
+        return subprocess.run(probe, capture_output=True, text=True, check=False).stdout.strip() == sys.version
+    except OSError:
+        return False
+
+
 def install(extra: str) -> None:
-    """Make ``.venv`` where it is missing and install the project there, editable."""
+    """Make ``.venv`` where there is none to use and install the project there, editable."""
     print(f"setting up .venv{' for development' if extra else ''} (once; about a minute) ...", file=sys.stderr)
     start = time.monotonic()
-    if not PYTHON.exists():
+    if not usable():
         try:
             venv.create(VENV, with_pip=True, clear=VENV.exists())
         except (subprocess.CalledProcessError, OSError) as exc:
@@ -77,9 +86,9 @@ def install(extra: str) -> None:
                 "on Debian or Ubuntu: apt-get install python3-venv, then run this again"
             ) from exc
     command = [str(PYTHON), "-m", "pip", "install", "--disable-pip-version-check", "-e", f"{ROOT}{extra}"]
-    process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, text=True)
-    tail = show_progress(process, LOG)
-    if process.wait() != 0:
+    with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, text=True) as process:
+        tail = show_progress(process, LOG)
+    if process.returncode != 0:
         raise SetupError(f"pip could not install the project; its last words:\n{tail}\nThe whole log: {LOG}")
     extras = (installed_extras() or set()) | ({extra} if extra else set())
     STAMP.write_text("\n".join([wanted_stamp(), *sorted(extras)]), encoding="utf-8")

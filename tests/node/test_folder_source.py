@@ -80,8 +80,8 @@ def test_images_come_as_they_are_stored(tmp_path: Path) -> None:
 @pytest.mark.parametrize(
     ("settings", "complaint"),
     [
-        ({"a": "c*.png"}, r"source\.a is 'c\*\.png', which matches no file in .*; expected images"),
-        ({"b": ["b1.png", "gone.png"]}, r"source\.b is 'gone\.png', which matches no file"),
+        ({"a": "c*.png"}, r"source\.a is 'c\*\.png': .* matches no file in .*; expected images"),
+        ({"b": ["b1.png", "gone.png"]}, r"source\.b is .*: 'gone\.png' matches no file"),
         (
             {"b": "b1*.png"},
             r"source\.a \('a\*\.png'\) gives 3 images and source\.b \('b1\*\.png'\) 2; expected as many",

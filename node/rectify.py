@@ -38,6 +38,13 @@ MAX_ENLARGEMENT = 6.0
 MAX_DISPARITIES = 4096
 """Beyond this many disparities a near distance was mistyped."""
 
+LEAST_NEAR_M = 1e-6
+"""Nearer than this, 1 / near is no number to plan with."""
+
+_DEPTH_SAMPLES = 9
+_BORDER_SAMPLES = 1025
+"""At how many distances the volume is looked at, and how many pixels of each side of a picture, to find the overlap."""
+
 
 @dataclass(frozen=True, eq=False, kw_only=True)
 class ViewPlan:
@@ -171,8 +178,10 @@ def plan_views(rig: Rig, near: float, far: float, *, resolution: float = 1.0) ->
         Where near and far are no range, one camera sees the other, both cameras have no common view of the volume, or
         the views would grow out of proportion. The message gives the angles or distances found.
     """
-    if not (np.isfinite([near, far]).all() and 0 < near < far):
-        raise VolumeError(f"near {near} m, far {far} m; expected 0 < near < far, in metres")
+    if not (np.isfinite([near, far]).all() and LEAST_NEAR_M <= near < far):
+        raise VolumeError(
+            f"near {near} m, far {far} m; expected 0 < near < far, in metres, and near a micrometre or more"
+        )
     if not 0.05 <= resolution <= 4:
         raise VolumeError(f"resolution {resolution}; expected 0.05 to 4 (1.0 keeps the finer camera's pixels)")
     R_view_a = rectifying_rotation(rig)
@@ -182,14 +191,12 @@ def plan_views(rig: Rig, near: float, far: float, *, resolution: float = 1.0) ->
     if not len(flat_a):
         raise VolumeError(_no_overlap_message(rig, R_view_a, near, far))
     focal = resolution * max(_pixels_per_unit(rig.a, R_view_a, flat_a), _pixels_per_unit(rig.b, R_view_b, flat_b))
-    return _lay_out(rig, R_view_a, R_view_b, focal, flat_a, near, far)
+    return _lay_out(rig, R_view_a, R_view_b, focal, near, far)
 
 
-def _lay_out(
-    rig: Rig, R_view_a: FloatArray, R_view_b: FloatArray, focal: float, flat_a: FloatArray, near: float, far: float
-) -> ViewPlan:
+def _lay_out(rig: Rig, R_view_a: FloatArray, R_view_b: FloatArray, focal: float, near: float, far: float) -> ViewPlan:
     """Turn the overlap's extent in normalised coordinates of A's view into windows of whole pixels."""
-    low, high = flat_a.min(axis=0) * focal, flat_a.max(axis=0) * focal
+    low, high = (focal * end for end in _extent(rig, R_view_a, near, far))
     span = focal * rig.baseline_m * (1 / near - 1 / far)
     if span > MAX_DISPARITIES:
         raise VolumeError(
@@ -240,16 +247,50 @@ def build_maps(camera: Camera, R_view_camera: FloatArray, plan: ViewPlan, princi
 
 def _overlap(rig: Rig, R_view_a: FloatArray, near: float, far: float) -> tuple[FloatArray, FloatArray]:
     """Sample the volume that both cameras see: x/z, y/z of the samples in A's view and in B's, each of shape (N, 2)."""
-    rays = rig.a.rays(rig.a.grid_pixels(97, 73)) @ R_view_a.T
-    rays = rays[np.isfinite(rays).all(axis=1) & (rays[:, 2] > np.sin(np.deg2rad(BASELINE_ANGLE_LIMIT_DEG)))]
-    flat = rays[:, :2] / rays[:, 2:]
+    flat = _view_directions(rig.a, rig.a.grid_pixels(97, 73), R_view_a)
     kept_a, kept_b = [], []
-    for depth in 1 / np.linspace(1 / far, 1 / near, 9):
-        points = np.column_stack([flat * depth, np.full(len(flat), depth)])
-        in_b = rig.b.contains(rig.b.project(points @ R_view_a @ rig.R.T + rig.t))
+    for shift in _disparities_per_focal(rig, near, far):
+        in_b = _sees(rig.b, R_view_a @ rig.R.T, flat - shift)
         kept_a.append(flat[in_b])
-        kept_b.append(flat[in_b] - [rig.baseline_m / depth, 0.0])
+        kept_b.append(flat[in_b] - shift)
     return np.concatenate(kept_a), np.concatenate(kept_b)
+
+
+def _extent(rig: Rig, R_view_a: FloatArray, near: float, far: float) -> tuple[FloatArray, FloatArray]:
+    """Least and largest x/z, y/z in A's view of what both cameras see, each of shape (2,).
+
+    What both see ends where one of the two pictures does, so dense borders find its end to a fraction of a pixel.
+    """
+    R_view_b = R_view_a @ rig.R.T
+    border_a = _view_directions(rig.a, rig.a.border_pixels(_BORDER_SAMPLES), R_view_a)
+    border_b = _view_directions(rig.b, rig.b.border_pixels(_BORDER_SAMPLES), R_view_b)
+    kept = [_overlap(rig, R_view_a, near, far)[0]]
+    for shift in _disparities_per_focal(rig, near, far):
+        moved = border_b + shift
+        kept += [border_a[_sees(rig.b, R_view_b, border_a - shift)], moved[_sees(rig.a, R_view_a, moved)]]
+    found = np.concatenate(kept)
+    return found.min(axis=0), found.max(axis=0)
+
+
+def _disparities_per_focal(rig: Rig, near: float, far: float) -> FloatArray:
+    """Shifts (B / Z, 0) from B's view to A's at distances over the volume, evenly in 1 / Z, shape (N, 2)."""
+    inverse = np.linspace(1 / far, 1 / near, _DEPTH_SAMPLES)
+    return np.column_stack([rig.baseline_m * inverse, np.zeros_like(inverse)])
+
+
+def _view_directions(camera: Camera, pixels: FloatArray, R_view_camera: FloatArray) -> FloatArray:
+    """Give x/z, y/z in the camera's view of those pixels that look well ahead there, shape (N, 2)."""
+    # A hair inside the picture: else rounding decides whether the border of one lies within an equal, parallel other.
+    middle = np.array([camera.width - 1, camera.height - 1]) / 2
+    rays = camera.rays(middle + (pixels - middle) * (1 - 1e-6)) @ R_view_camera.T
+    rays = rays[np.isfinite(rays).all(axis=1) & (rays[:, 2] > np.sin(np.deg2rad(BASELINE_ANGLE_LIMIT_DEG)))]
+    flat: FloatArray = rays[:, :2] / rays[:, 2:]
+    return flat
+
+
+def _sees(camera: Camera, R_view_camera: FloatArray, flat: FloatArray) -> NDArray[np.bool_]:
+    """Tell which view directions x/z, y/z fall into the camera's picture."""
+    return camera.contains(camera.project(np.column_stack([flat, np.ones(len(flat))]) @ R_view_camera))
 
 
 def _no_overlap_message(rig: Rig, R_view_a: FloatArray, near: float, far: float) -> str:
@@ -258,11 +299,16 @@ def _no_overlap_message(rig: Rig, R_view_a: FloatArray, near: float, far: float)
     distances = scale * np.geomspace(0.25, 1000.0, 97)
     common = [d for d in distances if len(_overlap(rig, R_view_a, d, d * 1.01)[0])]
     found = (
-        f"they share a view from about {common[0]:.2f} m to {common[-1]:.2f} m: choose near and far there"
+        f"they share a view from about {_rounded(common[0])} m to {_rounded(common[-1])} m: choose near and far there"
         if common
         else "they share no view at any distance: turn the cameras toward one another and calibrate again"
     )
     return f"both cameras see nothing in common between near {near} m and far {far} m; {found}"
+
+
+def _rounded(distance_m: float) -> str:
+    """Write three digits that count, for rigs of any size."""
+    return f"{float(f'{distance_m:.3g}'):g}"
 
 
 def _refuse_mutual_sight(rig: Rig) -> None:
@@ -279,6 +325,8 @@ def _refuse_mutual_sight(rig: Rig) -> None:
 
 def _angle_to_field_deg(camera: Camera, direction: FloatArray) -> float:
     """Smallest angle, in degrees, between a line through the camera's centre and any ray of its picture."""
+    if camera.contains(camera.project([direction, -direction])).any():
+        return 0.0
     rays = camera.rays(camera.grid_pixels(65, 49))
     rays = rays[np.isfinite(rays).all(axis=1)]
     return float(np.rad2deg(np.arccos(np.clip(np.abs(rays @ direction).max(), 0.0, 1.0))))

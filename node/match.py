@@ -29,6 +29,9 @@ _SEMIGLOBAL_GRADIENT_CAP = 15
 """Horizontal gradients beyond this count as this much, so that no one edge outvotes a block. Both caps, the blocks and
 the speckle size below are the best of those tried on the re-imaged Motorcycle pair (see DEVELOPERS.md)."""
 
+_LARGEST_SEMIGLOBAL_BLOCK_PX = 15
+"""OpenCV sums costs in 16 bits: up to 2 * 15 + 255 // 4 a pixel, and P2 = 32 a pixel on top; a wider block overflows."""
+
 _DETREND_PX = 15
 """Grey levels are taken relative to their mean over so many pixels: brightness may differ between the cameras."""
 
@@ -43,6 +46,9 @@ refinement against the start. Best of 10, 30, 100 and 300 on the re-imaged Motor
 
 _ROUNDING_VARIANCE = 1.0 / 6.0
 """Grey levels squared: two pictures rounded to whole levels, 1/12 each."""
+
+_BLANK_FACTOR = 4.0
+"""Where the two pictures' difference has more than this many times the energy of B's own, B shows nothing there."""
 
 LARGEST_SIGMA_PX = 3.0
 """A match less certain than this, before any edge is considered, is no measurement; it is dropped."""
@@ -121,9 +127,9 @@ class MatchSettings:
     def __post_init__(self) -> None:
         if self.matcher not in get_args(MatcherName):
             raise NodeError(f"matcher is {self.matcher!r}; expected one of {', '.join(get_args(MatcherName))}")
-        least = 5 if self.matcher == "block" else 1
+        least, most = (5, 31) if self.matcher == "block" else (1, _LARGEST_SEMIGLOBAL_BLOCK_PX)
         for name, value, low, high, odd in (
-            ("block_px", self.block, least, 31, True),
+            ("block_px", self.block, least, most, True),
             ("uniqueness_percent", self.uniqueness_percent, 0, 100, False),
             ("left_right_px", self.left_right_px, -1, 64, False),
             ("speckle_px", self.speckle_px, 0, 100_000, False),
@@ -224,12 +230,15 @@ def refine(a: Grey, b: Grey, disparity: NDArray[np.int16], settings: MatchSettin
     start = _averaged(np.where(matched, disparity, 0), count, width)
     level_a, level_b = _detrended(a), _detrended(b)
     gradient = cv2.Sobel(level_a, cv2.CV_32F, 1, 0, ksize=1, scale=0.5) * matched
-    residual = (level_a - sampled(level_b, start)) * matched
+    match_b = sampled(level_b, start) * matched
+    residual = level_a * matched - match_b
     gg, gr, rr = (_summed(x * y, width) for x, y in ((gradient, gradient), (gradient, residual), (residual, residual)))
+    # Semi-global matching joins A's texture even to nothing at all, where B is black or blown: all of A remains.
+    blank = _summed(match_b * match_b, width) * np.float32(_BLANK_FACTOR) < rr
     step, relative = _minimum(count, gg, gr, rr)
     certainty = _CERTAINTY[settings.matcher]
     sigma = np.sqrt(np.float32(certainty.scale**2) * relative + np.float32(certainty.floor_px**2))
-    lost = ~(matched & (sigma <= LARGEST_SIGMA_PX))
+    lost = blank | ~(matched & (sigma <= LARGEST_SIGMA_PX))
     sigma *= cv2.LUT(_distance_to_break(disparity, matched), certainty.growth())
     refined = start - step
     refined[lost] = sigma[lost] = np.nan

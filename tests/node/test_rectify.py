@@ -1,5 +1,6 @@
 """The rectified views: where true points fall in them, what their windows cover, which rigs are refused."""
 
+import functools
 import re
 from dataclasses import replace
 
@@ -17,8 +18,19 @@ DIRECTIONS_DEG = (0, 45, 90, 135, 180, 225, 270, 315)
 SMALL = {"size_a": (320, 240), "size_b": (256, 192)}
 
 
+@functools.cache
+def small_rig(direction_deg: float = 0.0) -> Rig:
+    return make_cell(direction_deg=direction_deg, **SMALL).rig
+
+
+@functools.cache
+def workshop() -> Cell:
+    return make_cell(**SMALL)
+
+
 def small_cell(direction_deg: float = 0.0) -> Cell:
-    return make_cell(direction_deg=direction_deg, **SMALL)
+    """The workshop's scene, which stays, under a rig whose baseline runs elsewhere."""
+    return replace(workshop(), rig=small_rig(direction_deg))
 
 
 def plain_camera(width: int = 320, height: int = 240, focal_px: float = 300.0, distortion: tuple = ()) -> Camera:
@@ -144,7 +156,7 @@ def test_a_parallel_rig_gets_the_rotation_rows_and_depth_of_opencvs_stereo_recti
 
 def test_a_turned_rig_has_its_views_square_to_the_baseline_as_opencvs_are() -> None:
     # Both put x along the baseline and differ by a turn about it alone: OpenCV halves the rotation, we the axes' angle.
-    rig = small_cell().rig
+    rig = small_rig()
     plan = plan_views(rig, 0.55, 1.05)
     lenses = (rig.a.K, rig.a.distortion, rig.b.K, rig.b.distortion)
     R1, R2, *_ = cv2.stereoRectify(*lenses, rig.a.size, rig.R, rig.t.reshape(3, 1))
@@ -159,7 +171,7 @@ def test_a_turned_rig_has_its_views_square_to_the_baseline_as_opencvs_are() -> N
     "direction_deg", [0, 45, 90, 180, 270, None], ids=lambda d: "parallel" if d is None else str(d)
 )
 def test_the_window_covers_all_of_the_volume_that_both_cameras_see_and_no_more(direction_deg: int | None) -> None:
-    rig = rig_of(Rotation.identity(), (0.1, 0, 0)) if direction_deg is None else small_cell(direction_deg).rig
+    rig = rig_of(Rotation.identity(), (0.1, 0, 0)) if direction_deg is None else small_rig(direction_deg)
     plan = plan_views(rig, 0.55, 1.05)
     x, y, width, height = plan.window
 
@@ -173,7 +185,7 @@ def test_the_window_covers_all_of_the_volume_that_both_cameras_see_and_no_more(d
 
 
 def test_working_images_hold_every_match_of_the_window_and_a_margin_of_blocks() -> None:
-    plan = plan_views(small_cell().rig, 0.55, 1.05)
+    plan = plan_views(small_rig(), 0.55, 1.05)
     x, y, width, height = plan.window
 
     # OpenCV's block matcher leaves blank the first numDisparities columns and half a block on every side.
@@ -193,7 +205,7 @@ def test_the_finer_cameras_pixels_per_radian_are_kept_within_a_percent() -> None
 
 
 def test_with_lenses_and_turns_most_of_the_view_is_as_fine_as_the_finer_camera() -> None:
-    rig = small_cell().rig
+    rig = small_rig()
     plan = plan_views(rig, 0.55, 1.05)
     points = seen_by_both(rig, plan.R_view_a, 0.55, 1.05, 41)
     h = 1e-5 * points[:, 2:]
@@ -211,7 +223,7 @@ def test_with_lenses_and_turns_most_of_the_view_is_as_fine_as_the_finer_camera()
 
 
 def test_half_the_resolution_halves_the_focal_length_the_window_and_the_search() -> None:
-    rig = small_cell().rig
+    rig = small_rig()
     whole, half = plan_views(rig, 0.55, 1.05), plan_views(rig, 0.55, 1.05, resolution=0.5)
 
     assert half.focal_px == pytest.approx(whole.focal_px / 2)
@@ -221,7 +233,7 @@ def test_half_the_resolution_halves_the_focal_length_the_window_and_the_search()
 
 @pytest.mark.parametrize("direction_deg", DIRECTIONS_DEG)
 def test_up_in_camera_a_stays_up_in_the_depth_map_whichever_way_the_baseline_runs(direction_deg: int) -> None:
-    plan = plan_views(small_cell(direction_deg).rig, 0.55, 1.05)
+    plan = plan_views(small_rig(direction_deg), 0.55, 1.05)
 
     up = plan.T_a_view[:3, :3].T @ [0, -1, 0]
 
@@ -303,13 +315,13 @@ def test_the_refusal_gives_the_angle_by_which_the_baseline_misses_the_field_of_v
 )
 def test_distances_that_are_no_range_are_refused_with_both_of_them(near: float, far: float) -> None:
     with pytest.raises(VolumeError, match=re.escape(f"near {near} m, far {far} m; expected 0 < near < far")):
-        plan_views(small_cell().rig, near, far)
+        plan_views(small_rig(), near, far)
 
 
 @pytest.mark.parametrize("resolution", [0.0, -1.0, 0.01, 5.0, np.nan])
 def test_a_resolution_out_of_bounds_is_refused(resolution: float) -> None:
     with pytest.raises(VolumeError, match=re.escape(f"resolution {resolution}; expected 0.05 to 4")):
-        plan_views(small_cell().rig, 0.5, 1.0, resolution=resolution)
+        plan_views(small_rig(), 0.5, 1.0, resolution=resolution)
 
 
 NO_COMMON_VIEW = {
@@ -361,7 +373,7 @@ def test_views_stretched_out_of_proportion_are_refused_with_their_size() -> None
 
 
 def test_maps_mark_as_seen_exactly_what_the_reference_projection_puts_inside_the_picture() -> None:
-    rig = small_cell().rig
+    rig = small_rig()
     plan = plan_views(rig, 0.55, 1.05)
     maps = build_maps(rig.b, plan.R_view_b, plan, plan.principal_b)
 
@@ -397,7 +409,7 @@ def test_a_strong_barrel_lens_does_not_fold_a_ghost_of_the_scene_into_the_view()
 
 def test_maps_sample_the_pixel_that_each_direction_falls_on() -> None:
     # A camera whose picture holds its own coordinates: what the map samples is where the point projects.
-    rig = small_cell().rig
+    rig = small_rig()
     plan = plan_views(rig, 0.55, 1.05)
     maps = build_maps(rig.a, plan.R_view_a, plan, plan.principal_a)
     y, x = np.mgrid[: rig.a.height, : rig.a.width].astype(np.float32)

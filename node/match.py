@@ -47,7 +47,7 @@ refinement against the start. Best of 10, 30, 100 and 300 on the re-imaged Motor
 _ROUNDING_VARIANCE = 1.0 / 6.0
 """Grey levels squared: two pictures rounded to whole levels, 1/12 each."""
 
-_BLANK_FACTOR = 4.0
+_BLANK_FACTOR = 10.0
 """Where the two pictures' difference has more than this many times the energy of B's own, B shows nothing there."""
 
 LARGEST_SIGMA_PX = 3.0

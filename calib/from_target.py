@@ -19,7 +19,7 @@ from .camera import Camera, FloatArray
 from .epipolar import rig_epipolar_distances_px
 from .errors import CalibrationError
 from .rig import Rig
-from .targets import Chessboard
+from .targets import Board, Sighting, Target
 
 FEWEST_VIEWS = 3
 """Zhang (2000), section 3.1: with three views or more, all intrinsic parameters have one solution."""
@@ -31,6 +31,9 @@ _GOOD_TILT_DEG = 20.0
 _OUTLYING_VIEW = 2.5
 """Limits of the warnings: common practice, no source."""
 
+_FEWEST_POINTS = 6
+"""Points that a view must share between both cameras to say anything of the pose."""
+
 _NO_POSE = 5.0
 """How many times worse than each camera alone a pair may fit before it is no pair: far above a knock or a blur."""
 
@@ -41,20 +44,23 @@ _STOP = (cv2.TERM_CRITERIA_EPS | cv2.TERM_CRITERIA_COUNT, 200, 1e-9)
 
 @dataclass(frozen=True, eq=False, kw_only=True)
 class View:
-    """What both cameras saw of the target in one pair.
+    """What both cameras saw of one board in one pair.
 
     Attributes
     ----------
     name_a, name_b : str
         File names, for messages.
-    corners_a, corners_b : ndarray of shape (N, 2) or None
-        Pixels in the order of the target's points; None where the target was not found.
+    seen_a, seen_b : Sighting or None
+        None where the board was not found.
+    board : int
+        Which of the target's boards.
     """
 
     name_a: str
     name_b: str
-    corners_a: FloatArray | None
-    corners_b: FloatArray | None
+    seen_a: Sighting | None
+    seen_b: Sighting | None
+    board: int = 0
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -110,7 +116,7 @@ class CalibrationResult:
 
 
 def calibrate_pair(
-    target: Chessboard,
+    target: Target,
     views: Sequence[View],
     size_a: tuple[int, int],
     size_b: tuple[int, int],
@@ -121,7 +127,7 @@ def calibrate_pair(
 
     Parameters
     ----------
-    target : Chessboard
+    target : Target
     views : sequence of View
         Views that only one camera sees still serve its intrinsics.
     size_a, size_b : (width, height)
@@ -136,41 +142,62 @@ def calibrate_pair(
     """
     if coefficients not in _COEFFICIENTS:
         raise CalibrationError(f"{coefficients} lens coefficients; expected {' or '.join(map(str, _COEFFICIENTS))}")
-    seen_a = {v.name_a: v.corners_a for v in views if v.corners_a is not None}
-    seen_b = {v.name_b: v.corners_b for v in views if v.corners_b is not None}
-    _require(len(seen_a), len(views), "camera A", target)
-    _require(len(seen_b), len(views), "camera B", target)
-    both = [(v, v.corners_a, v.corners_b) for v in views if v.corners_a is not None and v.corners_b is not None]
-    _require(len(both), len(views), "both cameras at once", target)
-    fit_a = _fit_camera(target, seen_a, size_a, coefficients)
-    fit_b = _fit_camera(target, seen_b, size_b, coefficients)
-    corners_a = [a for _, a, _ in both]
-    corners_b = _same_numbering(target, fit_a.camera, fit_b.camera, corners_a, [b for _, _, b in both])
-    views_of_both = corners_a, corners_b
+    fits = []
+    for name, size in (("a", size_a), ("b", size_b)):
+        seen = [_Seen.of(target, view, name) for view in views if getattr(view, f"seen_{name}") is not None]
+        _require(len(seen), len(views), f"camera {name.upper()}", target)
+        fits.append(_fit_camera(seen, size, coefficients))
+    fit_a, fit_b = fits
+    both = [view for view in views if view.seen_a is not None and view.seen_b is not None]
+    pairs = _common(target, fit_a.camera, fit_b.camera, both)
+    _require(len(pairs), len(views), "both cameras at once", target)
     lens = _lens_flags(coefficients)
-    held, held_rms = _solve_pose(target, fit_a.camera, fit_b.camera, *views_of_both, lens | cv2.CALIB_FIX_INTRINSIC)
+    held, held_rms = _solve_pose(fit_a.camera, fit_b.camera, pairs, lens | cv2.CALIB_FIX_INTRINSIC)
     _refuse_unlike_pairs(max(fit_a.rms_px, fit_b.rms_px), held_rms, held)
-    together = lens | cv2.CALIB_USE_INTRINSIC_GUESS
-    rig, rms = _solve_pose(target, fit_a.camera, fit_b.camera, *views_of_both, together)
-    refuse_folding_lens("A", rig.a, corners_a)
-    refuse_folding_lens("B", rig.b, corners_b)
-    distances = [rig_epipolar_distances_px(rig, a, b) for a, b in zip(corners_a, corners_b, strict=True)]
+    rig, rms = _solve_pose(fit_a.camera, fit_b.camera, pairs, lens | cv2.CALIB_USE_INTRINSIC_GUESS)
+    refuse_folding_lens("A", rig.a, [pair.pixels_a for pair in pairs])
+    refuse_folding_lens("B", rig.b, [pair.pixels_b for pair in pairs])
+    distances = [rig_epipolar_distances_px(rig, pair.pixels_a, pair.pixels_b) for pair in pairs]
     whole = np.concatenate(distances)
     result = CalibrationResult(
         rig=rig,
         a=fit_a,
         b=fit_b,
-        pairs=len(both),
+        pairs=len(pairs),
         rms_px=rms,
         epipolar_median_px=float(np.median(whole)),
         epipolar_95_px=float(np.percentile(whole, 95)),
         warnings=(),
     )
-    worst = {f"{v.name_a} with {v.name_b}": float(np.median(d)) for (v, _, _), d in zip(both, distances, strict=True)}
-    return _with_warnings(result, worst)
+    medians = {pair.name: float(np.median(d)) for pair, d in zip(pairs, distances, strict=True)}
+    return _with_warnings(result, medians)
 
 
-def _require(count: int, looked: int, who: str, target: Chessboard) -> None:
+@dataclass(frozen=True, eq=False)
+class _Seen:
+    """Points of one board and where one camera saw them."""
+
+    name: str
+    points: FloatArray
+    pixels: FloatArray
+
+    @classmethod
+    def of(cls, target: Target, view: View, camera: str) -> _Seen:
+        seen: Sighting = getattr(view, f"seen_{camera}")
+        return cls(getattr(view, f"name_{camera}"), target.boards[view.board].points[seen.ids], seen.pixels)
+
+
+@dataclass(frozen=True, eq=False)
+class _Pair:
+    """Points of one board that both cameras saw."""
+
+    name: str
+    points: FloatArray
+    pixels_a: FloatArray
+    pixels_b: FloatArray
+
+
+def _require(count: int, looked: int, who: str, target: Target) -> None:
     if count < FEWEST_VIEWS:
         found = "in no view" if count == 0 else f"in {count} view{'s' if count > 1 else ''}"
         raise CalibrationError(
@@ -179,42 +206,35 @@ def _require(count: int, looked: int, who: str, target: Chessboard) -> None:
         )
 
 
-def _fit_camera(target: Chessboard, seen: dict[str, FloatArray], size: tuple[int, int], coefficients: int) -> CameraFit:
-    points = [_single(target.points)] * len(seen)
-    corners = [_single(view) for view in seen.values()]
+def _fit_camera(views: Sequence[_Seen], size: tuple[int, int], coefficients: int) -> CameraFit:
+    points = [_single(view.points) for view in views]
+    corners = [_single(view.pixels) for view in views]
     try:
         rms, K, distortion, turns, _, _, _, per_view = cv2.calibrateCameraExtended(
             points, corners, size, np.eye(3), np.zeros(coefficients), flags=_lens_flags(coefficients), criteria=_STOP
         )
     except cv2.error as exc:
         raise CalibrationError(
-            f"the {len(seen)} views do not settle the camera ({exc.err}); expected views from different sides and distances"
+            f"the {len(views)} views do not settle the camera ({exc.err}); expected views from different sides and distances"
         ) from exc
     normals = np.array([cv2.Rodrigues(turn)[0][:, 2] for turn in turns])
     return CameraFit(
         camera=_camera(K, distortion, size, coefficients),
         rms_px=float(rms),
-        view_rms_px=dict(zip(seen, map(float, np.ravel(per_view)), strict=True)),
-        coverage=_coverage(list(seen.values()), size),
+        view_rms_px=dict(zip([view.name for view in views], map(float, np.ravel(per_view)), strict=True)),
+        coverage=_coverage([view.pixels for view in views], size),
         tilt_deg=float(np.rad2deg(np.arccos(np.clip(np.abs(normals[:, 2]), 0, 1)).max())),
     )
 
 
-def _solve_pose(
-    target: Chessboard,
-    a: Camera,
-    b: Camera,
-    corners_a: Sequence[FloatArray],
-    corners_b: Sequence[FloatArray],
-    flags: int,
-) -> tuple[Rig, float]:
+def _solve_pose(a: Camera, b: Camera, pairs: Sequence[_Pair], flags: int) -> tuple[Rig, float]:
     """Find the pose with both cameras held as they are, or refine all together from there, as the flags say."""
     lenses = [np.array(camera.distortion) for camera in (a, b)]
     try:
         rms, K_a, lens_a, K_b, lens_b, R, t, _, _ = cv2.stereoCalibrate(
-            [_single(target.points)] * len(corners_a),
-            [_single(view) for view in corners_a],
-            [_single(view) for view in corners_b],
+            [_single(pair.points) for pair in pairs],
+            [_single(pair.pixels_a) for pair in pairs],
+            [_single(pair.pixels_b) for pair in pairs],
             np.array(a.K),
             lenses[0],
             np.array(b.K),
@@ -225,7 +245,7 @@ def _solve_pose(
         )
     except cv2.error as exc:
         raise CalibrationError(
-            f"the {len(corners_a)} common views do not settle the pose ({exc.err}); expected views from different sides"
+            f"the {len(pairs)} common views do not settle the pose ({exc.err}); expected views from different sides"
         ) from exc
     found_a = _camera(K_a, lens_a, a.size, a.distortion.size)
     found_b = _camera(K_b, lens_b, b.size, b.distortion.size)
@@ -268,31 +288,44 @@ def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]
         )
 
 
-def _same_numbering(
-    target: Chessboard, a: Camera, b: Camera, corners_a: Sequence[FloatArray], corners_b: Sequence[FloatArray]
-) -> list[FloatArray]:
-    """Give B's corners A's numbering where a turned board looks the same: B's pose must agree in all views."""
-    if len(target.numberings) == 1:
-        return list(corners_b)
+def _common(target: Target, a: Camera, b: Camera, views: Sequence[View]) -> list[_Pair]:
+    """Pair the points that both cameras saw, with B's numbered as A's where a turned board looks the same."""
+    pairs: list[_Pair] = []
+    for number, board in enumerate(target.boards):
+        seen = [(v, v.seen_a, v.seen_b) for v in views if v.board == number and v.seen_a and v.seen_b]
+        orders = _orders(board, a, b, [(seen_a, seen_b) for _, seen_a, seen_b in seen])
+        for (view, seen_a, seen_b), order in zip(seen, orders, strict=True):
+            ids, from_a, from_b = np.intersect1d(seen_a.ids, order[seen_b.ids], return_indices=True)
+            if len(ids) >= _FEWEST_POINTS:
+                name = f"{view.name_a} with {view.name_b}"
+                pairs.append(_Pair(name, board.points[ids], seen_a.pixels[from_a], seen_b.pixels[from_b]))
+    return pairs
+
+
+def _orders(board: Board, a: Camera, b: Camera, seen: Sequence[tuple[Sighting, Sighting]]) -> list[NDArray[np.intp]]:
+    """Choose for each view how B's numbers become A's: the pose of B from A must agree in all views."""
+    orders = [np.argsort(numbering) for numbering in board.numberings]
+    if len(orders) == 1 or not seen:
+        return [orders[0]] * len(seen)
     turns = np.array(
         [
             [
-                _target_rotation(target, b, view_b[order]) @ _target_rotation(target, a, view_a).T
-                for order in target.numberings
+                _rotation(board.points[order[seen_b.ids]], seen_b, b) @ _rotation(board.points[seen_a.ids], seen_a, a).T
+                for order in orders
             ]
-            for view_a, view_b in zip(corners_a, corners_b, strict=True)
+            for seen_a, seen_b in seen
         ]
-    )  # (views, numberings, 3, 3): R from A to B as each numbering has it
+    )  # (views, orders, 3, 3): R from A to B as each numbering has it
     candidates = turns.reshape(-1, 3, 3)
     traces = np.einsum("cij,vnij->cvn", candidates, turns)
     angles = np.arccos(np.clip((traces - 1) / 2, -1, 1))  # between a candidate and each view's numberings
     chosen = int(np.argmin(angles.min(axis=2).sum(axis=1)))
-    orders = angles[chosen].argmin(axis=1)
-    return [view[target.numberings[order]] for view, order in zip(corners_b, orders, strict=True)]
+    return [orders[best] for best in angles[chosen].argmin(axis=1)]
 
 
-def _target_rotation(target: Chessboard, camera: Camera, corners: FloatArray) -> FloatArray:
-    found, turn, _ = cv2.solvePnP(target.points, corners, np.array(camera.K), np.array(camera.distortion))
+def _rotation(points: FloatArray, seen: Sighting, camera: Camera) -> FloatArray:
+    """Rotation from the board's frame to the camera's."""
+    found, turn, _ = cv2.solvePnP(points, seen.pixels, np.array(camera.K), np.array(camera.distortion))
     if not found:
         raise CalibrationError(
             "the target's pose in one view cannot be solved; leave out views seen at a grazing angle"

@@ -1,13 +1,14 @@
 """Calibration targets: what they measure, and finding them in images.
 
-A target is named by a line of text, ``chessboard 9x6 30mm``: kind, inner corners along and across, edge of a square.
+A target is one board or several in one scene. It is named by a line of text, ``chessboard 9x6 30mm``: kind, inner
+corners along and across, edge of a square.
 """
 
 from __future__ import annotations
 
 import re
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Protocol
 
 import cv2
 import numpy as np
@@ -25,6 +26,59 @@ _WINDOW_SHARE = 0.3
 corner away (RMS 0.45 px instead of 0.20 on the chessboard pairs of the tests)."""
 
 _WINDOW_PX = (3, 11)
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Sighting:
+    """Points of one board found in one image.
+
+    Attributes
+    ----------
+    ids : ndarray of shape (N,)
+        Which of the board's points they are: rows of ``Board.points``, each at most once.
+    pixels : ndarray of shape (N, 2)
+        Where they were found.
+    """
+
+    ids: NDArray[np.intp]
+    pixels: FloatArray
+
+    def __len__(self) -> int:
+        return len(self.ids)
+
+
+class Board(Protocol):
+    """One rigid board: points that are known, and the means to find them."""
+
+    @property
+    def points(self) -> FloatArray:
+        """All points in the board's frame, shape (M, 3), in metres."""
+
+    @property
+    def numberings(self) -> tuple[NDArray[np.intp], ...]:
+        """Orders in which the same picture could have been numbered; the first changes nothing."""
+
+    def find(self, image: NDArray[Any]) -> Sighting | None:
+        """Find its points in an image of shape (H, W) or (H, W, 3), uint8 or uint16; None where it is not seen."""
+
+
+@dataclass(frozen=True)
+class Target:
+    """One board or several, each of which moves on its own or stands where it stands.
+
+    Parameters
+    ----------
+    boards : tuple of Board
+    """
+
+    boards: tuple[Board, ...]
+
+    def __str__(self) -> str:
+        return " + ".join(map(str, self.boards))
+
+    def find(self, image: NDArray[Any]) -> tuple[Sighting | None, ...]:
+        """Look for every board in an image; one entry a board."""
+        return tuple(board.find(image) for board in self.boards)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -78,7 +132,7 @@ class Chessboard:
         kept = [turn for turn in turns if not (odd and turn == 2) and not (quarter_shows and turn % 2)]
         return tuple(np.rot90(grid, turn).ravel() for turn in kept)
 
-    def find(self, image: NDArray[Any]) -> FloatArray | None:
+    def find(self, image: NDArray[Any]) -> Sighting | None:
         """Find the inner corners to a fraction of a pixel.
 
         Parameters
@@ -87,9 +141,8 @@ class Chessboard:
 
         Returns
         -------
-        ndarray of shape (columns * rows, 2) or None
-            Pixels in the order of ``points``, starting at the end whose first inner square is dark; None where the
-            board is not wholly seen.
+        Sighting or None
+            All corners, starting at the end whose first inner square is dark; None where the board is not wholly seen.
         """
         grey = grey_8_bit(image)
         # Chosen over findChessboardCornersSB by its agreement with the published baseline of the chessboard pairs in
@@ -103,7 +156,8 @@ class Chessboard:
         half = int(np.clip(round(_WINDOW_SHARE * min(steps)), *_WINDOW_PX))
         stop = (cv2.TERM_CRITERIA_EPS | cv2.TERM_CRITERIA_COUNT, 60, 1e-4)
         refined = cv2.cornerSubPix(grey, corners, (half, half), (-1, -1), stop)
-        return self._from_dark_end(grey, refined.reshape(-1, 2).astype(np.float64))
+        pixels = self._from_dark_end(grey, refined.reshape(-1, 2).astype(np.float64))
+        return Sighting(ids=np.arange(len(pixels)), pixels=pixels)
 
     def _from_dark_end(self, grey: NDArray[np.uint8], corners: FloatArray) -> FloatArray:
         """Turn the numbering by a half turn where the square inside the first four corners is the bright one."""
@@ -123,7 +177,7 @@ class Chessboard:
         return corners[quarter] if self.columns == self.rows and self.columns % 2 else corners
 
 
-def parse_target(text: str) -> Chessboard:
+def parse_target(text: str) -> Target:
     """Read a target's name.
 
     Raises
@@ -138,4 +192,5 @@ def parse_target(text: str) -> Chessboard:
             'such as "chessboard 9x6 30mm"'
         )
     columns, rows, edge, unit = match.groups()
-    return Chessboard(columns=int(columns), rows=int(rows), square_m=float(edge) * _UNITS_M[unit.lower()])
+    board = Chessboard(columns=int(columns), rows=int(rows), square_m=float(edge) * _UNITS_M[unit.lower()])
+    return Target((board,))

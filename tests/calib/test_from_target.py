@@ -9,11 +9,12 @@ from scipy.spatial.transform import Rotation
 from skewline.calib import CalibrationError, Camera, Rig
 from skewline.calib.from_target import CalibrationResult, View, calibrate_pair, refuse_folding_lens
 from skewline.calib.images import find_images, read_image
-from skewline.calib.targets import Chessboard, parse_target
+from skewline.calib.targets import Chessboard, Sighting, Target, parse_target
 
 DATA = Path(__file__).parent.parent / "data" / "chessboard-pairs"
 SIZE = (640, 480)
 BOARD = Chessboard(columns=9, rows=6, square_m=0.03)
+TARGET = Target((BOARD,))
 
 # J.-Y. Bouguet, Camera Calibration Toolbox for Matlab, fifth calibration example (stereo), result after global
 # optimisation, with the uncertainties stated there.
@@ -27,14 +28,14 @@ T_UNCERTAINTY_MM = np.array([0.142, 0.11352, 0.49773])
 def real_views() -> list[View]:
     files = zip(find_images(str(DATA / "left*.jpg")), find_images(str(DATA / "right*.jpg")), strict=True)
     return [
-        View(name_a=a.name, name_b=b.name, corners_a=BOARD.find(read_image(a)), corners_b=BOARD.find(read_image(b)))
+        View(name_a=a.name, name_b=b.name, seen_a=BOARD.find(read_image(a)), seen_b=BOARD.find(read_image(b)))
         for a, b in files
     ]
 
 
 @pytest.fixture(scope="module", params=[5, 8])
 def real_result(request: pytest.FixtureRequest, real_views: list[View]) -> CalibrationResult:
-    return calibrate_pair(BOARD, real_views, SIZE, SIZE, coefficients=request.param)
+    return calibrate_pair(TARGET, real_views, SIZE, SIZE, coefficients=request.param)
 
 
 def test_the_pose_of_real_chessboard_pairs_lies_within_the_published_uncertainties(
@@ -58,11 +59,15 @@ def test_real_chessboard_pairs_fit_as_well_as_opencv_alone_fits_them(real_result
 
 
 def test_real_focal_lengths_agree_with_the_published_ones(real_views: list[View]) -> None:
-    result = calibrate_pair(BOARD, real_views, SIZE, SIZE)
+    result = calibrate_pair(TARGET, real_views, SIZE, SIZE)
 
     # Bouguet, as above: left and right focal lengths; his own uncertainties are of a few pixels' third.
     assert np.diag(result.rig.a.K)[:2] == pytest.approx([533.52331, 533.52699], abs=1.0)
     assert np.diag(result.rig.b.K)[:2] == pytest.approx([536.81377, 536.47649], abs=1.0)
+
+
+def whole(pixels: np.ndarray) -> Sighting:
+    return Sighting(ids=np.arange(len(pixels)), pixels=pixels)
 
 
 def projected(rig: Rig, board: Chessboard, count: int, seed: int) -> list[View]:
@@ -76,7 +81,7 @@ def projected(rig: Rig, board: Chessboard, count: int, seed: int) -> list[View]:
         points_a = turn.apply(board.points - middle) + place
         a, b = rig.a.project(points_a), rig.b.project(points_a @ rig.R.T + rig.t)
         if rig.a.contains(a).all() and rig.b.contains(b).all():
-            views.append(View(name_a=f"a{len(views)}", name_b=f"b{len(views)}", corners_a=a, corners_b=b))
+            views.append(View(name_a=f"a{len(views)}", name_b=f"b{len(views)}", seen_a=whole(a), seen_b=whole(b)))
     return views
 
 
@@ -106,7 +111,7 @@ def unlike_rig() -> Rig:
 def test_two_unlike_cameras_come_back_from_exact_corners(unlike_rig: Rig) -> None:
     views = projected(unlike_rig, BOARD, 15, seed=1)
 
-    result = calibrate_pair(BOARD, views, unlike_rig.a.size, unlike_rig.b.size)
+    result = calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size)
 
     assert result.rms_px < 1e-3
     for found, true in ((result.rig.a, unlike_rig.a), (result.rig.b, unlike_rig.b)):
@@ -119,10 +124,10 @@ def test_two_unlike_cameras_come_back_from_exact_corners(unlike_rig: Rig) -> Non
 
 def test_views_that_one_camera_alone_sees_still_serve_it(unlike_rig: Rig) -> None:
     views = projected(unlike_rig, BOARD, 12, seed=2)
-    views[0] = replace(views[0], corners_b=None)
-    views[1] = replace(views[1], corners_a=None)
+    views[0] = replace(views[0], seen_b=None)
+    views[1] = replace(views[1], seen_a=None)
 
-    result = calibrate_pair(BOARD, views, unlike_rig.a.size, unlike_rig.b.size)
+    result = calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size)
 
     assert (len(result.a.view_rms_px), len(result.b.view_rms_px), result.pairs) == (11, 11, 10)
     assert result.rms_px < 1e-3
@@ -136,33 +141,51 @@ def test_boards_that_look_alike_when_turned_are_numbered_by_the_agreement_of_all
     rng = np.random.default_rng(3)
     # What a detector may do to B's corners: start at any end from which the board looks the same.
     views = [
-        replace(view, corners_b=view.corners_b[order])
+        replace(view, seen_b=whole(view.seen_b.pixels[order]))
         for view in projected(unlike_rig, board, 12, seed=4)
-        if view.corners_b is not None
+        if view.seen_b is not None
         for order in [board.numberings[rng.integers(len(board.numberings))]]
     ]
 
-    result = calibrate_pair(board, views, unlike_rig.a.size, unlike_rig.b.size)
+    result = calibrate_pair(Target((board,)), views, unlike_rig.a.size, unlike_rig.b.size)
 
     assert len(board.numberings) > 1
     assert result.rms_px < 1e-3
     assert result.rig.t == pytest.approx(unlike_rig.t, abs=1e-4)
 
 
+def test_points_that_one_camera_alone_sees_of_a_board_are_left_out_of_the_pose(unlike_rig: Rig) -> None:
+    rng = np.random.default_rng(11)
+    views = []
+    for view in projected(unlike_rig, BOARD, 12, seed=12):
+        parts = [rng.permutation(54)[:40] for _ in "ab"]
+        seen = [
+            Sighting(ids=ids, pixels=s.pixels[ids])
+            for ids, s in zip(parts, (view.seen_a, view.seen_b), strict=True)
+            if s
+        ]
+        views.append(replace(view, seen_a=seen[0], seen_b=seen[1]))
+
+    result = calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size)
+
+    assert result.rms_px < 1e-3
+    assert result.rig.t == pytest.approx(unlike_rig.t, abs=1e-4)
+
+
 def test_pairs_in_another_order_are_refused_since_no_pose_fits_them(unlike_rig: Rig) -> None:
     views = projected(unlike_rig, BOARD, 12, seed=5)
-    shifted = [replace(v, corners_b=w.corners_b) for v, w in zip(views, [*views[1:], views[0]], strict=True)]
+    shifted = [replace(v, seen_b=w.seen_b) for v, w in zip(views, [*views[1:], views[0]], strict=True)]
 
     with pytest.raises(CalibrationError, match=r"fits on its own .* no one pose fits .* in the same order for A and B"):
-        calibrate_pair(BOARD, shifted, unlike_rig.a.size, unlike_rig.b.size)
+        calibrate_pair(TARGET, shifted, unlike_rig.a.size, unlike_rig.b.size)
 
 
 def test_a_target_that_moved_a_little_between_the_two_pictures_is_warned_of(unlike_rig: Rig) -> None:
     views = projected(unlike_rig, BOARD, 12, seed=9)
     rng = np.random.default_rng(10)
-    moved = [replace(v, corners_b=v.corners_b + rng.normal(0, 1.5, 2)) for v in views if v.corners_b is not None]
+    moved = [replace(v, seen_b=whole(v.seen_b.pixels + rng.normal(0, 1.5, 2))) for v in views if v.seen_b is not None]
 
-    result = calibrate_pair(BOARD, moved, unlike_rig.a.size, unlike_rig.b.size)
+    result = calibrate_pair(TARGET, moved, unlike_rig.a.size, unlike_rig.b.size)
 
     assert any("was the target still in every pair" in warning for warning in result.warnings)
 
@@ -170,10 +193,10 @@ def test_a_target_that_moved_a_little_between_the_two_pictures_is_warned_of(unli
 def test_one_bad_view_is_named(unlike_rig: Rig) -> None:
     views = projected(unlike_rig, BOARD, 12, seed=6)
     rng = np.random.default_rng(7)
-    assert views[4].corners_a is not None
-    views[4] = replace(views[4], corners_a=views[4].corners_a + rng.normal(0, 3, (54, 2)))
+    assert views[4].seen_a is not None
+    views[4] = replace(views[4], seen_a=whole(views[4].seen_a.pixels + rng.normal(0, 3, (54, 2))))
 
-    result = calibrate_pair(BOARD, views, unlike_rig.a.size, unlike_rig.b.size)
+    result = calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size)
 
     assert any(warning.startswith("a4:") for warning in result.warnings)
 
@@ -185,9 +208,9 @@ def test_few_flat_views_in_the_middle_are_warned_of(unlike_rig: Rig) -> None:
     for number, turn in enumerate(turns):
         points = turn.apply(BOARD.points - middle) + np.array([0.08, 0.02, 1.2])
         a, b = unlike_rig.a.project(points), unlike_rig.b.project(points @ unlike_rig.R.T + unlike_rig.t)
-        views.append(View(name_a=f"a{number}", name_b=f"b{number}", corners_a=a, corners_b=b))
+        views.append(View(name_a=f"a{number}", name_b=f"b{number}", seen_a=whole(a), seen_b=whole(b)))
 
-    result = calibrate_pair(BOARD, views, unlike_rig.a.size, unlike_rig.b.size)
+    result = calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size)
 
     text = "\n".join(result.warnings)
     assert "5 views show the target" in text
@@ -197,14 +220,14 @@ def test_few_flat_views_in_the_middle_are_warned_of(unlike_rig: Rig) -> None:
 
 def test_too_few_views_are_refused_with_their_number_and_the_remedy(unlike_rig: Rig) -> None:
     views = projected(unlike_rig, BOARD, 4, seed=8)
-    blind = [replace(view, corners_b=None) for view in views]
+    blind = [replace(view, seen_b=None) for view in views]
 
     with pytest.raises(CalibrationError, match=r"found in no view of 4 for camera B; expected 3 or more: check"):
-        calibrate_pair(BOARD, blind, unlike_rig.a.size, unlike_rig.b.size)
+        calibrate_pair(TARGET, blind, unlike_rig.a.size, unlike_rig.b.size)
     with pytest.raises(CalibrationError, match=r"found in 2 views of 2 for camera A"):
-        calibrate_pair(BOARD, views[:2], unlike_rig.a.size, unlike_rig.b.size)
+        calibrate_pair(TARGET, views[:2], unlike_rig.a.size, unlike_rig.b.size)
     with pytest.raises(CalibrationError, match="7 lens coefficients; expected 5 or 8"):
-        calibrate_pair(BOARD, views, unlike_rig.a.size, unlike_rig.b.size, coefficients=7)
+        calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size, coefficients=7)
 
 
 def test_a_lens_that_folds_where_corners_were_seen_is_refused_with_the_remedy() -> None:
@@ -229,8 +252,10 @@ def test_a_lens_that_folds_where_corners_were_seen_is_refused_with_the_remedy() 
 def test_a_target_is_read_from_its_name(text: str, columns: int, rows: int, square_m: float) -> None:
     target = parse_target(text)
 
-    assert (target.columns, target.rows) == (columns, rows)
-    assert target.square_m == pytest.approx(square_m)
+    (board,) = target.boards
+    assert isinstance(board, Chessboard)
+    assert (board.columns, board.rows) == (columns, rows)
+    assert board.square_m == pytest.approx(square_m)
     assert parse_target(str(target)) == target
 
 
@@ -254,7 +279,7 @@ def test_corners_start_at_the_same_end_of_the_board_however_the_camera_is_rolled
     assert turned is not None
 
     # A half turn takes pixel (x, y) to (639 - x, 479 - y).
-    assert [639, 479] - turned == pytest.approx(upright, abs=0.05)
+    assert [639, 479] - turned.pixels == pytest.approx(upright.pixels, abs=0.05)
 
 
 def test_corners_are_found_in_colour_and_in_16_bits_where_they_are_in_8_bit_grey() -> None:
@@ -263,7 +288,9 @@ def test_corners_are_found_in_colour_and_in_16_bits_where_they_are_in_8_bit_grey
     assert plain is not None
 
     for image in (np.repeat(grey[..., None], 3, axis=2), grey[..., None], grey.astype(np.uint16) * 16):
-        assert BOARD.find(image) == pytest.approx(plain, abs=0.1)
+        found = BOARD.find(image)
+        assert found is not None
+        assert found.pixels == pytest.approx(plain.pixels, abs=0.1)
 
 
 def test_no_board_is_found_where_there_is_none() -> None:

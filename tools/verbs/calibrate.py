@@ -23,7 +23,7 @@ from ...calib import CalibrationError, Rig
 from ...calib.camera import FloatArray
 from ...calib.from_target import CalibrationResult, CameraFit, View, calibrate_pair
 from ...calib.images import find_images, read_image
-from ...calib.targets import Chessboard, parse_target
+from ...calib.targets import Sighting, Target, parse_target
 
 _DESCRIPTION = "Calibrate two cameras from pairs of images of one target and save the rig."
 
@@ -62,8 +62,9 @@ def run(arguments: argparse.Namespace) -> int:
     looks = _look_at_all(target, [*files_a, *files_b])
     looks_a, looks_b = looks[: len(files_a)], looks[len(files_a) :]
     views = [
-        View(name_a=a.file.name, name_b=b.file.name, corners_a=a.corners, corners_b=b.corners)
+        View(name_a=a.file.name, name_b=b.file.name, seen_a=seen_a, seen_b=seen_b, board=board)
         for a, b in zip(looks_a, looks_b, strict=True)
+        for board, (seen_a, seen_b) in enumerate(zip(a.seen, b.seen, strict=True))
     ]
     result = calibrate_pair(
         target, views, _size_of(looks_a, "A"), _size_of(looks_b, "B"), coefficients=arguments.coefficients
@@ -83,7 +84,7 @@ class _Look:
 
     file: Path
     size: tuple[int, int]
-    corners: FloatArray | None
+    seen: tuple[Sighting | None, ...]
 
 
 def _check_files(files_a: Sequence[Path], files_b: Sequence[Path]) -> None:
@@ -98,12 +99,12 @@ def _check_files(files_a: Sequence[Path], files_b: Sequence[Path]) -> None:
         )
 
 
-def _look(target: Chessboard, file: Path) -> _Look:
+def _look(target: Target, file: Path) -> _Look:
     image = read_image(file)
     return _Look(file, (image.shape[1], image.shape[0]), target.find(image))
 
 
-def _look_at_all(target: Chessboard, files: Sequence[Path]) -> list[_Look]:
+def _look_at_all(target: Target, files: Sequence[Path]) -> list[_Look]:
     """Look for the target in every image, several at a time: OpenCV leaves Python's lock alone meanwhile."""
     columns = (TextColumn("looking for the target"), BarColumn(), MofNCompleteColumn(), TimeElapsedColumn())
     console = Console(stderr=True)
@@ -125,7 +126,7 @@ def _size_of(looks: Sequence[_Look], camera: str) -> tuple[int, int]:
     return first.size
 
 
-def _notes(target: Chessboard, result: CalibrationResult, views: int) -> dict[str, Any]:
+def _notes(target: Target, result: CalibrationResult, views: int) -> dict[str, Any]:
     now = datetime.datetime.now(datetime.UTC)
     return {
         "made": now.isoformat(timespec="seconds"),

@@ -7,9 +7,10 @@ from dataclasses import replace
 import cv2
 import numpy as np
 import pytest
+from scipy import ndimage
 from scipy.spatial.transform import Rotation
 from skewline.calib import Camera, Rig
-from skewline.node import DepthEngine
+from skewline.node import DepthEngine, DepthFrame
 from skewline.node.errors import VolumeError
 from skewline.node.rectify import ViewPlan, build_maps, plan_views
 from skewline.tools.cell import Cell, make_cell, render_pair, true_depth
@@ -239,14 +240,30 @@ def test_up_in_camera_a_stays_up_in_the_depth_map_whichever_way_the_baseline_run
     assert np.rad2deg(np.arctan2(np.hypot(up[0], 0), -up[1])) <= 46
 
 
-@pytest.mark.parametrize("direction_deg", [0, 45, 90, 180, 225, 270])
+ALL_FOUR_TURNS_DEG = (0, 45, 90, 180, 225, 270)
+
+
+@functools.cache
+def workshop_frame(direction_deg: int) -> tuple[np.ndarray, DepthFrame]:
+    cell = small_cell(direction_deg)
+    image_a, image_b = render_pair(cell, np.random.default_rng(4), supersampling=1)
+    engine = DepthEngine(cell.rig, cell.near_m, cell.far_m, matcher="semiglobal")
+    return image_a, engine.compute(image_a, image_b, picture=True)
+
+
+def test_the_directions_tried_need_every_quarter_turn() -> None:
+    turns = {plan_views(small_rig(direction), 0.55, 1.05).quarter_turns for direction in ALL_FOUR_TURNS_DEG}
+
+    assert turns == {0, 1, 2, 3}
+
+
+@pytest.mark.parametrize("direction_deg", ALL_FOUR_TURNS_DEG)
 def test_the_turned_depth_map_agrees_with_the_truth_seen_through_its_own_intrinsics_and_pose(
     direction_deg: int,
 ) -> None:
     # The renderer knows neither rectification nor turns: a wrong K or T_a_view would shift or turn its depth map.
     cell = small_cell(direction_deg)
-    images = render_pair(cell, np.random.default_rng(4), supersampling=1)
-    frame = DepthEngine(cell.rig, cell.near_m, cell.far_m, matcher="semiglobal").compute(*images)
+    frame = workshop_frame(direction_deg)[1]
     height, width = frame.depth.shape
 
     truth = true_depth(cell.scene, frame.K, width, height, cell.T_world_a @ frame.T_a_view)
@@ -259,6 +276,28 @@ def test_the_turned_depth_map_agrees_with_the_truth_seen_through_its_own_intrins
     pixel = truth[known] ** 2 / (frame.K[0, 0] * cell.rig.baseline_m)
     assert np.median(error / pixel) < 0.25
     assert (error < pixel).mean() > 0.85
+
+
+@pytest.mark.parametrize("direction_deg", ALL_FOUR_TURNS_DEG)
+def test_the_turned_picture_shows_what_camera_a_sees_along_each_pixels_ray(direction_deg: int) -> None:
+    # A pixel off in K, or a turn the wrong way round, and the two pictures no longer agree.
+    image_a, frame = workshop_frame(direction_deg)
+    assert frame.picture is not None
+    height, width = frame.picture.shape
+    v, u = np.mgrid[:height, :width].reshape(2, -1)
+    rays = np.linalg.inv(frame.K) @ np.vstack([u, v, np.ones_like(u)])
+    where = small_rig(direction_deg).a.project((frame.T_a_view[:3, :3] @ rays).T)
+    seen = ((where > 0) & (where < np.array(small_rig(direction_deg).a.size) - 1)).all(axis=1)
+    x, y = where[seen].T
+
+    own = ndimage.map_coordinates(image_a.astype(float), [y, x], order=1)
+
+    shown = frame.picture.ravel()[seen].astype(float)
+    inner = (shown > 0) & (shown < 255)  # the scale's ends clip
+    gain, offset = np.polyfit(own[inner], shown[inner], 1)
+    assert seen.mean() > 0.5
+    assert gain > 0
+    assert np.percentile(np.abs(shown - gain * own - offset)[inner], 99) < 3
 
 
 REFUSED = {

@@ -295,7 +295,7 @@ def test_the_turned_picture_shows_what_camera_a_sees_along_each_pixels_ray(direc
     shown = frame.picture.ravel()[seen].astype(float)
     inner = (shown > 0) & (shown < 255)  # the scale's ends clip
     gain, offset = np.polyfit(own[inner], shown[inner], 1)
-    assert seen.mean() > 0.5
+    assert seen.mean() > 0.4  # of an oblique overlap, the window is the box around it
     assert gain > 0
     assert np.percentile(np.abs(shown - gain * own - offset)[inner], 99) < 3
 

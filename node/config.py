@@ -128,16 +128,50 @@ def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig
         Where the file is missing or is no TOML, or a key is missing, unknown or out of range.
     """
     path = Path(path)
-    try:
-        content = tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as exc:
-        raise ConfigError(f"cannot read {path}: {exc.strerror}; expected the node's configuration in TOML") from exc
-    except ValueError as exc:  # of TOML and of UTF-8 alike
-        raise ConfigError(f"{path} is no TOML file: {exc}; mend it there") from exc
+    content = _read_toml(path)
     try:
         return parse_config(content, kinds, path.parent)
     except ConfigError as exc:
         raise ConfigError(f"{path}: {exc}") from exc
+
+
+def _read_toml(path: Path) -> dict[str, Any]:
+    try:
+        return tomllib.loads(path.read_text(encoding="utf-8"))
+    except OSError as exc:
+        raise ConfigError(f"cannot read {path}: {exc.strerror}; expected the node's configuration in TOML") from exc
+    except ValueError as exc:  # of TOML and of UTF-8 alike
+        raise ConfigError(f"{path} is no TOML file: {exc}; mend it there") from exc
+
+
+def load_source(path: str | Path, kinds: Mapping[str, SourceKind]) -> tuple[SourceKind, Struct, Path]:
+    """Read the ``[source]`` table alone, for those who need images before there is a rig.
+
+    Parameters
+    ----------
+    path : path
+        A TOML file; its other tables are not looked at.
+    kinds : mapping of str to SourceKind
+        The sources that ``[source] kind`` may name.
+
+    Returns
+    -------
+    kind, settings, base
+        What opens the source, with which settings, and the folder that relative paths start from.
+
+    Raises
+    ------
+    ConfigError
+        Where the file is missing or is no TOML, or a key of the table is missing, unknown or out of range.
+    """
+    path = Path(path)
+    content = _read_toml(path)
+    table = content.get("source")
+    try:
+        name, settings = _source(table if isinstance(table, dict) else {}, kinds)
+    except ConfigError as exc:
+        raise ConfigError(f"{path}: {exc}") from exc
+    return kinds[name], settings, path.parent
 
 
 def parse_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], base: Path) -> NodeConfig:

@@ -8,7 +8,7 @@ import time
 from collections.abc import Iterator
 from pathlib import Path
 from types import TracebackType
-from typing import TYPE_CHECKING, Annotated, Any, Self
+from typing import TYPE_CHECKING, Annotated, Any, Literal, Self
 
 import numpy as np
 from msgspec import Meta, Struct
@@ -27,6 +27,10 @@ class VirtualSettings(Struct, frozen=True, kw_only=True, forbid_unknown_fields=T
 
     Attributes
     ----------
+    show : {"workshop", "chessboard"}
+        The workshop, or a chessboard (9x6, 30 mm) held at a new place in each pair.
+    hold : int
+        How many times in a row each pair is shown, as when a board is held still.
     frames : int
         How many different pairs to render, over one turn of the moving parts; rendering takes a moment for each.
     rate_hz : float, optional
@@ -39,6 +43,8 @@ class VirtualSettings(Struct, frozen=True, kw_only=True, forbid_unknown_fields=T
         How far camera B is turned in towards A; the rig file must be of a cell with the same yaw.
     """
 
+    show: Literal["workshop", "chessboard"] = "workshop"
+    hold: Annotated[int, Meta(ge=1, le=1000)] = 1
     frames: Annotated[int, Meta(ge=1, le=200)] = 6
     rate_hz: Annotated[float, Meta(gt=0, le=1000)] | None = None
     loop: bool = True
@@ -79,17 +85,21 @@ class VirtualSource:
         images = list(_render(self._settings, stop))
         pace = Pace(self._settings.rate_hz, stop)
         for image_a, image_b in itertools.cycle(images) if self._settings.loop else images:
-            if not pace.wait():
-                return
-            stamp_ns = time.time_ns()
-            yield Pair(StampedImage(image_a, stamp_ns), StampedImage(image_b, stamp_ns))
+            for _ in range(self._settings.hold):
+                if not pace.wait():
+                    return
+                stamp_ns = time.time_ns()
+                yield Pair(StampedImage(image_a, stamp_ns), StampedImage(image_b, stamp_ns))
 
 
 def _render(settings: VirtualSettings, stop: threading.Event) -> Iterator[Images]:
-    from .cell import make_cell, render_pair  # the renderer loads only where it is wanted
+    from .cell import make_cell, render_pair, render_target_views  # the renderer loads only where it is wanted
 
     cell = make_cell(yaw_deg=settings.yaw_deg)
     rng = np.random.default_rng(settings.seed)
+    if settings.show == "chessboard":
+        yield from itertools.takewhile(lambda _: not stop.is_set(), render_target_views(cell, rng, settings.frames))
+        return
     for number in range(settings.frames):
         if stop.is_set():
             return

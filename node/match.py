@@ -47,6 +47,9 @@ refinement against the start. Best of 10, 30, 100 and 300 on the re-imaged Motor
 _ROUNDING_VARIANCE = 1.0 / 6.0
 """Grey levels squared: two pictures rounded to whole levels, 1/12 each."""
 
+_STRIP_ROWS = 128
+"""Rows refined at a time."""
+
 _BLANK_FACTOR = 10.0
 """Where the two pictures' difference has more than this many times the energy of B's own, B shows nothing there."""
 
@@ -224,6 +227,22 @@ def refine(a: Grey, b: Grey, disparity: NDArray[np.int16], settings: MatchSettin
     settings : MatchSettings
         Whose matcher made the disparity.
     """
+    distance = _distance_to_break(disparity)
+    halo = 2 * (settings.refine_px // 2) + _DETREND_PX // 2
+    refined, sigma = np.empty((2, *disparity.shape), dtype=np.float32)
+    for top in range(0, len(disparity), _STRIP_ROWS):
+        # Strips stay in the cache, and their memory is used again; whole images are fetched from the system each time.
+        first, end = max(0, top - halo), top + _STRIP_ROWS + halo
+        strip = _refine_rows(a[first:end], b[first:end], disparity[first:end], distance[first:end], settings)
+        inner = slice(top - first, top - first + _STRIP_ROWS)
+        refined[top : top + _STRIP_ROWS] = strip.disparity[inner]
+        sigma[top : top + _STRIP_ROWS] = strip.sigma[inner]
+    return Match(disparity=refined, sigma=sigma)
+
+
+def _refine_rows(
+    a: Grey, b: Grey, disparity: NDArray[np.int16], distance: NDArray[np.uint8], settings: MatchSettings
+) -> Match:
     matched = disparity >= 0
     width = settings.refine_px
     count = np.maximum(_summed(matched.astype(np.uint8), width), 1)
@@ -239,7 +258,7 @@ def refine(a: Grey, b: Grey, disparity: NDArray[np.int16], settings: MatchSettin
     certainty = _CERTAINTY[settings.matcher]
     sigma = np.sqrt(np.float32(certainty.scale**2) * relative + np.float32(certainty.floor_px**2))
     lost = blank | ~(matched & (sigma <= LARGEST_SIGMA_PX))
-    sigma *= cv2.LUT(_distance_to_break(disparity, matched), certainty.growth())
+    sigma *= cv2.LUT(distance, certainty.growth())
     refined = start - step
     refined[lost] = sigma[lost] = np.nan
     return Match(disparity=refined, sigma=sigma)
@@ -254,10 +273,10 @@ def _minimum(count: FloatImage, gg: FloatImage, gr: FloatImage, rr: FloatImage) 
     return np.clip(step, -_LARGEST_STEP_PX, _LARGEST_STEP_PX), variance / texture
 
 
-def _distance_to_break(disparity: NDArray[np.int16], matched: NDArray[np.bool_]) -> NDArray[np.uint8]:
+def _distance_to_break(disparity: NDArray[np.int16]) -> NDArray[np.uint8]:
     """City-block distance in pixels, at most 255, to where disparity is missing or jumps by more than a pixel."""
     jump = cv2.morphologyEx(disparity, cv2.MORPH_GRADIENT, np.ones((3, 3), np.uint8))
-    whole = (matched & (jump <= FIXED_POINT)).astype(np.uint8)
+    whole = ((disparity >= 0) & (jump <= FIXED_POINT)).astype(np.uint8)
     return cv2.distanceTransform(whole, cv2.DIST_L1, 3, dstType=cv2.CV_8U).astype(np.uint8, copy=False)
 
 

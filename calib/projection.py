@@ -116,9 +116,7 @@ def _bend_by_coefficients(flat: FloatArray, distortion: FloatArray) -> FloatArra
     prism = [np.stack(pair) for pair in ((r2, zero), (r4, zero), (zero, r2), (zero, r4))]
     tilt = [np.stack([zero, zero])] * 2
     columns = [k_upper[0], k_upper[1], p1, p2, k_upper[2], *k_lower, *prism, *tilt]
-    return np.ascontiguousarray(
-        np.stack(columns[: len(distortion)] or [np.empty((2, len(x)))], axis=2).transpose(1, 0, 2)
-    )[:, :, : len(distortion)]
+    return np.array(columns)[: len(distortion)].transpose(2, 1, 0)
 
 
 def _tilted(bent: FloatArray, tau_x: float, tau_y: float) -> tuple[FloatArray, FloatArray, FloatArray]:

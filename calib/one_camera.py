@@ -1,0 +1,234 @@
+"""One camera on its own: a start by OpenCV, then the robust refinement; and where a board stands before a known camera."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from .camera import Camera, FloatArray, LensModel
+from .errors import CalibrationError
+from .projection import camera_from, intrinsics_of
+from .refine import Refined, Seen, State, refine
+
+FEWEST_POINTS = 6
+"""Points of a board that one image must show: six coordinates place the board, the rest says how well."""
+
+_STOP = (cv2.TERM_CRITERIA_EPS | cv2.TERM_CRITERIA_COUNT, 100, 1e-9)
+
+_FLAT = 1e-4
+"""Share of a board's extent by which its points may leave a plane and still start as a flat one."""
+
+
+@dataclass(frozen=True)
+class Lens:
+    """A lens model and its number of coefficients, by the name that people give it."""
+
+    name: str
+    model: LensModel
+    coefficients: int
+
+
+LENSES: Mapping[str, Lens] = {
+    **{f"pinhole {count}": Lens(f"pinhole {count}", "pinhole", count) for count in (4, 5, 8, 12, 14)},
+    "fisheye": Lens("fisheye", "fisheye", 4),
+}
+"""The lens models to choose from, by name."""
+
+
+def lens_named(name: str) -> Lens:
+    """Find a lens model by its name.
+
+    Raises
+    ------
+    CalibrationError
+        Where there is none of that name.
+    """
+    if name not in LENSES:
+        raise CalibrationError(
+            f"lens model is {name!r}; expected one of {', '.join(LENSES)}, or auto to have it chosen"
+        )
+    return LENSES[name]
+
+
+def spans_the_board(points: FloatArray) -> bool:
+    """Tell whether points of a board are enough, and not all in one line, to place it."""
+    if len(points) < FEWEST_POINTS:
+        return False
+    extents = np.linalg.svd(points - points.mean(axis=0), compute_uv=False)
+    return bool(extents[1] > 1e-3 * extents[0])
+
+
+def place_board(points: FloatArray, pixels: FloatArray, camera: Camera) -> FloatArray:
+    """Find where a board stands before a known camera, from one image.
+
+    Parameters
+    ----------
+    points : ndarray of shape (N, 3)
+        In the board's frame, in metres.
+    pixels : ndarray of shape (N, 2)
+    camera : Camera
+
+    Returns
+    -------
+    ndarray of shape (4, 4)
+        ``x_camera = T @ x_board``.
+
+    Raises
+    ------
+    CalibrationError
+        Where the points do not settle it.
+    """
+    flat = camera.undistort(pixels)
+    known = np.isfinite(flat).all(axis=1)
+    if known.sum() < FEWEST_POINTS:
+        raise CalibrationError(
+            f"{int(known.sum())} of a view's {len(points)} points lie where the lens model has rays; expected "
+            f"{FEWEST_POINTS} or more: take another lens model, or leave out views seen at a grazing angle"
+        )
+    try:
+        found, turn, shift = cv2.solvePnP(points[known], flat[known], np.eye(3), np.zeros(0))
+    except cv2.error:
+        found = False
+    if not found or not np.isfinite([turn, shift]).all():
+        raise CalibrationError(
+            "the target's pose in one view cannot be solved; leave out views seen at a grazing angle"
+        )
+    return _transform(turn, shift)
+
+
+def fit_camera(
+    seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int], lens: Lens, held: Camera | None = None
+) -> Refined:
+    """Calibrate one camera on its own.
+
+    Parameters
+    ----------
+    seen : sequence of Seen
+        One a view; their placings are numbered anew in this order.
+    boards : tuple of ndarray of shape (K, 3)
+    size : (width, height)
+    lens : Lens
+    held : Camera, optional
+        Intrinsics that are known and stay; ``lens`` is then not looked at.
+
+    Returns
+    -------
+    Refined
+        Of a single camera.
+
+    Raises
+    ------
+    CalibrationError
+        Where the views do not settle it.
+    """
+    alone = alone_in_order(seen)
+    if held is not None:
+        start = alone_state(held, [place_board(boards[s.board][s.ids], s.pixels, held) for s in seen], boards)
+        return refine(alone, start, held=("a",))
+    start = (_start_fisheye if lens.model == "fisheye" else _start_pinhole)(alone, boards, size)
+    return refine(alone, with_lens(start, lens))
+
+
+def alone_in_order(seen: Sequence[Seen]) -> list[Seen]:
+    """Renumber one camera's images: the only camera, one placing each."""
+    return [replace(s, camera=0, placing=number) for number, s in enumerate(seen)]
+
+
+def with_lens(state: State, lens: Lens) -> State:
+    """Give a single camera's state with as many coefficients as the lens asks for: cut, or new ones at 0."""
+    (camera,) = state.cameras
+    known = intrinsics_of(camera)[: 4 + lens.coefficients]
+    intrinsics = np.concatenate([known, np.zeros(4 + lens.coefficients - len(known))])
+    return replace(state, cameras=(camera_from(intrinsics, camera.size, lens.model),))
+
+
+def alone_state(camera: Camera, placings: Sequence[FloatArray], boards: tuple[FloatArray, ...]) -> State:
+    """Make the state of one camera alone."""
+    owners = np.zeros(len(placings), dtype=np.intp)
+    return State(
+        cameras=(camera,), R=np.eye(3), t=np.zeros(3), placings=np.array(placings), owners=owners, boards=boards
+    )
+
+
+def _start_pinhole(seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]) -> State:
+    points = [boards[s.board][s.ids] for s in seen]
+    flags, K = 0, _guess(size)
+    if not all(_is_flat(p) for p in points):
+        flags = cv2.CALIB_USE_INTRINSIC_GUESS
+    try:
+        _, K, distortion, turns, shifts = cv2.calibrateCamera(
+            [_single(p) for p in points],
+            [_single(s.pixels) for s in seen],
+            size,
+            K,
+            np.zeros(5),
+            flags=flags,
+            criteria=_STOP,
+        )
+    except cv2.error as exc:
+        raise _unsettled(len(seen), exc) from exc
+    return _started(K, np.ravel(distortion)[:5], "pinhole", size, turns, shifts, boards)
+
+
+def _start_fisheye(seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]) -> State:
+    points = [boards[s.board][s.ids].reshape(-1, 1, 3) for s in seen]
+    pixels = [s.pixels.reshape(-1, 1, 2) for s in seen]
+    flags = _fisheye_flag("CALIB_RECOMPUTE_EXTRINSIC") | _fisheye_flag("CALIB_FIX_SKEW")
+    try:
+        _, K, distortion, turns, shifts = cv2.fisheye.calibrate(
+            points, pixels, size, np.eye(3), np.zeros((4, 1)), flags=flags, criteria=_STOP
+        )
+    except cv2.error as exc:
+        raise _unsettled(len(seen), exc) from exc
+    return _started(K, np.ravel(distortion), "fisheye", size, turns, shifts, boards)
+
+
+def _fisheye_flag(name: str) -> int:
+    # In its own name space up to OpenCV 4, in the common one from 5 on, with other numbers.
+    return int(getattr(cv2.fisheye if hasattr(cv2.fisheye, name) else cv2, name))
+
+
+def _started(
+    K: NDArray[Any],
+    distortion: NDArray[Any],
+    model: LensModel,
+    size: tuple[int, int],
+    turns: Sequence[NDArray[Any]],
+    shifts: Sequence[NDArray[Any]],
+    boards: tuple[FloatArray, ...],
+) -> State:
+    intrinsics = np.array([K[0, 0], K[1, 1], K[0, 2], K[1, 2], *distortion])
+    placings = [_transform(turn, shift) for turn, shift in zip(turns, shifts, strict=True)]
+    return alone_state(camera_from(intrinsics, size, model), placings, boards)
+
+
+def _unsettled(views: int, exc: cv2.error) -> CalibrationError:
+    said = exc.err.strip().splitlines()[0] if exc.err else "OpenCV found no solution"
+    return CalibrationError(
+        f"the {views} views do not settle the camera ({said}); expected views from different sides and distances"
+    )
+
+
+def _guess(size: tuple[int, int]) -> FloatArray:
+    focal = float(max(size))
+    return np.array([[focal, 0, (size[0] - 1) / 2], [0, focal, (size[1] - 1) / 2], [0, 0, 1]])
+
+
+def _is_flat(points: FloatArray) -> bool:
+    # OpenCV's start needs the plane to be z = 0.
+    return bool(np.ptp(points[:, 2]) <= _FLAT * np.ptp(points, axis=0).max())
+
+
+def _single(points: FloatArray) -> NDArray[np.float32]:
+    return np.ascontiguousarray(points, dtype=np.float32)
+
+
+def _transform(turn: NDArray[Any], shift: NDArray[Any]) -> FloatArray:
+    T = np.eye(4)
+    T[:3, :3], T[:3, 3] = cv2.Rodrigues(np.asarray(turn, dtype=np.float64))[0], np.ravel(shift)
+    return T

@@ -16,7 +16,7 @@ from skewline.calib.result import (
     ViewFit,
 )
 
-NOISE_PX = 0.12
+NOISE_PX = 0.08
 COEFFICIENTS = ("k1", "k2", "p1", "p2", "k3")
 CAMERA_NAMES = ("fx", "fy", "cx", "cy", *COEFFICIENTS)
 NAMES = (
@@ -121,7 +121,7 @@ def camera_fit(camera: Camera, fits: list[ViewFit], coverage: float) -> CameraFi
 
 
 def make_result(
-    *, views: int = 14, held_out: int = 3, noise_px: float = NOISE_PX, seed: int = 7, coverage: float = 0.9
+    *, views: int = 16, held_out: int = 3, noise_px: float = NOISE_PX, seed: int = 7, coverage: float = 0.9
 ) -> CalibrationResult:
     """Make a result as good as the figures given; the last ``held_out`` of the views are held out."""
     rig = bench_rig()
@@ -168,7 +168,7 @@ def make_result(
         noise_px=noise_px,
         parameters=Parameters(names=NAMES, values=values_of(rig), covariance=covariance),
         views=tuple(fits),
-        set_aside=(SetAside(name="a15.png with b15.png", reason="blurred: hold the board still <before> the shot"),),
+        set_aside=(SetAside(name="a17.png with b17.png", reason="blurred: hold the board still <before> the shot"),),
         held_out=HeldOut(
             pairs=held_out,
             rms_px=float(np.sqrt((unused**2).sum(axis=1).mean())),

@@ -15,7 +15,6 @@ import cv2
 import numpy as np
 
 from .camera import Camera, FloatArray
-from .epipolar import meet_rays
 from .errors import CalibrationError
 from .result import CalibrationResult
 from .rig import Rig
@@ -27,8 +26,11 @@ POSE_NAMES = ("pose.rx", "pose.ry", "pose.rz", "pose.tx", "pose.ty", "pose.tz")
 """The order of ``Rig.covariance``."""
 
 _K_ENTRIES = {"fx": (0, 0), "fy": (1, 1), "cx": (0, 2), "cy": (1, 2)}
-_PINHOLE = ("k1", "k2", "p1", "p2", "k3", "k4", "k5", "k6", "s1", "s2", "s3", "s4", "tx", "ty")
-_FISHEYE = ("k1", "k2", "k3", "k4")
+COEFFICIENTS = {
+    "pinhole": ("k1", "k2", "p1", "p2", "k3", "k4", "k5", "k6", "s1", "s2", "s3", "s4", "tx", "ty"),
+    "fisheye": ("k1", "k2", "k3", "k4"),
+}
+"""Names of the lens coefficients, in the order in which a camera keeps them."""
 
 _STEP = 0.1
 """Share of a standard deviation by which the numerical derivative moves: far from rounding, near enough to straight."""
@@ -109,6 +111,29 @@ def depth_axis(rig: Rig) -> FloatArray:
     return unit
 
 
+def points_from_disparity(rig: Rig, pixels_a: FloatArray, pixels_b: FloatArray) -> FloatArray:
+    """Find the points on A's rays whose disparity, in the rectified views, is that of the matched pixels.
+
+    As the node does it: what lies across the epipolar line is not looked at.
+
+    Parameters
+    ----------
+    rig : Rig
+    pixels_a, pixels_b : ndarray of shape (N, 2)
+
+    Returns
+    -------
+    ndarray of shape (N, 3)
+        In camera A's frame, in metres; NaN where a pixel has no ray.
+    """
+    along, axis = rig.centre_b / rig.baseline_m, depth_axis(rig)
+    rays_a, rays_b = rig.a.rays(pixels_a), rig.b.rays(pixels_b) @ rig.R
+    flat_a = rays_a / (rays_a @ axis)[:, None]
+    disparity = flat_a @ along - (rays_b @ along) / (rays_b @ axis)
+    points: FloatArray = flat_a * (rig.baseline_m / disparity)[:, None]
+    return points
+
+
 def moved_rig(rig: Rig, changes: Mapping[str, float]) -> Rig:
     """Give the rig with parameters moved by small amounts.
 
@@ -148,7 +173,7 @@ def _moved_camera(camera: Camera, changes: Mapping[str, float]) -> Camera:
     if not changes:
         return camera
     K, distortion = np.array(camera.K), np.array(camera.distortion)
-    coefficients = (_FISHEYE if camera.model == "fisheye" else _PINHOLE)[: len(distortion)]
+    coefficients = COEFFICIENTS[camera.model][: len(distortion)]
     for name, change in changes.items():
         if name in _K_ENTRIES:
             K[_K_ENTRIES[name]] += change
@@ -165,7 +190,7 @@ def _moved_camera(camera: Camera, changes: Mapping[str, float]) -> Camera:
 def depth_sigma_from_calibration(source: Rig | CalibrationResult, points_a: FloatArray) -> FloatArray:
     """Propagate the parameters' covariance to the depth of points.
 
-    Each point is projected by the rig as it is and met again by rigs whose parameters were moved: the linear
+    Each point is projected by the rig as it is and found again by rigs whose parameters were moved: the linear
     propagation ``J C J^T``, taken along the eigenvectors of the correlation matrix so that parameters that trade against
     each other move together.
 
@@ -193,7 +218,7 @@ def depth_sigma_from_calibration(source: Rig | CalibrationResult, points_a: Floa
     for direction in _principal_steps(covariance):
         step = dict(zip(names, direction * _STEP, strict=True))
         back = {name: -value for name, value in step.items()}
-        depths = [meet_rays(moved_rig(rig, by), pixels_a, pixels_b).points_a @ axis for by in (step, back)]
+        depths = [points_from_disparity(moved_rig(rig, by), pixels_a, pixels_b) @ axis for by in (step, back)]
         variance += ((depths[0] - depths[1]) / (2 * _STEP)) ** 2
     sigma: FloatArray = np.sqrt(np.where(np.isfinite(pixels_a + pixels_b).all(axis=1), variance, np.nan))
     return sigma

@@ -1,45 +1,40 @@
 """Intrinsics of both cameras and the pose between them from views of a target.
 
-OpenCV's solvers (Zhang, "A Flexible New Technique for Camera Calibration", 2000) find each camera's intrinsics, then one
-joint refinement of both cameras and the pose settles everything together. Chosen by measurement: on the chessboard
-pairs of the tests the joint solution lies within 0.4 of the published uncertainties, with held intrinsics within 0.9.
+OpenCV's solvers (Zhang, "A Flexible New Technique for Camera Calibration", 2000) give each camera a start, a robust
+refinement settles it alone, and a joint one settles both, the pose and all placings of the boards. Chosen by measurement:
+on the chessboard pairs of the tests the joint solution lies within 0.4 of the published uncertainties, with held
+intrinsics within 0.9.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
-from typing import Any
+from collections.abc import Collection, Sequence
+from dataclasses import dataclass, replace
 
-import cv2
 import numpy as np
-from numpy.typing import NDArray
 
+from .advice import Account, careful_warnings, refuse_folding_lens, refuse_unlike_pairs, refuse_unsettled
+from .bundle import Seen, State
 from .camera import Camera, FloatArray
-from .epipolar import rig_epipolar_distances_px
 from .errors import CalibrationError
+from .judge import choose_held_out, judge_held_out, pair_distances, view_fit
+from .lens_choice import choose_lens
+from .numbering import Pair, agreed_pose, number_alike, pairs_of
+from .one_camera import FEWEST_POINTS, fit_camera, lens_named, place_board, spans_the_board
+from .refine import Refined, refine, rms
+from .result import CalibrationResult, CameraFit, ModelTrial, Parameters, SetAside, ViewFit
 from .rig import Rig
-from .targets import Board, Sighting, Target
+from .set_aside import outlying
+from .targets import Sighting, Target
 
 FEWEST_VIEWS = 3
 """Zhang (2000), section 3.1: with three views or more, all intrinsic parameters have one solution."""
 
-_ENOUGH_VIEWS = 10
-_GOOD_RMS_PX = 0.5
-_GOOD_COVERAGE = 0.6
-_GOOD_TILT_DEG = 20.0
-_OUTLYING_VIEW = 2.5
-"""Limits of the warnings: common practice, no source."""
-
-_FEWEST_POINTS = 6
-"""Points that a view must share between both cameras to say anything of the pose."""
-
-_NO_POSE = 5.0
-"""How many times worse than each camera alone a pair may fit before it is no pair: far above a knock or a blur."""
-
 _COVERAGE_GRID = (8, 6)
-_COEFFICIENTS = (5, 8)
-_STOP = (cv2.TERM_CRITERIA_EPS | cv2.TERM_CRITERIA_COUNT, 200, 1e-9)
+_ROUNDS = 3
+"""How often bad views are set aside and the rest solved again."""
+
+AUTO = "auto"
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -63,65 +58,20 @@ class View:
     board: int = 0
 
 
-@dataclass(frozen=True, eq=False, kw_only=True)
-class CameraFit:
-    """One camera's share of the result.
-
-    Attributes
-    ----------
-    camera : Camera
-    rms_px : float
-        Root mean square reprojection error over all its views, in pixels, of the camera on its own.
-    view_rms_px : mapping of str to float
-        The same for each view by its name.
-    coverage : float
-        Share of an 8x6 grid over the image in which a corner was seen.
-    tilt_deg : float
-        Largest angle between the target's normal and the optical axis, over all views.
-    """
-
-    camera: Camera
-    rms_px: float
-    view_rms_px: dict[str, float]
-    coverage: float
-    tilt_deg: float
-
-
-@dataclass(frozen=True, eq=False, kw_only=True)
-class CalibrationResult:
-    """A rig and how good it is.
-
-    Attributes
-    ----------
-    rig : Rig
-    a, b : CameraFit
-    pairs : int
-        Views in which both cameras saw the target.
-    rms_px : float
-        Root mean square reprojection error of the joint solution, in pixels.
-    epipolar_median_px, epipolar_95_px : float
-        Median and 95th percentile of the epipolar distances of all corners, in pixels.
-    warnings : tuple of str
-        What a careful person would look at before trusting this.
-    """
-
-    rig: Rig
-    a: CameraFit
-    b: CameraFit
-    pairs: int
-    rms_px: float
-    epipolar_median_px: float
-    epipolar_95_px: float
-    warnings: tuple[str, ...]
-
-
 def calibrate_pair(
     target: Target,
     views: Sequence[View],
     size_a: tuple[int, int],
     size_b: tuple[int, int],
     *,
-    coefficients: int = 5,
+    model: str = "pinhole 5",
+    model_a: str | None = None,
+    model_b: str | None = None,
+    intrinsics_a: Camera | None = None,
+    intrinsics_b: Camera | None = None,
+    held_out: float | Collection[str] = 0.0,
+    baseline_m: float | None = None,
+    board_shape: bool = False,
 ) -> CalibrationResult:
     """Calibrate two cameras and the pose between them.
 
@@ -129,72 +79,135 @@ def calibrate_pair(
     ----------
     target : Target
     views : sequence of View
-        Views that only one camera sees still serve its intrinsics.
+        In the order they were taken. Views that only one camera sees still serve its intrinsics.
     size_a, size_b : (width, height)
         Image sizes in pixels.
-    coefficients : {5, 8}
-        Lens coefficients of the pinhole model.
+    model : str
+        Lens model of both cameras: ``pinhole 4``, ``pinhole 5``, ``pinhole 8``, ``pinhole 12``, ``pinhole 14``, ``fisheye``,
+        or ``auto`` to have each camera's chosen by its error in views held out in turn.
+    model_a, model_b : str, optional
+        The model of one camera, where it is another.
+    intrinsics_a, intrinsics_b : Camera, optional
+        Known intrinsics, which are held; the model of that camera is then its own.
+    held_out : float or collection of str
+        Share of the pairs, up to 0.5, or the names of the images to keep out of the solve and judge the rig by.
+    baseline_m : float, optional
+        The baseline as measured otherwise, to check the scale by.
+    board_shape : bool
+        Refine the boards' points too, for boards that are bent or printed unevenly; takes many views.
+
+    Returns
+    -------
+    CalibrationResult
 
     Raises
     ------
     CalibrationError
-        Where too few views show the target, or the views do not settle the parameters.
+        Where too few views show the target, the views do not settle the parameters, no one pose fits them, or an option is
+        out of its range.
     """
-    if coefficients not in _COEFFICIENTS:
-        raise CalibrationError(f"{coefficients} lens coefficients; expected {' or '.join(map(str, _COEFFICIENTS))}")
-    fits = []
-    for name, size in (("a", size_a), ("b", size_b)):
-        seen = [_Seen.of(target, view, name) for view in views if getattr(view, f"seen_{name}") is not None]
-        _require(len(seen), len(views), f"camera {name.upper()}", target)
-        fits.append(_fit_camera(seen, size, coefficients))
-    fit_a, fit_b = fits
-    both = [view for view in views if view.seen_a is not None and view.seen_b is not None]
-    pairs = _common(target, fit_a.camera, fit_b.camera, both)
-    _require(len(pairs), len(views), "both cameras at once", target)
-    lens = _lens_flags(coefficients)
-    held, held_rms = _solve_pose(fit_a.camera, fit_b.camera, pairs, lens | cv2.CALIB_FIX_INTRINSIC)
-    _refuse_unlike_pairs(max(fit_a.rms_px, fit_b.rms_px), held_rms, held)
-    rig, rms = _solve_pose(fit_a.camera, fit_b.camera, pairs, lens | cv2.CALIB_USE_INTRINSIC_GUESS)
-    refuse_folding_lens("A", rig.a, [pair.pixels_a for pair in pairs])
-    refuse_folding_lens("B", rig.b, [pair.pixels_b for pair in pairs])
-    distances = [rig_epipolar_distances_px(rig, pair.pixels_a, pair.pixels_b) for pair in pairs]
-    whole = np.concatenate(distances)
+    usable, unused = _usable(target, views)
+    complete = [view.seen_a is not None and view.seen_b is not None for view in views]
+    apart = choose_held_out([(view.name_a, view.name_b) for view in views], complete, held_out)
+    boards = tuple(board.points for board in target.boards)
+    alones: list[_Alone] = []
+    for letter, size, lens, held in (
+        ("a", size_a, model_a or model, intrinsics_a),
+        ("b", size_b, model_b or model, intrinsics_b),
+    ):
+        seen = [s for s in usable if s.camera == "ab".index(letter) and s.placing not in apart]
+        _require(len(seen), len(views) - len(apart), f"camera {letter.upper()}", target)
+        alones.append(_fit_alone(letter, seen, boards, _checked(letter, held, size), lens, held))
+    cameras = (alones[0].camera, alones[1].camera)
+    numbered = _numbered(target, cameras, usable)
+    kept = {(camera, s.placing) for camera, alone in enumerate(alones) for s in alone.seen}
+    used = [s for s in numbered if (s.camera, s.placing) in kept]
+    joint = _solve_jointly(target, views, used, boards, (alones[0], alones[1]), board_shape)
+    rig = _rig(joint.fit)
+    for letter, camera in (("A", rig.a), ("B", rig.b)):
+        refuse_folding_lens(letter, camera, [s.pixels for s in joint.seen if "AB"[s.camera] == letter])
+        refuse_unsettled(letter, joint.fit, "AB".index(letter))
+    out = judge_held_out([s for s in numbered if s.placing in apart], joint.fit.state)
+    fits = [_camera_fit(joint, alone, camera) for camera, alone in enumerate(alones)]
+    distances = {name: pair_distances(rig, pair) for name, pair in joint.named_pairs(views)}
+    whole = np.concatenate(list(distances.values()))
     result = CalibrationResult(
         rig=rig,
-        a=fit_a,
-        b=fit_b,
-        pairs=len(pairs),
-        rms_px=rms,
+        a=fits[0],
+        b=fits[1],
+        pairs=len(joint.pairs),
+        rms_px=joint.fit.rms_px,
         epipolar_median_px=float(np.median(whole)),
         epipolar_95_px=float(np.percentile(whole, 95)),
+        noise_px=float(np.sqrt(np.mean(np.square(joint.fit.noise_px)))),
+        parameters=Parameters(names=joint.fit.names, values=joint.fit.values, covariance=joint.fit.covariance),
+        views=(*_view_fits(joint), *out.views),
+        set_aside=(*unused, *alones[0].aside, *alones[1].aside, *joint.aside, *out.set_aside),
+        held_out=out.figures,
+        trials=(*alones[0].trials, *alones[1].trials),
         warnings=(),
     )
-    medians = {pair.name: float(np.median(d)) for pair, d in zip(pairs, distances, strict=True)}
-    return _with_warnings(result, medians)
+    account = Account(
+        result=result,
+        epipolar_px={name: float(np.median(d)) for name, d in distances.items()},
+        alone=tuple((alone.seen, alone.fit) for alone in alones),
+        baseline_m=baseline_m,
+    )
+    return replace(result, warnings=careful_warnings(account))
 
 
-@dataclass(frozen=True, eq=False)
-class _Seen:
-    """Points of one board and where one camera saw them."""
+@dataclass(frozen=True, eq=False, kw_only=True)
+class _Alone:
+    """One camera's solution on its own."""
 
-    name: str
-    points: FloatArray
-    pixels: FloatArray
+    seen: tuple[Seen, ...]
+    fit: Refined
+    held: bool
+    trials: tuple[ModelTrial, ...]
+    aside: tuple[SetAside, ...]
 
-    @classmethod
-    def of(cls, target: Target, view: View, camera: str) -> _Seen:
-        seen: Sighting = getattr(view, f"seen_{camera}")
-        return cls(getattr(view, f"name_{camera}"), target.boards[view.board].points[seen.ids], seen.pixels)
+    @property
+    def camera(self) -> Camera:
+        return self.fit.state.cameras[0]
+
+    @property
+    def view_rms_px(self) -> dict[str, float]:
+        return _rms_by_name(self.seen, self.fit.residuals_px)
 
 
-@dataclass(frozen=True, eq=False)
-class _Pair:
-    """Points of one board that both cameras saw."""
+@dataclass(frozen=True, eq=False, kw_only=True)
+class _Joint:
+    """Both cameras' solution; the placings of ``seen`` are views, those of ``solved`` the solution's own."""
 
-    name: str
-    points: FloatArray
-    pixels_a: FloatArray
-    pixels_b: FloatArray
+    seen: tuple[Seen, ...]
+    solved: tuple[Seen, ...]
+    fit: Refined
+    aside: tuple[SetAside, ...]
+
+    @property
+    def pairs(self) -> list[Pair]:
+        return pairs_of(self.seen)
+
+    def named_pairs(self, views: Sequence[View]) -> list[tuple[str, Pair]]:
+        return [(_pair_name(views[a.placing]), (a, b)) for a, b in self.pairs]
+
+
+def _usable(target: Target, views: Sequence[View]) -> tuple[list[Seen], tuple[SetAside, ...]]:
+    """Give every sighting that can place its board, with the view's number for its placing; and those that cannot."""
+    usable, unused = [], []
+    for number, view in enumerate(views):
+        for camera, (name, sighting) in enumerate(((view.name_a, view.seen_a), (view.name_b, view.seen_b))):
+            if sighting is None:
+                continue
+            if spans_the_board(target.boards[view.board].points[sighting.ids]):
+                seen = Seen(
+                    name=name, camera=camera, placing=number, board=view.board, ids=sighting.ids, pixels=sighting.pixels
+                )
+                usable.append(seen)
+            else:
+                reason = f"{len(sighting)} points found, or all in one line; expected {FEWEST_POINTS} or more across the board"
+                unused.append(SetAside(name=name, reason=reason))
+    return usable, tuple(unused)
 
 
 def _require(count: int, looked: int, who: str, target: Target) -> None:
@@ -206,144 +219,143 @@ def _require(count: int, looked: int, who: str, target: Target) -> None:
         )
 
 
-def _fit_camera(views: Sequence[_Seen], size: tuple[int, int], coefficients: int) -> CameraFit:
-    points = [_single(view.points) for view in views]
-    corners = [_single(view.pixels) for view in views]
-    try:
-        rms, K, distortion, turns, _, _, _, per_view = cv2.calibrateCameraExtended(
-            points, corners, size, np.eye(3), np.zeros(coefficients), flags=_lens_flags(coefficients), criteria=_STOP
-        )
-    except cv2.error as exc:
+def _checked(letter: str, held: Camera | None, size: tuple[int, int]) -> tuple[int, int]:
+    if held is not None and held.size != tuple(size):
         raise CalibrationError(
-            f"the {len(views)} views do not settle the camera ({exc.err}); expected views from different sides and distances"
-        ) from exc
-    normals = np.array([cv2.Rodrigues(turn)[0][:, 2] for turn in turns])
+            f"the intrinsics given for camera {letter.upper()} are of {held.width}x{held.height} pixels and its images of "
+            f"{size[0]}x{size[1]}; expected the same: give those of this image size, or none"
+        )
+    return size
+
+
+def _fit_alone(
+    letter: str,
+    seen: Sequence[Seen],
+    boards: tuple[FloatArray, ...],
+    size: tuple[int, int],
+    model: str,
+    held: Camera | None,
+) -> _Alone:
+    """Fit one camera alone, setting aside images that do not fit the rest."""
+    trials: tuple[ModelTrial, ...] = ()
+    if model == AUTO and held is None:
+        lens, trials = choose_lens(seen, boards, size)
+        trials = tuple(replace(trial, name=f"{letter}: {trial.name}") for trial in trials)
+    else:
+        lens = lens_named("pinhole 5" if model == AUTO else model)
+    kept, aside = list(seen), []
+    fit = fit_camera(kept, boards, size, lens, held)
+    for _ in range(_ROUNDS):
+        rms_px = np.array([rms(r) for r in fit.residuals_px])
+        bad, limit = outlying(rms_px, fewest=FEWEST_VIEWS)
+        if not bad.any():
+            break
+        typical = float(np.median(rms_px))
+        aside += [_misfit(s.name, float(rms_px[i]), typical, limit) for i, s in enumerate(kept) if bad[i]]
+        kept = [s for s, out in zip(kept, bad, strict=True) if not out]
+        fit = fit_camera(kept, boards, size, lens, held)
+    return _Alone(seen=tuple(kept), fit=fit, held=held is not None, trials=trials, aside=tuple(aside))
+
+
+def _misfit(name: str, rms_px: float, typical_px: float, limit_px: float) -> SetAside:
+    reason = f"RMS {rms_px:.2f} px against {typical_px:.2f} px elsewhere, limit {limit_px:.2f} px"
+    return SetAside(name=name, reason=f"{reason}: look for blur, glare, a bent or moving target, wrong corners")
+
+
+def _rms_by_name(seen: Sequence[Seen], residuals: Sequence[FloatArray]) -> dict[str, float]:
+    """Give each image's RMS over all boards in it."""
+    names = dict.fromkeys(s.name for s in seen)
+    return {
+        name: rms(np.concatenate([r for s, r in zip(seen, residuals, strict=True) if s.name == name])) for name in names
+    }
+
+
+def _pair_name(view: View) -> str:
+    return f"{view.name_a} with {view.name_b}"
+
+
+def _numbered(target: Target, cameras: tuple[Camera, Camera], usable: Sequence[Seen]) -> list[Seen]:
+    """Give B's points the numbers of A's in all pairs, those held out among them."""
+    alike = number_alike(target.boards, *cameras, pairs_of(usable))
+    changed = {seen_b.placing: seen_b for _, seen_b in alike}
+    return [changed.get(s.placing, s) if s.camera == 1 else s for s in usable]
+
+
+def _solve_jointly(
+    target: Target,
+    views: Sequence[View],
+    used: Sequence[Seen],
+    boards: tuple[FloatArray, ...],
+    alones: tuple[_Alone, _Alone],
+    board_shape: bool,
+) -> _Joint:
+    """Solve for everything at once, setting aside pairs that do not fit the rest."""
+    _require(len(pairs_of(used)), len(views), "both cameras at once", target)
+    start = _start(used, boards, (alones[0].camera, alones[1].camera))
+    posed = _refine(_pairs_only(used), start, held=("a", "b"), board_shape=False)
+    refuse_unlike_pairs(max(alone.fit.rms_px for alone in alones), posed.fit.rms_px, _rig(posed.fit))
+    start = replace(start, R=posed.fit.state.R, t=posed.fit.state.t)
+    held = [letter for letter, alone in zip("ab", alones, strict=True) if alone.held]
+    kept, aside = list(used), []
+    joint = _refine(kept, start, held=held, board_shape=board_shape)
+    for _ in range(_ROUNDS):
+        pairs = pairs_of(kept)
+        residuals = dict(zip(((s.camera, s.placing) for s in kept), joint.fit.residuals_px, strict=True))
+        rms_px = np.array([rms(np.concatenate([residuals[0, a.placing], residuals[1, a.placing]])) for a, _ in pairs])
+        bad, limit = outlying(rms_px, fewest=FEWEST_VIEWS)
+        if not bad.any():
+            break
+        typical = float(np.median(rms_px))
+        gone = {pair[0].placing: float(value) for pair, value, out in zip(pairs, rms_px, bad, strict=True) if out}
+        aside += [_misfit(_pair_name(views[placing]), value, typical, limit) for placing, value in gone.items()]
+        kept = [s for s in kept if s.placing not in gone]
+        joint = _refine(kept, start, held=held, board_shape=board_shape)
+    return replace(joint, aside=tuple(aside))
+
+
+def _pairs_only(seen: Sequence[Seen]) -> list[Seen]:
+    return [s for pair in pairs_of(seen) for s in pair]
+
+
+def _start(seen: Sequence[Seen], boards: tuple[FloatArray, ...], cameras: tuple[Camera, Camera]) -> State:
+    """Place every view's board, number by number, and B from A."""
+    alone = {(s.camera, s.placing): place_board(boards[s.board][s.ids], s.pixels, cameras[s.camera]) for s in seen}
+    both = [a.placing for a, _ in pairs_of(seen)]
+    R, t = agreed_pose([alone[0, view] for view in both], [alone[1, view] for view in both])
+    count = 1 + max(s.placing for s in seen)
+    placings, owners = np.tile(np.eye(4), (count, 1, 1)), np.zeros(count, dtype=np.intp)
+    for view in {s.placing for s in seen}:
+        owners[view] = 0 if (0, view) in alone else 1
+        placings[view] = alone[int(owners[view]), view]
+    return State(cameras=cameras, R=R, t=t, placings=placings, owners=owners, boards=boards)
+
+
+def _refine(seen: Sequence[Seen], start: State, *, held: Sequence[str], board_shape: bool) -> _Joint:
+    """Refine with the placings of these views alone."""
+    views = sorted({s.placing for s in seen})
+    number = {view: index for index, view in enumerate(views)}
+    solved = tuple(replace(s, placing=number[s.placing]) for s in seen)
+    part = replace(start, placings=start.placings[views], owners=start.owners[views])
+    fit = refine(solved, part, held=held, board_shape=board_shape)
+    return _Joint(seen=tuple(seen), solved=solved, fit=fit, aside=())
+
+
+def _rig(fit: Refined) -> Rig:
+    a, b = fit.state.cameras
+    return Rig(a=a, b=b, R=fit.state.R, t=fit.state.t, covariance=fit.covariance[-6:, -6:])
+
+
+def _camera_fit(joint: _Joint, alone: _Alone, camera: int) -> CameraFit:
+    mine = [s for s in joint.solved if s.camera == camera]
+    normals = np.array([joint.fit.state.pose_of(s)[:3, 2] for s in mine])
+    found = joint.fit.state.cameras[camera]
     return CameraFit(
-        camera=_camera(K, distortion, size, coefficients),
-        rms_px=float(rms),
-        view_rms_px=dict(zip([view.name for view in views], map(float, np.ravel(per_view)), strict=True)),
-        coverage=_coverage([view.pixels for view in views], size),
+        camera=found,
+        rms_px=alone.fit.rms_px,
+        view_rms_px=alone.view_rms_px,
+        coverage=_coverage([s.pixels for s in mine], found.size),
         tilt_deg=float(np.rad2deg(np.arccos(np.clip(np.abs(normals[:, 2]), 0, 1)).max())),
     )
-
-
-def _solve_pose(a: Camera, b: Camera, pairs: Sequence[_Pair], flags: int) -> tuple[Rig, float]:
-    """Find the pose with both cameras held as they are, or refine all together from there, as the flags say."""
-    lenses = [np.array(camera.distortion) for camera in (a, b)]
-    try:
-        rms, K_a, lens_a, K_b, lens_b, R, t, _, _ = cv2.stereoCalibrate(
-            [_single(pair.points) for pair in pairs],
-            [_single(pair.pixels_a) for pair in pairs],
-            [_single(pair.pixels_b) for pair in pairs],
-            np.array(a.K),
-            lenses[0],
-            np.array(b.K),
-            lenses[1],
-            a.size,  # with a start for the intrinsics the size is not looked at: the two may differ
-            flags=flags,
-            criteria=_STOP,
-        )
-    except cv2.error as exc:
-        raise CalibrationError(
-            f"the {len(pairs)} common views do not settle the pose ({exc.err}); expected views from different sides"
-        ) from exc
-    found_a = _camera(K_a, lens_a, a.size, a.distortion.size)
-    found_b = _camera(K_b, lens_b, b.size, b.distortion.size)
-    return Rig(a=found_a, b=found_b, R=np.asarray(R, dtype=np.float64), t=np.ravel(t)), float(rms)
-
-
-def _refuse_unlike_pairs(alone_rms_px: float, rms_px: float, rig: Rig) -> None:
-    """Refuse pairs that no one pose can explain."""
-    if rms_px > max(_NO_POSE * alone_rms_px, _NO_POSE * _GOOD_RMS_PX):
-        raise CalibrationError(
-            f"each camera fits on its own (RMS {alone_rms_px:.2f} px) but no one pose fits the pairs (RMS {rms_px:.1f} px, "
-            f"baseline {rig.baseline_m * 1e3:.0f} mm); expected pairs of one instant, in the same order for A and B, from "
-            "cameras that stayed where they were: check the two lists of images"
-        )
-
-
-def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]) -> None:
-    """Refuse a lens that fits its corners but has no ray for some of them: too many coefficients for the views.
-
-    Parameters
-    ----------
-    name : str
-        The camera's, for the message.
-    camera : Camera
-    corners : sequence of ndarray of shape (N, 2)
-        Pixels.
-
-    Raises
-    ------
-    CalibrationError
-        Where a corner has no ray.
-    """
-    rays = camera.rays(np.concatenate(list(corners)))
-    lost = 1 - float(np.isfinite(rays).all(axis=1).mean())
-    if lost:
-        raise CalibrationError(
-            f"the lens of camera {name} with {camera.distortion.size} coefficients is not one to one where "
-            f"{lost:.1%} of its corners were seen; expected a lens that is: use {min(_COEFFICIENTS)} coefficients, or more "
-            "views that reach its edges"
-        )
-
-
-def _common(target: Target, a: Camera, b: Camera, views: Sequence[View]) -> list[_Pair]:
-    """Pair the points that both cameras saw, with B's numbered as A's where a turned board looks the same."""
-    pairs: list[_Pair] = []
-    for number, board in enumerate(target.boards):
-        seen = [(v, v.seen_a, v.seen_b) for v in views if v.board == number and v.seen_a and v.seen_b]
-        orders = _orders(board, a, b, [(seen_a, seen_b) for _, seen_a, seen_b in seen])
-        for (view, seen_a, seen_b), order in zip(seen, orders, strict=True):
-            ids, from_a, from_b = np.intersect1d(seen_a.ids, order[seen_b.ids], return_indices=True)
-            if len(ids) >= _FEWEST_POINTS:
-                name = f"{view.name_a} with {view.name_b}"
-                pairs.append(_Pair(name, board.points[ids], seen_a.pixels[from_a], seen_b.pixels[from_b]))
-    return pairs
-
-
-def _orders(board: Board, a: Camera, b: Camera, seen: Sequence[tuple[Sighting, Sighting]]) -> list[NDArray[np.intp]]:
-    """Choose for each view how B's numbers become A's: the pose of B from A must agree in all views."""
-    orders = [np.argsort(numbering) for numbering in board.numberings]
-    if len(orders) == 1 or not seen:
-        return [orders[0]] * len(seen)
-    turns = np.array(
-        [
-            [
-                _rotation(board.points[order[seen_b.ids]], seen_b, b) @ _rotation(board.points[seen_a.ids], seen_a, a).T
-                for order in orders
-            ]
-            for seen_a, seen_b in seen
-        ]
-    )  # (views, orders, 3, 3): R from A to B as each numbering has it
-    candidates = turns.reshape(-1, 3, 3)
-    traces = np.einsum("cij,vnij->cvn", candidates, turns)
-    angles = np.arccos(np.clip((traces - 1) / 2, -1, 1))  # between a candidate and each view's numberings
-    chosen = int(np.argmin(angles.min(axis=2).sum(axis=1)))
-    return [orders[best] for best in angles[chosen].argmin(axis=1)]
-
-
-def _rotation(points: FloatArray, seen: Sighting, camera: Camera) -> FloatArray:
-    """Rotation from the board's frame to the camera's."""
-    found, turn, _ = cv2.solvePnP(points, seen.pixels, np.array(camera.K), np.array(camera.distortion))
-    if not found:
-        raise CalibrationError(
-            "the target's pose in one view cannot be solved; leave out views seen at a grazing angle"
-        )
-    return np.asarray(cv2.Rodrigues(turn)[0], dtype=np.float64)
-
-
-def _single(points: FloatArray) -> NDArray[np.float32]:
-    return np.ascontiguousarray(points, dtype=np.float32)
-
-
-def _lens_flags(coefficients: int) -> int:
-    return int(cv2.CALIB_RATIONAL_MODEL) if coefficients == 8 else 0
-
-
-def _camera(K: NDArray[Any], distortion: NDArray[Any], size: tuple[int, int], coefficients: int) -> Camera:
-    # OpenCV may pad the coefficients it was given with zeros.
-    return Camera(width=size[0], height=size[1], K=K, distortion=np.ravel(distortion)[:coefficients])
 
 
 def _coverage(corners: Sequence[FloatArray], size: tuple[int, int]) -> float:
@@ -353,46 +365,8 @@ def _coverage(corners: Sequence[FloatArray], size: tuple[int, int]) -> float:
     return float((np.histogram2d(points[:, 0], points[:, 1], bins=edges)[0] > 0).mean())
 
 
-def _with_warnings(result: CalibrationResult, pair_medians_px: dict[str, float]) -> CalibrationResult:
-    """Add what a careful person would look at."""
-    warnings = [*_camera_warnings("A", result.a), *_camera_warnings("B", result.b)]
-    if result.pairs < _ENOUGH_VIEWS:
-        warnings.append(f"{result.pairs} views show the target to both cameras; take {_ENOUGH_VIEWS} or more")
-    alone = max(result.a.rms_px, result.b.rms_px)
-    if result.rms_px > max(2 * alone, _GOOD_RMS_PX):
-        warnings.append(
-            f"each camera fits on its own (RMS {alone:.2f} px), both together less well ({result.rms_px:.2f} px): was the "
-            "target still in every pair, and was no camera moved between pairs?"
-        )
-    typical = float(np.median(list(pair_medians_px.values())))
-    for name, distance in pair_medians_px.items():
-        if distance > max(_OUTLYING_VIEW * typical, _GOOD_RMS_PX):
-            warnings.append(
-                f"{name}: epipolar distance {distance:.2f} px against {typical:.2f} px elsewhere; leave it out"
-            )
-    return CalibrationResult(**{**vars(result), "warnings": tuple(warnings)})
-
-
-def _camera_warnings(name: str, fit: CameraFit) -> list[str]:
-    warnings = []
-    if fit.rms_px > _GOOD_RMS_PX:
-        warnings.append(
-            f"camera {name}: RMS {fit.rms_px:.2f} px, above {_GOOD_RMS_PX} px: blur, a bent target, a wrong lens model?"
-        )
-    if fit.coverage < _GOOD_COVERAGE:
-        warnings.append(
-            f"camera {name}: corners reach {fit.coverage:.0%} of the picture; below {_GOOD_COVERAGE:.0%} the lens is a guess "
-            "where none were: hold the target into the corners too"
-        )
-    if fit.tilt_deg < _GOOD_TILT_DEG:
-        warnings.append(
-            f"camera {name}: the target was tilted by {fit.tilt_deg:.0f} degrees at most; below {_GOOD_TILT_DEG:.0f} the focal "
-            "length is poorly known: tilt it more"
-        )
-    typical = float(np.median(list(fit.view_rms_px.values())))
-    for view, rms in fit.view_rms_px.items():
-        if rms > max(_OUTLYING_VIEW * typical, _GOOD_RMS_PX):
-            warnings.append(
-                f"{view}: RMS {rms:.2f} px against {typical:.2f} px elsewhere; leave it out and calibrate again"
-            )
-    return warnings
+def _view_fits(joint: _Joint) -> list[ViewFit]:
+    return [
+        view_fit(s, residuals, joint.fit.state, used=True)
+        for s, residuals in zip(joint.solved, joint.fit.residuals_px, strict=True)
+    ]

@@ -10,10 +10,11 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
+from .bundle import Seen, State
 from .camera import Camera, FloatArray, LensModel
 from .errors import CalibrationError
 from .projection import camera_from, intrinsics_of
-from .refine import Refined, Seen, State, refine
+from .refine import Refined, refine
 
 FEWEST_POINTS = 6
 """Points of a board that one image must show: six coordinates place the board, the rest says how well."""
@@ -157,15 +158,13 @@ def alone_state(camera: Camera, placings: Sequence[FloatArray], boards: tuple[Fl
 
 def _start_pinhole(seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]) -> State:
     points = [boards[s.board][s.ids] for s in seen]
-    flags, K = 0, _guess(size)
-    if not all(_is_flat(p) for p in points):
-        flags = cv2.CALIB_USE_INTRINSIC_GUESS
+    flags = 0 if all(_is_flat(p) for p in points) else cv2.CALIB_USE_INTRINSIC_GUESS
     try:
         _, K, distortion, turns, shifts = cv2.calibrateCamera(
             [_single(p) for p in points],
             [_single(s.pixels) for s in seen],
             size,
-            K,
+            _guess(size),
             np.zeros(5),
             flags=flags,
             criteria=_STOP,

@@ -7,8 +7,10 @@ import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
 from skewline.calib import CalibrationError, Camera, Rig
-from skewline.calib.from_target import CalibrationResult, View, calibrate_pair, refuse_folding_lens
+from skewline.calib.advice import refuse_folding_lens
+from skewline.calib.from_target import View, calibrate_pair
 from skewline.calib.images import find_images, read_image
+from skewline.calib.result import CalibrationResult
 from skewline.calib.targets import Chessboard, Sighting, Target, parse_target
 
 DATA = Path(__file__).parent.parent / "data" / "chessboard-pairs"
@@ -33,9 +35,9 @@ def real_views() -> list[View]:
     ]
 
 
-@pytest.fixture(scope="module", params=[5, 8])
+@pytest.fixture(scope="module", params=["pinhole 5", "pinhole 8"])
 def real_result(request: pytest.FixtureRequest, real_views: list[View]) -> CalibrationResult:
-    return calibrate_pair(TARGET, real_views, SIZE, SIZE, coefficients=request.param)
+    return calibrate_pair(TARGET, real_views, SIZE, SIZE, model=request.param)
 
 
 def test_the_pose_of_real_chessboard_pairs_lies_within_the_published_uncertainties(
@@ -226,8 +228,8 @@ def test_too_few_views_are_refused_with_their_number_and_the_remedy(unlike_rig: 
         calibrate_pair(TARGET, blind, unlike_rig.a.size, unlike_rig.b.size)
     with pytest.raises(CalibrationError, match=r"found in 2 views of 2 for camera A"):
         calibrate_pair(TARGET, views[:2], unlike_rig.a.size, unlike_rig.b.size)
-    with pytest.raises(CalibrationError, match="7 lens coefficients; expected 5 or 8"):
-        calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size, coefficients=7)
+    with pytest.raises(CalibrationError, match="lens model is 'pinhole 7'; expected one of pinhole 4, pinhole 5"):
+        calibrate_pair(TARGET, views, unlike_rig.a.size, unlike_rig.b.size, model="pinhole 7")
 
 
 def test_a_lens_that_folds_where_corners_were_seen_is_refused_with_the_remedy() -> None:
@@ -236,7 +238,7 @@ def test_a_lens_that_folds_where_corners_were_seen_is_refused_with_the_remedy() 
     inside, outside = np.array([[320.0, 240.0], [580.0, 240.0]]), np.array([[320.0, 240.0], [600.0, 240.0]])
 
     refuse_folding_lens("A", folding, [inside])
-    with pytest.raises(CalibrationError, match=r"not one to one where 50.0% of its corners .* use 5 coefficients"):
+    with pytest.raises(CalibrationError, match=r"not one to one where 50.0% of its corners .* fewer coefficients"):
         refuse_folding_lens("A", folding, [outside])
 
 

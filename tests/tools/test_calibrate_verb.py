@@ -59,7 +59,7 @@ def test_eight_coefficients_are_fitted_on_request(calibrate: Callable[..., int],
     for file in DATA.glob("*.jpg"):
         shutil.copy(file, folder)
 
-    assert calibrate("--coefficients", "8") == 0
+    assert calibrate("--model", "pinhole 8") == 0
     assert Rig.load(folder / "bench.rig.json").a.distortion.size == 8
 
 

@@ -21,8 +21,10 @@ from rich.table import Table
 
 from ...calib import CalibrationError, Rig
 from ...calib.camera import FloatArray
-from ...calib.from_target import CalibrationResult, CameraFit, View, calibrate_pair
+from ...calib.from_target import View, calibrate_pair
 from ...calib.images import find_images, read_image
+from ...calib.one_camera import LENSES
+from ...calib.result import CalibrationResult, CameraFit
 from ...calib.targets import Sighting, Target, parse_target
 
 _DESCRIPTION = "Calibrate two cameras from pairs of images of one target and save the rig."
@@ -49,7 +51,10 @@ def configure(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--target", required=True, metavar="TEXT", help='such as "chessboard 9x6 30mm"')
     parser.add_argument("-o", "--output", required=True, type=Path, metavar="RIG", help="where to save the rig")
     parser.add_argument(
-        "--coefficients", type=int, choices=(5, 8), default=5, help="lens coefficients of each camera (5)"
+        "--model",
+        choices=(*LENSES, "auto"),
+        default="pinhole 5",
+        help="lens model of each camera (pinhole 5); auto chooses by error in views held out in turn",
     )
     parser.add_argument("--json", action="store_true", help="print the figures as JSON")
 
@@ -66,9 +71,7 @@ def run(arguments: argparse.Namespace) -> int:
         for a, b in zip(looks_a, looks_b, strict=True)
         for board, (seen_a, seen_b) in enumerate(zip(a.seen, b.seen, strict=True))
     ]
-    result = calibrate_pair(
-        target, views, _size_of(looks_a, "A"), _size_of(looks_b, "B"), coefficients=arguments.coefficients
-    )
+    result = calibrate_pair(target, views, _size_of(looks_a, "A"), _size_of(looks_b, "B"), model=arguments.model)
     rig = replace(result.rig, notes=_notes(target, result, len(views)))
     rig.save(arguments.output)
     if arguments.json:

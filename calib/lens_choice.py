@@ -1,0 +1,179 @@
+"""Choosing a lens model by how well it foretells views that it was not fitted to.
+
+The rule against over-fitting: k-fold over views, and of all models the simplest whose held-out view RMS is within one
+standard error of the best one's, where the error is that of the mean difference over the same views. It is the
+one-standard-error rule of Breiman, Friedman, Olshen and Stone, Classification and Regression Trees, 1984, section 3.4.3,
+taken on paired differences, since views differ from one another far more than models do.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from .bundle import Seen, State
+from .camera import Camera, FloatArray
+from .errors import CalibrationError
+from .one_camera import LENSES, Lens, alone_in_order, fit_camera, with_lens
+from .refine import Refined, refine, rms
+from .result import ModelTrial
+
+_FOLDS = 5
+_FEWEST_VIEWS = 6
+"""Below this there is nothing to choose by, and the simplest model is taken."""
+
+_HOPELESS = 2.0
+"""A model that fits all views so many times worse than the best is not tried on held-out ones."""
+
+
+@dataclass(frozen=True, eq=False)
+class _Candidate:
+    lens: Lens
+    fit: Refined | None
+    view_rms_px: FloatArray | None
+    note: str
+
+
+def choose_lens(
+    seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]
+) -> tuple[Lens, tuple[ModelTrial, ...]]:
+    """Choose the lens model of one camera.
+
+    Parameters
+    ----------
+    seen : sequence of Seen
+        All that the camera saw, one a view.
+    boards : tuple of ndarray of shape (K, 3)
+    size : (width, height)
+
+    Returns
+    -------
+    Lens, tuple of ModelTrial
+        The model and all that were tried, from simple to rich.
+
+    Raises
+    ------
+    CalibrationError
+        Where no model fits.
+    """
+    simplest = LENSES["pinhole 4"]
+    if len(seen) < _FEWEST_VIEWS:
+        note = f"taken as the simplest: {len(seen)} views are too few to choose by, expected {_FEWEST_VIEWS} or more"
+        return simplest, (_only(simplest, note),)
+    candidates = _held_out(_fitted(alone_in_order(seen), boards, size), alone_in_order(seen))
+    able = [c for c in candidates if c.view_rms_px is not None]
+    if not able:
+        reasons = "; ".join(f"{c.lens.name}: {c.note}" for c in candidates)
+        raise CalibrationError(
+            f"no lens model fits the {len(seen)} views ({reasons}); expected views from different sides and distances"
+        )
+    best = min(able, key=_mean)
+    chosen = next(c for c in able if _excess(c, best) <= _standard_error(c, best))
+    return chosen.lens, tuple(_trial(c, best, chosen) for c in candidates)
+
+
+def _only(lens: Lens, note: str) -> ModelTrial:
+    parameters = 4 + lens.coefficients
+    return ModelTrial(name=lens.name, held_out_rms_px=float("nan"), parameters=parameters, chosen=True, note=note)
+
+
+def _fitted(seen: list[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]) -> list[_Candidate]:
+    """Fit every model to all views; a richer pinhole model starts from the one before it."""
+    candidates = []
+    previous: State | None = None
+    for lens in sorted(LENSES.values(), key=lambda each: each.coefficients):
+        try:
+            warm = previous is not None and lens.model == "pinhole"
+            fit = refine(seen, with_lens(previous, lens)) if warm and previous else fit_camera(seen, boards, size, lens)
+        except CalibrationError as exc:
+            candidates.append(_Candidate(lens, None, None, f"cannot be fitted: {exc}"))
+            continue
+        previous = fit.state if lens.model == "pinhole" else previous
+        lost = _lost(fit.state.cameras[0], seen)
+        note = f"not one to one in {lost:.1%} of the picture" if lost else ""
+        candidates.append(_Candidate(lens, None if lost else fit, None, note))
+    return candidates
+
+
+def _lost(camera: Camera, seen: Sequence[Seen]) -> float:
+    """Share of the picture for which the lens has no ray; of the corners for a fisheye, whose picture may be a disc."""
+    pixels = np.concatenate([s.pixels for s in seen])
+    if camera.model == "pinhole":
+        pixels = np.concatenate([pixels, camera.grid_pixels(), camera.border_pixels()])
+    return 1 - float(np.isfinite(camera.rays(pixels)).all(axis=1).mean())
+
+
+def _held_out(candidates: Sequence[_Candidate], seen: Sequence[Seen]) -> list[_Candidate]:
+    least = min((c.fit.rms_px for c in candidates if c.fit), default=0.0)
+    tried = []
+    for candidate in candidates:
+        if candidate.fit is None:
+            tried.append(candidate)
+        elif candidate.fit.rms_px > _HOPELESS * least:
+            tried.append(replace(candidate, note=f"fits all views to {candidate.fit.rms_px:.2f} px only"))
+        else:
+            tried.append(replace(candidate, view_rms_px=fold_errors(seen, candidate.fit.state)))
+    return tried
+
+
+def fold_errors(seen: Sequence[Seen], state: State, folds: int = _FOLDS) -> FloatArray:
+    """Give each view's RMS, shape (M,), in pixels, by the camera fitted to the views of the other folds.
+
+    The fits start at ``state``, that of all views, and end where their own views lead them.
+    """
+    number = np.arange(len(seen)) % folds
+    errors = np.empty(len(seen))
+    for fold in range(min(folds, len(seen))):
+        inside, outside = np.flatnonzero(number != fold), np.flatnonzero(number == fold)
+        trained = refine(*_part(seen, state, inside))
+        left, placed = _part(seen, replace(state, cameras=trained.state.cameras), outside)
+        errors[outside] = [rms(r) for r in refine(left, placed, held=("a",)).residuals_px]
+    return errors
+
+
+def _part(seen: Sequence[Seen], state: State, chosen: np.ndarray) -> tuple[list[Seen], State]:
+    part = replace(state, placings=state.placings[chosen], owners=state.owners[chosen])
+    return alone_in_order([seen[index] for index in chosen]), part
+
+
+def _errors(candidate: _Candidate) -> FloatArray:
+    return np.array([np.nan]) if candidate.view_rms_px is None else candidate.view_rms_px
+
+
+def _mean(candidate: _Candidate) -> float:
+    return float(_errors(candidate).mean())
+
+
+def _excess(candidate: _Candidate, best: _Candidate) -> float:
+    return _mean(candidate) - _mean(best)
+
+
+def _standard_error(candidate: _Candidate, best: _Candidate) -> float:
+    difference = _errors(candidate) - _errors(best)
+    return float(difference.std(ddof=1) / np.sqrt(len(difference)))
+
+
+def _trial(candidate: _Candidate, best: _Candidate, chosen: _Candidate) -> ModelTrial:
+    errors = _errors(candidate)
+    return ModelTrial(
+        name=candidate.lens.name,
+        held_out_rms_px=float(np.sqrt((errors**2).mean())),
+        parameters=4 + candidate.lens.coefficients,
+        chosen=candidate is chosen,
+        note=candidate.note or _verdict(candidate, best, chosen),
+    )
+
+
+def _verdict(candidate: _Candidate, best: _Candidate, chosen: _Candidate) -> str:
+    excess, error = _excess(candidate, best), _standard_error(candidate, best)
+    if candidate is chosen:
+        return (
+            "chosen: the best"
+            if candidate is best
+            else f"chosen: the simplest within one standard error ({error:.4f} px)"
+        )
+    if candidate is best:
+        return "the best, but by less than one standard error"
+    return f"{excess:.4f} px above the best, standard error {error:.4f} px"

@@ -16,8 +16,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..calib import CalibrationError
-from ..calib.from_target import CalibrationResult, View
+from ..calib.from_target import View
 from ..calib.guidance import Account, StillWatch, next_view, showing_of
+from ..calib.result import CalibrationResult
 from ..calib.targets import Sighting, Target
 from ..node.pairing import LostPair, Pair
 from ..node.sources import Source

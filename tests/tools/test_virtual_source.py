@@ -9,7 +9,7 @@ from skewline.node import ConfigError
 from skewline.node.config import parse_config
 from skewline.node.pairing import Pair
 from skewline.tools.cell import make_cell
-from skewline.tools.verbs.run import SOURCES
+from skewline.tools.sources import SOURCES
 from skewline.tools.virtual_source import VirtualSettings, VirtualSource
 
 

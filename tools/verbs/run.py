@@ -4,11 +4,6 @@ from __future__ import annotations
 
 import argparse
 import logging
-import signal
-import threading
-from collections.abc import Iterator
-from contextlib import contextmanager
-from types import FrameType
 
 import msgspec
 
@@ -17,12 +12,10 @@ from ...node import NodeStatus
 from ...node.config import load_config
 from ...node.publisher import Publisher
 from ...node.runner import run_node
-from ...node.sources import BUILT_IN, SourceKind
 from ..cli import CAUTION
 from ..live_line import LiveLine, make_log, standard_error
-from ..virtual_source import VirtualSettings, VirtualSource
-
-SOURCES = {**BUILT_IN, "virtual": SourceKind(VirtualSettings, VirtualSource)}
+from ..sources import SOURCES
+from ..stopping import stop_on_signals
 
 _LOG_EVERY = 10
 """On anything but a terminal, every tenth status (one each ten seconds) becomes a log line."""
@@ -72,7 +65,7 @@ def run(arguments: argparse.Namespace) -> int:
     """Run the node; 0 when it was stopped or its source ended."""
     line = standard_error()
     log = make_log("skewline", line)
-    with _stop_on_signals() as stop:
+    with stop_on_signals() as stop:
         config = load_config(arguments.config, SOURCES)
         try:
             summary = run_node(
@@ -89,22 +82,6 @@ def run(arguments: argparse.Namespace) -> int:
         print(msgspec.json.format(msgspec.json.encode(summary), indent=2).decode())
     log.info("ended: %s", status_line(summary))
     return 0
-
-
-@contextmanager
-def _stop_on_signals() -> Iterator[threading.Event]:
-    """Turn SIGINT and SIGTERM into an event while the node runs."""
-    stop = threading.Event()
-
-    def handle(_number: int, _frame: FrameType | None) -> None:
-        stop.set()
-
-    before = {number: signal.signal(number, handle) for number in (signal.SIGINT, signal.SIGTERM)}
-    try:
-        yield stop
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
 
 
 def _greet(log: logging.Logger, rig: Rig, publisher: Publisher) -> None:

@@ -1,65 +1,55 @@
-"""Calibration targets: what they measure, and finding them in images.
+"""Calibration targets: one board or several in one scene, named by a line of text or by a TOML file.
 
-A target is one board or several in one scene. It is named by a line of text, ``chessboard 9x6 30mm``: kind, inner
-corners along and across, edge of a square.
+===========================================  =====================================================================
+``chessboard 9x6 30mm``                      inner corners along and across, edge of a square
+``charuco 7x5 40mm 30mm DICT_5X5_100``       squares along and across, edges of a square and of a marker, dictionary
+``charuco ... DICT_5X5_100 from 17``         the same, its first marker being number 17
+``circles 7x6 20mm``                         circles along and across, from one's middle to the next
+``asymmetric-circles 4x11 20mm``             circles in a row, rows, from one row to the next: half the distance of
+                                             neighbours in a row
+``charuco ... + charuco ...``                several boards, told apart by their markers
+``boards.toml``                              a file of boards: :mod:`skewline.calib.target_files`
+===========================================  =====================================================================
 """
 
 from __future__ import annotations
 
 import re
 from dataclasses import dataclass
-from typing import Any, Protocol
+from itertools import combinations
+from pathlib import Path
+from typing import Any
 
-import cv2
-import numpy as np
 from numpy.typing import NDArray
 
-from .camera import FloatArray
+from .board import Board, Sighting
+from .charuco import Charuco
+from .chessboard import Chessboard
+from .circles import CircleGrid
 from .errors import CalibrationError
-from .images import grey_8_bit
+from .measured import MeasuredBoard
+from .target_files import load_boards
+
+__all__ = [
+    "Board",
+    "Charuco",
+    "Chessboard",
+    "CircleGrid",
+    "MeasuredBoard",
+    "Sighting",
+    "Target",
+    "parse_target",
+]
 
 _UNITS_M = {"mm": 1e-3, "cm": 1e-2, "m": 1.0, "in": 0.0254}
-_FORM = re.compile(r"chessboard\s+(\d+)x(\d+)\s+(\d+(?:\.\d+)?)\s*(mm|cm|m|in)", re.IGNORECASE)
-
-_WINDOW_SHARE = 0.3
-"""Half the refinement window over the distance of neighbouring corners: a window that reaches the next edge pulls the
-corner away (RMS 0.45 px instead of 0.20 on the chessboard pairs of the tests)."""
-
-_WINDOW_PX = (3, 11)
-
-
-@dataclass(frozen=True, eq=False, kw_only=True)
-class Sighting:
-    """Points of one board found in one image.
-
-    Attributes
-    ----------
-    ids : ndarray of shape (N,)
-        Which of the board's points they are: rows of ``Board.points``, each at most once.
-    pixels : ndarray of shape (N, 2)
-        Where they were found.
-    """
-
-    ids: NDArray[np.intp]
-    pixels: FloatArray
-
-    def __len__(self) -> int:
-        return len(self.ids)
-
-
-class Board(Protocol):
-    """One rigid board: points that are known, and the means to find them."""
-
-    @property
-    def points(self) -> FloatArray:
-        """All points in the board's frame, shape (M, 3), in metres."""
-
-    @property
-    def numberings(self) -> tuple[NDArray[np.intp], ...]:
-        """Orders in which the same picture could have been numbered; the first changes nothing."""
-
-    def find(self, image: NDArray[Any]) -> Sighting | None:
-        """Find its points in an image of shape (H, W) or (H, W, 3), uint8 or uint16; None where it is not seen."""
+_COUNTS = r"\s+(?P<columns>\d+)x(?P<rows>\d+)"
+_LENGTH = r"\s+(?P<{0}>\d+(?:\.\d+)?)\s*(?P<{0}_unit>mm|cm|m|in)"
+_PLAIN = re.compile(rf"(?P<kind>chessboard|circles|asymmetric-circles){_COUNTS}{_LENGTH.format('edge')}", re.IGNORECASE)
+_CHARUCO = re.compile(
+    rf"charuco{_COUNTS}{_LENGTH.format('square')}{_LENGTH.format('marker')}\s+(?P<dictionary>DICT_\w+)"
+    r"(?:\s+from\s+(?P<first>\d+))?",
+    re.IGNORECASE,
+)
 
 
 @dataclass(frozen=True)
@@ -69,128 +59,95 @@ class Target:
     Parameters
     ----------
     boards : tuple of Board
+
+    Raises
+    ------
+    CalibrationError
+        Where two boards cannot be told apart in an image.
     """
 
     boards: tuple[Board, ...]
 
+    def __post_init__(self) -> None:
+        for first, second in combinations(self.boards, 2):
+            if reason := _alike(_finder(first), _finder(second)):
+                raise CalibrationError(f"{first} and {second} in one scene {reason}")
+
     def __str__(self) -> str:
         return " + ".join(map(str, self.boards))
+
+    @property
+    def cautions(self) -> tuple[str, ...]:
+        """What a careful person would not like about its boards; empty where all is well."""
+        found = (_finder(board) for board in self.boards)
+        return tuple(board.caution for board in found if isinstance(board, Charuco) and board.caution)
 
     def find(self, image: NDArray[Any]) -> tuple[Sighting | None, ...]:
         """Look for every board in an image; one entry a board."""
         return tuple(board.find(image) for board in self.boards)
 
 
-@dataclass(frozen=True, kw_only=True)
-class Chessboard:
-    """A chessboard of equal squares.
+def _finder(board: Board) -> Board:
+    return board.board if isinstance(board, MeasuredBoard) else board
 
-    Parameters
-    ----------
-    columns, rows : int
-        Inner corners along the longer and the shorter way, or as named.
-    square_m : float
-        Edge of a square in metres.
 
-    Raises
-    ------
-    CalibrationError
-        For fewer than 3 corners either way, or a square of no size.
-    """
-
-    columns: int
-    rows: int
-    square_m: float
-
-    def __post_init__(self) -> None:
-        if min(self.columns, self.rows) < 3 or not 0 < self.square_m < 10:
-            raise CalibrationError(
-                f"chessboard of {self.columns}x{self.rows} inner corners with squares of {self.square_m} m; expected 3 or "
-                "more corners each way and squares between 0 and 10 m"
+def _alike(first: Board, second: Board) -> str:
+    """Say why two boards cannot be told apart, and what to do; empty where they can."""
+    match first, second:
+        case Charuco(), Charuco() if first.shares_markers_with(second):
+            start = first.marker_ids.stop
+            return (
+                "share markers that look alike; expected different ones: start the second at a number of its own "
+                f'("{second.dictionary} from {start}") or give it a dictionary with another number of bits'
             )
-
-    def __str__(self) -> str:
-        return f"chessboard {self.columns}x{self.rows} {self.square_m * 1e3:g}mm"
-
-    @property
-    def points(self) -> FloatArray:
-        """Inner corners in the target's frame, shape (columns * rows, 3), metres: x along the rows, z = 0."""
-        y, x = np.mgrid[: self.rows, : self.columns]
-        return np.column_stack([x.ravel(), y.ravel(), np.zeros(x.size)]) * self.square_m
-
-    @property
-    def numberings(self) -> tuple[NDArray[np.intp], ...]:
-        """Give the orders in which the same picture could have been numbered.
-
-        Turns of the board onto itself that the colours of its squares do not tell apart; the first changes nothing.
-        """
-        grid = np.arange(self.columns * self.rows).reshape(self.rows, self.columns)
-        turns = range(4) if self.columns == self.rows else (0, 2)
-        odd = (self.columns + self.rows) % 2 == 1
-        # On a square board of odd size a quarter turn exchanges the colours; on one of unequal parity a half turn does.
-        quarter_shows = self.columns == self.rows and self.columns % 2 == 1
-        kept = [turn for turn in turns if not (odd and turn == 2) and not (quarter_shows and turn % 2)]
-        return tuple(np.rot90(grid, turn).ravel() for turn in kept)
-
-    def find(self, image: NDArray[Any]) -> Sighting | None:
-        """Find the inner corners to a fraction of a pixel.
-
-        Parameters
-        ----------
-        image : ndarray of shape (H, W) or (H, W, 3), uint8 or uint16
-
-        Returns
-        -------
-        Sighting or None
-            All corners, starting at the end whose first inner square is dark; None where the board is not wholly seen.
-        """
-        grey = grey_8_bit(image)
-        # Chosen over findChessboardCornersSB by its agreement with the published baseline of the chessboard pairs in
-        # the tests: off by 0.1 of the stated uncertainty, the other by 2.0.
-        flags = cv2.CALIB_CB_ADAPTIVE_THRESH | cv2.CALIB_CB_NORMALIZE_IMAGE
-        found, corners = cv2.findChessboardCorners(grey, (self.columns, self.rows), flags=flags)
-        if not found:
-            return None
-        grid = corners.reshape(self.rows, self.columns, 2)
-        steps = [np.linalg.norm(np.diff(grid, axis=axis), axis=2).min() for axis in (0, 1)]
-        half = int(np.clip(round(_WINDOW_SHARE * min(steps)), *_WINDOW_PX))
-        stop = (cv2.TERM_CRITERIA_EPS | cv2.TERM_CRITERIA_COUNT, 60, 1e-4)
-        refined = cv2.cornerSubPix(grey, corners, (half, half), (-1, -1), stop)
-        pixels = self._from_dark_end(grey, refined.reshape(-1, 2).astype(np.float64))
-        return Sighting(ids=np.arange(len(pixels)), pixels=pixels)
-
-    def _from_dark_end(self, grey: NDArray[np.uint8], corners: FloatArray) -> FloatArray:
-        """Turn the numbering by a half turn where the square inside the first four corners is the bright one."""
-        grid = corners.reshape(self.rows, self.columns, 2)
-        centres = (grid[:-1, :-1] + grid[1:, :-1] + grid[:-1, 1:] + grid[1:, 1:]) / 4
-        x, y = np.rint(centres).astype(int).transpose(2, 0, 1)
-        levels = grey[y.clip(0, grey.shape[0] - 1), x.clip(0, grey.shape[1] - 1)].astype(float)
-        like_first = np.add.outer(np.arange(self.rows - 1), np.arange(self.columns - 1)) % 2 == 0
-        bright_first = levels[like_first].mean() > levels[~like_first].mean()
-        if not bright_first:
-            return corners
-        half_turned = corners[::-1]
-        if (self.columns + self.rows) % 2 == 1:
-            return half_turned
-        # No half turn changes these colours; a quarter turn does on a square board of odd size.
-        quarter = np.rot90(np.arange(len(corners)).reshape(self.rows, self.columns)).ravel()
-        return corners[quarter] if self.columns == self.rows and self.columns % 2 else corners
+        case Chessboard(), Chessboard() if sorted((first.columns, first.rows)) == sorted((second.columns, second.rows)):
+            return (
+                "look alike; expected boards that can be told apart: other counts, or ChArUco boards with their markers"
+            )
+        case (Chessboard() as plain, Charuco() as marked) | (Charuco() as marked, Chessboard() as plain):
+            # The chessboard detector looks past the markers.
+            if sorted((plain.columns, plain.rows)) == sorted((marked.columns - 1, marked.rows - 1)):
+                return "have the same inner corners; expected boards that can be told apart: other counts"
+        case CircleGrid(), CircleGrid():
+            return "cannot be told apart; expected one grid of circles at most: use ChArUco boards with their markers"
+    return ""
 
 
 def parse_target(text: str) -> Target:
-    """Read a target's name.
+    """Read a target's name, or its file where the name ends in ``.toml``.
 
     Raises
     ------
     CalibrationError
-        Where the text names no target that we know.
+        Where the text names no target that we know, the file does not hold one, or its boards cannot be told apart.
     """
-    match = _FORM.fullmatch(text.strip())
-    if not match:
-        raise CalibrationError(
-            f"target is {text!r}; expected a kind, its inner corners and the edge of a square in mm, cm, m or in, "
-            'such as "chessboard 9x6 30mm"'
+    if text.strip().lower().endswith(".toml"):
+        return Target(load_boards(Path(text.strip())))
+    return Target(tuple(_parse_board(part.strip(), text) for part in re.split(r"\s\+\s", text)))
+
+
+def _parse_board(part: str, text: str) -> Board:
+    if match := _PLAIN.fullmatch(part):
+        kind, columns, rows = match["kind"].lower(), int(match["columns"]), int(match["rows"])
+        edge_m = _length_m(match, "edge")
+        if kind == "chessboard":
+            return Chessboard(columns=columns, rows=rows, square_m=edge_m)
+        return CircleGrid(columns=columns, rows=rows, spacing_m=edge_m, asymmetric=kind != "circles")
+    if match := _CHARUCO.fullmatch(part):
+        return Charuco(
+            columns=int(match["columns"]),
+            rows=int(match["rows"]),
+            square_m=_length_m(match, "square"),
+            marker_m=_length_m(match, "marker"),
+            dictionary=match["dictionary"],
+            first_id=int(match["first"] or 0),
         )
-    columns, rows, edge, unit = match.groups()
-    board = Chessboard(columns=int(columns), rows=int(rows), square_m=float(edge) * _UNITS_M[unit.lower()])
-    return Target((board,))
+    raise CalibrationError(
+        f"target is {text!r}; expected a kind, its counts and lengths in mm, cm, m or in, such as "
+        '"chessboard 9x6 30mm", "charuco 7x5 40mm 30mm DICT_5X5_100", "circles 7x6 20mm", '
+        '"asymmetric-circles 4x11 20mm", several joined by " + ", or the path of a .toml file'
+    )
+
+
+def _length_m(match: re.Match[str], name: str) -> float:
+    return float(match[name]) * _UNITS_M[match[f"{name}_unit"].lower()]

@@ -5,18 +5,16 @@ Every refusal names the key's path, the value given and what is allowed.
 
 from __future__ import annotations
 
-import difflib
 import math
-import re
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, TypeVar
 
-import msgspec
-from msgspec import Meta, Struct, inspect
+from msgspec import Meta, Struct
 
+from ..calib.tables import checked_table
 from .errors import ConfigError, NodeError
 from .match import MatcherName, MatchSettings
 from .sources import SourceKind
@@ -237,68 +235,5 @@ _Table = TypeVar("_Table", bound=Struct)
 
 
 def _checked(table: Mapping[str, Any], kind: type[_Table], name: str, *, also: tuple[str, ...] = ()) -> _Table:
-    """Turn one flat table into its value class; the one place where msgspec's refusals become ours."""
-    described = inspect.type_info(kind)
-    assert isinstance(described, inspect.StructType)  # noqa: S101 - for the type checker: kind is a Struct
-    allowed = {field.name: field.type for field in described.fields}
-    for key in table:
-        if key not in allowed:
-            raise ConfigError(_unknown(name, key, table[key], [*allowed, *also]))
-    for field in described.fields:
-        if field.required and field.name not in table:
-            raise ConfigError(f"{_path(name, field.name)} is missing; expected {_describe(field.type)}")
-    for key, value in table.items():
-        if isinstance(value, float) and not math.isfinite(value):
-            raise ConfigError(f"{_path(name, key)} is {value}; expected {_describe(allowed[key])}")
-    try:
-        return msgspec.convert(table, kind)
-    except msgspec.ValidationError as exc:
-        # msgspec ends with the place: "... - at `$.files[1]`"
-        keys = re.findall(r"\.([^.\[`]+)|\[([0-9]+)\]", str(exc).rpartition("`$")[2])
-        given: Any = table
-        for member, index in keys:
-            given = given[member] if member else given[int(index)]
-        first = keys[0][0]
-        place = first + "".join(f"[{index}]" for _, index in keys[1:])
-        raise ConfigError(f"{_path(name, place)} is {given!r}; expected {_describe(allowed[first])}") from exc
-
-
-def _path(table: str, key: str) -> str:
-    return f"{table}.{key}" if table else key
-
-
-def _unknown(table: str, key: str, value: Any, allowed: list[str]) -> str:
-    close = difflib.get_close_matches(key, allowed, n=1)
-    hint = f"; did you mean {close[0]}?" if close else ""
-    where = f"[{table}]" if table else "the top level"
-    shown = "a table" if isinstance(value, dict) else repr(value)
-    return f"{_path(table, key)} ({shown}) is no key of {where}; expected one of {', '.join(sorted(allowed))}{hint}"
-
-
-def _describe(kind: inspect.Type) -> str:
-    """Say in words what a field's type allows."""
-    match kind:
-        case inspect.Metadata():
-            extra = kind.extra_json_schema or {}
-            return str(extra.get("description", "")) or _describe(kind.type)
-        case inspect.UnionType():
-            return " or ".join(_describe(part) for part in kind.types if not isinstance(part, inspect.NoneType))
-        case inspect.LiteralType():
-            return "one of " + ", ".join(f'"{value}"' for value in kind.values)
-        case inspect.FloatType() | inspect.IntType():
-            return ("a number" if isinstance(kind, inspect.FloatType) else "a whole number") + _bounds(kind)
-        case inspect.ListType():
-            return f"a list ({_describe(kind.item_type)} each{', one or more' if kind.min_length else ''})"
-        case inspect.BoolType():
-            return "true or false"
-        case inspect.StrType():
-            return "text"
-        case inspect.DictType():
-            return "a table"
-    raise TypeError(f"no words for {kind!r}")
-
-
-def _bounds(kind: inspect.FloatType | inspect.IntType) -> str:
-    limits = (("above", kind.gt), ("at least", kind.ge), ("below", kind.lt), ("at most", kind.le))
-    parts = [f" {word} {limit:g}" for word, limit in limits if limit is not None]
-    return " and".join(parts)
+    """Turn one flat table into its value class."""
+    return checked_table(table, kind, name, ConfigError, also=also)

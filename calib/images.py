@@ -56,12 +56,33 @@ def read_image(file: Path) -> NDArray[Any]:
     ImageFileError
         Where the file is missing, cannot be read, or is no whole image in a known format.
     """
+    return decode_image(file, read_file(file))
+
+
+def read_file(file: Path) -> bytes:
+    """Read a file's bytes.
+
+    Raises
+    ------
+    ImageFileError
+        Where the file is missing or cannot be read.
+    """
     try:
-        data = file.read_bytes()
+        return file.read_bytes()
     except FileNotFoundError as exc:
         raise ImageFileError("file missing", f"{file} is gone; expected an image") from exc
     except OSError as exc:
         raise ImageFileError("file unreadable", f"{file} cannot be read: {exc.strerror}; expected an image") from exc
+
+
+def decode_image(file: Path, data: bytes) -> NDArray[Any]:
+    """Decode a file's bytes as :func:`read_image` gives them; ``file`` is for messages.
+
+    Raises
+    ------
+    ImageFileError
+        Where they are no whole image in a known format.
+    """
     try:
         image = cv2.imdecode(np.frombuffer(data, np.uint8), cv2.IMREAD_UNCHANGED) if data else None
     except cv2.error as exc:

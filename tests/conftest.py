@@ -59,3 +59,9 @@ def context() -> Iterator[zmq.Context[Any]]:
     thread.start()
     thread.join(timeout=10)
     assert not thread.is_alive(), "a socket was left open"
+
+
+@pytest.fixture(autouse=True)
+def own_cache(tmp_path_factory: pytest.TempPathFactory, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Keep what tests find out of the user's cache, and what stands there out of the tests."""
+    monkeypatch.setenv("XDG_CACHE_HOME", str(tmp_path_factory.mktemp("cache")))

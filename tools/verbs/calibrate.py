@@ -5,39 +5,40 @@ from __future__ import annotations
 import argparse
 import datetime
 import json
-import os
 from collections.abc import Sequence
-from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, replace
-from functools import partial
+from dataclasses import replace
 from pathlib import Path
-from typing import Any
-
-import cv2
-import numpy as np
-from rich.console import Console
-from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
-from rich.table import Table
+from typing import Any, get_args
 
 from ...calib import CalibrationError, Rig
-from ...calib.camera import FloatArray
 from ...calib.from_target import View, calibrate_pair
-from ...calib.images import find_images, read_image
 from ...calib.one_camera import LENSES
 from ...calib.result import CalibrationResult, CameraFit
-from ...calib.targets import Sighting, Target, parse_target
+from ...calib.targets import Target, parse_target
+from ...calib.views import PairBy
+from ..calibration_text import print_remarks, print_result, rotation_deg
+from ..calibration_views import Looked, look_at_files
+from ..live_calibration import LiveSession, Solve, parse_goal
+from ..live_driver import depth_sigma_at, drive
+from ..sighting_cache import default_folder
 
-_DESCRIPTION = "Calibrate two cameras from pairs of images of one target and save the rig."
+_DESCRIPTION = (
+    "Calibrate two cameras from pairs of images of a target, taken before or while it runs, and save the rig."
+)
 
 _EXAMPLE = """\
-example: twenty pairs of a chessboard with 9x6 inner corners and squares of 30 mm
+example: twenty pairs of a chessboard with 9x6 inner corners and squares of 30 mm, every fifth kept out as a test
 
-  skewline calibrate --a 'images/a*.png' --b 'images/b*.png' --target "chessboard 9x6 30mm" -o bench.rig.json
+  skewline calibrate --a 'images/a*.png' --b 'images/b*.png' --target "chessboard 9x6 30mm" --hold-out 0.2 -o bench.rig.json
+
+or from running cameras, with advice on what to show next, until depth at 0.9 m is known to half a millimetre:
+
+  skewline calibrate --live node.toml --target "chessboard 9x6 30mm" --goal "0.5mm at 0.9m" -o bench.rig.json
 
 Measure the printed squares: the rig is as true to scale as that figure. Hold the target still, whole and sharp in both
 pictures, at near and far distance, tilted about both ways by 20 to 40 degrees, and into the corners of each picture.
 
-exit status: 0 when the rig was saved, 2 for bad input
+exit status: 0 when the rig was saved, 1 when it was saved but the goal was not reached, 2 for bad input
 """
 
 
@@ -46,87 +47,105 @@ def configure(parser: argparse.ArgumentParser) -> None:
     parser.description = _DESCRIPTION
     parser.epilog = _EXAMPLE
     files = "images of camera {}: names or a quoted pattern; taken in the order of the numbers in their names"
-    parser.add_argument("--a", nargs="+", required=True, metavar="FILE", help=files.format("A"))
-    parser.add_argument("--b", nargs="+", required=True, metavar="FILE", help=files.format("B"))
-    parser.add_argument("--target", required=True, metavar="TEXT", help='such as "chessboard 9x6 30mm"')
+    parser.add_argument("--a", nargs="+", metavar="FILE", help=files.format("A"))
+    parser.add_argument("--b", nargs="+", metavar="FILE", help=files.format("B"))
+    parser.add_argument("--target", required=True, metavar="TEXT", help='such as "chessboard 9x6 30mm", or a TOML file')
     parser.add_argument("-o", "--output", required=True, type=Path, metavar="RIG", help="where to save the rig")
+    parser.add_argument("--pair-by", choices=get_args(PairBy), default="order", help="how A's images meet B's (order)")
+    models = (*LENSES, "auto")
     parser.add_argument(
         "--model",
-        choices=(*LENSES, "auto"),
+        choices=models,
         default="pinhole 5",
-        help="lens model of each camera (pinhole 5); auto chooses by error in views held out in turn",
+        help="lens model of both cameras; auto: by error in held-out views",
     )
+    parser.add_argument("--model-a", choices=models, help="that of camera A, where it is another")
+    parser.add_argument("--model-b", choices=models, help="that of camera B, where it is another")
+    parser.add_argument(
+        "--hold-intrinsics", type=Path, metavar="RIG", help="take both cameras from this rig, as they are"
+    )
+    parser.add_argument(
+        "--hold-out", type=_share, default=0.0, metavar="SHARE", help="share of pairs kept out of the solve"
+    )
+    parser.add_argument(
+        "--measured-baseline-mm", type=float, metavar="MM", help="a measured baseline, to check scale by"
+    )
+    parser.add_argument("--cache", type=Path, default=default_folder(), metavar="DIR", help="where findings are kept")
+    parser.add_argument("--no-cache", action="store_true", help="look at every image anew and keep nothing")
+    parser.add_argument("--live", type=Path, metavar="CONFIG", help="take images from this node.toml's source, now")
+    parser.add_argument("--goal", metavar="TEXT", help='with --live: end at such certainty, as "0.5mm at 0.9m"')
+    parser.add_argument("--keep", type=Path, metavar="DIR", help="with --live: write the pairs that were taken there")
     parser.add_argument("--json", action="store_true", help="print the figures as JSON")
 
 
 def run(arguments: argparse.Namespace) -> int:
     """Calibrate and save; nothing is written unless all went well."""
     target = parse_target(arguments.target)
-    files_a, files_b = find_images(arguments.a), find_images(arguments.b)
-    _check_files(files_a, files_b)
-    looks = _look_at_all(target, [*files_a, *files_b])
-    looks_a, looks_b = looks[: len(files_a)], looks[len(files_a) :]
-    views = [
-        View(name_a=a.file.name, name_b=b.file.name, seen_a=seen_a, seen_b=seen_b, board=board)
-        for a, b in zip(looks_a, looks_b, strict=True)
-        for board, (seen_a, seen_b) in enumerate(zip(a.seen, b.seen, strict=True))
-    ]
-    result = calibrate_pair(target, views, _size_of(looks_a, "A"), _size_of(looks_b, "B"), model=arguments.model)
-    rig = replace(result.rig, notes=_notes(target, result, len(views)))
-    rig.save(arguments.output)
-    if arguments.json:
-        print(json.dumps({**_figures(rig, result), "saved": str(arguments.output)}, indent=2))
-    else:
-        _print(rig, result, len(views), arguments.output)
+    options = _solver_options(arguments)
+
+    def solve(views: Sequence[View], size_a: tuple[int, int], size_b: tuple[int, int]) -> CalibrationResult:
+        return calibrate_pair(target, views, size_a, size_b, **options)
+
+    if arguments.live:
+        return _run_live(arguments, target, solve)
+    if not (arguments.a and arguments.b):
+        raise CalibrationError("images of one camera or none; expected --a and --b, or --live with a configuration")
+    cache = None if arguments.no_cache else arguments.cache
+    looked = look_at_files(target, arguments.a, arguments.b, pair_by=arguments.pair_by, cache=cache)
+    result = solve(looked.views, looked.size_a, looked.size_b)
+    _save(arguments, target, result, len(looked.views))
+    if not arguments.json:
+        _tell_remarks(looked, result)
     return 0
 
 
-@dataclass(frozen=True, eq=False)
-class _Look:
-    """What one image showed."""
-
-    file: Path
-    size: tuple[int, int]
-    seen: tuple[Sighting | None, ...]
-
-
-def _check_files(files_a: Sequence[Path], files_b: Sequence[Path]) -> None:
-    if len(files_a) != len(files_b):
-        raise CalibrationError(
-            f"{len(files_a)} images of camera A and {len(files_b)} of camera B; expected as many of one as of the other, "
-            "in the same order: add the missing ones or narrow the patterns"
-        )
-    if shared := set(files_a) & set(files_b):
-        raise CalibrationError(
-            f"{min(shared)} is given for both cameras; expected images of two cameras: mend the patterns"
-        )
+def _solver_options(arguments: argparse.Namespace) -> dict[str, Any]:
+    options: dict[str, Any] = {name: getattr(arguments, name) for name in ("model", "model_a", "model_b")}
+    options["held_out"] = arguments.hold_out
+    if arguments.measured_baseline_mm is not None:
+        options["baseline_m"] = arguments.measured_baseline_mm / 1e3
+    if arguments.hold_intrinsics:
+        known = Rig.load(arguments.hold_intrinsics)
+        options |= {"intrinsics_a": known.a, "intrinsics_b": known.b}
+    return options
 
 
-def _look(target: Target, file: Path) -> _Look:
-    image = read_image(file)
-    return _Look(file, (image.shape[1], image.shape[0]), target.find(image))
+def _run_live(arguments: argparse.Namespace, target: Target, solve: Solve) -> int:
+    goal = parse_goal(arguments.goal) if arguments.goal else None
+    session = LiveSession(target, solve, depth_sigma_at, goal)
+    done = drive(session, arguments.live, arguments.keep)
+    if session.result is None:
+        session.solve()
+    if session.result is None:
+        raise CalibrationError(f"{len(session.views)} views were taken: {session.trouble}; nothing was saved")
+    _save(arguments, target, session.result, len(session.views))
+    if not done and goal is not None:
+        print(f"the goal, {goal}, was not reached")
+    return 0 if done or goal is None else 1
 
 
-def _look_at_all(target: Target, files: Sequence[Path]) -> list[_Look]:
-    """Look for the target in every image, several at a time: OpenCV leaves Python's lock alone meanwhile."""
-    columns = (TextColumn("looking for the target"), BarColumn(), MofNCompleteColumn(), TimeElapsedColumn())
-    console = Console(stderr=True)
-    with (
-        ThreadPoolExecutor(max_workers=os.cpu_count()) as pool,
-        Progress(*columns, console=console, transient=True, disable=not console.is_terminal) as progress,
-    ):
-        return list(progress.track(pool.map(partial(_look, target), files), total=len(files)))
+def _save(arguments: argparse.Namespace, target: Target, result: CalibrationResult, views: int) -> None:
+    rig = replace(result.rig, notes=_notes(target, result, views))
+    rig.save(arguments.output)
+    if arguments.json:
+        print(json.dumps({**_figures(rig, result), "saved": str(arguments.output)}, indent=2))
+        return
+    print_result(result, views)
+    print(f"saved {arguments.output}, rig {rig.fingerprint[:12]}")
 
 
-def _size_of(looks: Sequence[_Look], camera: str) -> tuple[int, int]:
-    first = looks[0]
-    for look in looks:
-        if look.size != first.size:
-            raise CalibrationError(
-                f"{look.file} is {look.size[0]}x{look.size[1]} pixels and {first.file} {first.size[0]}x{first.size[1]}; "
-                f"expected one size for all images of camera {camera}: leave out those of another"
-            )
-    return first.size
+def _tell_remarks(looked: Looked, result: CalibrationResult) -> None:
+    print_remarks(looked.looks, {aside.name for aside in result.set_aside})
+
+
+def _share(text: str) -> float:
+    try:
+        share = float(text)
+    except ValueError:
+        share = -1.0
+    if not 0 <= share <= 0.5:
+        raise argparse.ArgumentTypeError(f"{text}; expected a share from 0 to 0.5, such as 0.2")
+    return share
 
 
 def _notes(target: Target, result: CalibrationResult, views: int) -> dict[str, Any]:
@@ -142,22 +161,24 @@ def _notes(target: Target, result: CalibrationResult, views: int) -> dict[str, A
     }
 
 
-def _rotation_deg(rig: Rig) -> FloatArray:
-    return np.asarray(np.rad2deg(cv2.Rodrigues(np.array(rig.R))[0].ravel()), dtype=np.float64)
-
-
 def _figures(rig: Rig, result: CalibrationResult) -> dict[str, Any]:
-    cameras = {name: _camera_figures(fit) for name, fit in (("a", result.a), ("b", result.b))}
+    held = result.held_out
     return {
-        **cameras,
+        "a": _camera_figures(result.a),
+        "b": _camera_figures(result.b),
         "R": rig.R.tolist(),
         "t_m": rig.t.tolist(),
-        "rotation_vector_deg": _rotation_deg(rig).tolist(),
+        "rotation_vector_deg": rotation_deg(rig).tolist(),
         "baseline_mm": rig.baseline_m * 1e3,
         "common_views": result.pairs,
         "rms_px": result.rms_px,
+        "noise_px": result.noise_px,
         "epipolar_median_px": result.epipolar_median_px,
         "epipolar_95_px": result.epipolar_95_px,
+        "held_out": None if held is None else vars(held),
+        "sigmas": dict(zip(result.parameters.names, result.parameters.sigmas.tolist(), strict=True)),
+        "set_aside": {aside.name: aside.reason for aside in result.set_aside},
+        "models_tried": [vars(trial) for trial in result.trials],
         "warnings": list(result.warnings),
         "fingerprint": rig.fingerprint,
     }
@@ -171,29 +192,3 @@ def _camera_figures(fit: CameraFit) -> dict[str, Any]:
         "coverage": fit.coverage,
         "largest_tilt_deg": fit.tilt_deg,
     }
-
-
-def _print(rig: Rig, result: CalibrationResult, views: int, path: Path) -> None:
-    console = Console()
-    table = Table("", "camera A", "camera B", title="intrinsics", title_justify="left")
-    cameras, fits = (rig.a, rig.b), (result.a, result.b)
-    table.add_row("size, pixels", *(f"{c.width} x {c.height}" for c in cameras))
-    table.add_row("focal length, pixels", *(f"{c.K[0, 0]:.2f}, {c.K[1, 1]:.2f}" for c in cameras))
-    table.add_row("principal point, pixels", *(f"{c.K[0, 2]:.2f}, {c.K[1, 2]:.2f}" for c in cameras))
-    table.add_row("views with the target", *(f"{len(f.view_rms_px)} of {views}" for f in fits))
-    table.add_row("reprojection RMS, pixels", *(f"{f.rms_px:.3f}" for f in fits))
-    table.add_row("picture reached by corners", *(f"{f.coverage:.0%}" for f in fits))
-    console.print(table)
-    turn = _rotation_deg(rig)
-    pose = Table("", "", title="pose of B from A", title_justify="left", show_header=False)
-    pose.add_row("baseline", f"{rig.baseline_m * 1e3:.2f} mm")
-    pose.add_row("rotation", f"{np.linalg.norm(turn):.3f} degrees (vector {', '.join(f'{v:.3f}' for v in turn)})")
-    pose.add_row("views of both cameras", str(result.pairs))
-    pose.add_row("reprojection RMS", f"{result.rms_px:.3f} pixels")
-    pose.add_row(
-        "epipolar distance", f"{result.epipolar_median_px:.3f} pixels (median), {result.epipolar_95_px:.3f} (95 %)"
-    )
-    console.print(pose)
-    for warning in result.warnings:
-        print(f"warning: {warning}")
-    print(f"saved {path}, rig {rig.fingerprint[:12]}")

@@ -9,8 +9,8 @@ import logging
 import threading
 import time
 from collections import deque
-from collections.abc import Callable, Iterator, Mapping
-from contextlib import contextmanager
+from collections.abc import Callable, Generator, Mapping
+from contextlib import closing
 from typing import Any, Protocol
 
 from numpy.typing import NDArray
@@ -106,6 +106,61 @@ class HandOver:
             return self._ended and not self._pairs
 
 
+def read_ahead(
+    source: Source,
+    stop: threading.Event,
+    on_lost: Callable[[LostPair], None],
+    *,
+    on_pair: Callable[[], None] = lambda: None,
+    on_drop: Callable[[], None] = lambda: None,
+) -> Generator[Pair | None, None, None]:
+    """Read a source in a thread of its own, and give its pairs to a slower loop; the newest where the source is live.
+
+    Parameters
+    ----------
+    source : Source
+        Opened already.
+    stop : threading.Event
+        Ends the reading; it is set when the loop leaves early.
+    on_lost : callable
+        Called from the reading thread with each pair that was lost.
+    on_pair, on_drop : callable
+        Called for each pair that came, and for each that a newer one pushed out.
+
+    Yields
+    ------
+    Pair or None
+        None where none came for a tenth of a second, so that the loop may look at other things.
+    """
+    hand_over = HandOver(newest_only=source.live, on_drop=on_drop)
+    failures: list[Exception] = []
+
+    def read() -> None:
+        try:
+            for item in source.pairs(stop):
+                if isinstance(item, LostPair):
+                    on_lost(item)
+                else:
+                    on_pair()
+                    hand_over.put(item, stop)
+        except Exception as exc:  # noqa: BLE001 - handed to the thread that waits, which raises it
+            failures.append(exc)
+        finally:
+            hand_over.end()
+
+    thread = threading.Thread(target=read, name="skewline-source", daemon=True)
+    thread.start()
+    try:
+        while not stop.is_set() and not hand_over.exhausted:
+            yield hand_over.get(_TICK_S)
+    finally:
+        if not hand_over.exhausted:
+            stop.set()
+        thread.join(timeout=0.5)
+    if failures:
+        raise failures[0]
+
+
 class Node:
     """One source, one engine, one publisher; ``run`` drives them until the source ends or it is told to stop.
 
@@ -144,16 +199,16 @@ class Node:
         self._picture = picture
         self._on_status = on_status
         self._tally = Tally(publisher.session, fingerprint)
-        self._hand_over = HandOver(newest_only=source.live, on_drop=self._tally.add_dropped)
         self._lost_log = _RationedLog(log, "lost pair")
         self._bad_log = _RationedLog(log, "bad pair")
 
     def run(self, stop: threading.Event) -> NodeStatus:
         """Publish until the source ends or ``stop`` is set; return the figures of the whole run."""
         next_status_s = time.monotonic() + _STATUS_EVERY_S
-        with self._reading(stop):
-            while not stop.is_set() and not self._hand_over.exhausted:
-                pair = self._hand_over.get(_TICK_S)
+        tally = self._tally
+        ahead = read_ahead(self._source, stop, self._lost, on_pair=tally.add_pair, on_drop=tally.add_dropped)
+        with closing(ahead) as pairs:  # the reading ends with the loop, however that ends
+            for pair in pairs:
                 if pair is not None:
                     self._process(pair, stop)
                 if time.monotonic() >= next_status_s:
@@ -162,35 +217,9 @@ class Node:
         self._tell_status()
         return self._tally.summary()
 
-    @contextmanager
-    def _reading(self, stop: threading.Event) -> Iterator[None]:
-        """Run the reading thread; what goes wrong in it goes wrong here."""
-        failures: list[Exception] = []
-        thread = threading.Thread(target=self._read, args=(stop, failures), name="skewline-source", daemon=True)
-        thread.start()
-        try:
-            yield
-        finally:
-            ended = self._hand_over.exhausted
-            if not ended:  # stopped, or failing: the reader must not wait for us
-                stop.set()
-            thread.join(timeout=0.5)
-        if failures:
-            raise failures[0]
-
-    def _read(self, stop: threading.Event, failures: list[Exception]) -> None:
-        try:
-            for item in self._source.pairs(stop):
-                if isinstance(item, LostPair):
-                    self._tally.add_lost(item.reason)
-                    self._lost_log.warn(item.detail)
-                else:
-                    self._tally.add_pair()
-                    self._hand_over.put(item, stop)
-        except Exception as exc:  # noqa: BLE001 - handed to the thread that waits, which raises it
-            failures.append(exc)
-        finally:
-            self._hand_over.end()
+    def _lost(self, lost: LostPair) -> None:
+        self._tally.add_lost(lost.reason)
+        self._lost_log.warn(lost.detail)
 
     def _process(self, pair: Pair, stop: threading.Event) -> None:
         try:

@@ -9,6 +9,7 @@ from __future__ import annotations
 import re
 import threading
 from collections.abc import Callable, Sequence
+from contextlib import closing
 from dataclasses import dataclass
 from typing import Any
 
@@ -20,7 +21,8 @@ from ..calib.from_target import View
 from ..calib.guidance import Account, StillWatch, next_view, showing_of
 from ..calib.result import CalibrationResult
 from ..calib.targets import Sighting, Target
-from ..node.pairing import LostPair, Pair
+from ..node.pairing import Pair
+from ..node.runner import read_ahead
 from ..node.sources import Source
 
 FEWEST_TO_SOLVE = 6
@@ -229,12 +231,13 @@ def run_live(
     keep : callable, optional
         Called with every pair taken.
     """
-    for item in source.pairs(stop):
-        if not isinstance(item, LostPair):
-            taken = session.look(item)
-            if taken is not None and keep is not None:
-                keep(taken)
-            show(session.account())
-        if session.done:
-            return True
+    with closing(read_ahead(source, stop, on_lost=lambda _lost: None)) as pairs:
+        for pair in pairs:
+            if pair is not None:
+                taken = session.look(pair)
+                if taken is not None and keep is not None:
+                    keep(taken)
+                show(session.account())
+            if session.done:
+                break
     return session.done

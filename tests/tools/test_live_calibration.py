@@ -1,16 +1,20 @@
 """Calibrating while pictures are taken, on a rendered board that is held before both cameras."""
 
+import subprocess
+import sys
 import threading
 from collections.abc import Iterator, Sequence
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
-from skewline.calib import CalibrationError
+from skewline.calib import CalibrationError, Rig
 from skewline.calib.from_target import CalibrationResult, View, calibrate_pair
 from skewline.calib.targets import parse_target
 from skewline.node.pairing import LostPair, Pair, StampedImage
 from skewline.tools.cell import Cell, make_cell, render_target_views
+from skewline.tools.cli import main
 from skewline.tools.live_calibration import (
     FEWEST_TO_END,
     FEWEST_TO_SOLVE,
@@ -40,7 +44,7 @@ def pictures(cell: Cell) -> list[tuple[Any, Any]]:
 class Shown:
     """Pictures as a source, each shown several times in a row, as of a board that is held still and then moved."""
 
-    live = True
+    live = False
 
     def __init__(self, pictures: Sequence[tuple[Any, Any]], hold: int = HOLD) -> None:
         self._pictures = [pair for pair in pictures for _ in range(hold)]
@@ -163,3 +167,36 @@ def test_a_goal_is_read(text: str, sigma_m: float, distance_m: float) -> None:
 def test_a_goal_that_is_none_is_refused_with_an_example(text: str) -> None:
     with pytest.raises(CalibrationError, match=r'such as "0\.5mm at 0\.9m"'):
         parse_goal(text)
+
+
+@pytest.mark.timeout(240)
+def test_the_command_takes_views_from_a_source_advises_and_saves_the_rig(tmp_path: Path) -> None:
+    source = 'kind = "virtual"\nshow = "chessboard"\nframes = 11\nhold = 7\nrate_hz = 8.0\nloop = false\n'
+    (tmp_path / "live.toml").write_text(f"[source]\n{source}")
+    words = ["calibrate", "--live", str(tmp_path / "live.toml"), "--target", "chessboard 9x6 30mm"]
+    words += ["--goal", "20mm at 0.8m", "--keep", str(tmp_path / "kept"), "-o", str(tmp_path / "bench.rig.json")]
+
+    done = subprocess.run(
+        [sys.executable, "-m", "skewline.tools.cli", *words], capture_output=True, text=True, timeout=230, check=False
+    )
+
+    assert done.returncode == 0, done.stderr
+    rig, true = Rig.load(tmp_path / "bench.rig.json"), make_cell().rig
+    assert rig.t == pytest.approx(true.t, abs=1e-3)
+    assert "next: hold the board square to the cameras" in done.stderr
+    assert "goal 20 mm" in done.stderr
+    assert len(list((tmp_path / "kept").glob("a*.png"))) == FEWEST_TO_END
+    assert len(list((tmp_path / "kept").glob("b*.png"))) == FEWEST_TO_END
+
+
+def test_a_live_calibration_without_a_source_or_with_a_wrong_goal_is_bad_input(tmp_path: Path, capsys: Any) -> None:
+    (tmp_path / "node.toml").write_text('rig = "bench.rig.json"\n')
+    words = ["calibrate", "--target", "chessboard 9x6 30mm", "-o", str(tmp_path / "rig.json")]
+
+    assert main([*words, "--live", str(tmp_path / "node.toml")]) == 2
+    assert "source.kind is missing" in capsys.readouterr().err
+    assert main([*words, "--live", str(tmp_path / "node.toml"), "--goal", "soon"]) == 2
+    assert "expected a sigma in mm" in capsys.readouterr().err
+    assert main(words) == 2
+    assert "expected --a and --b, or --live" in capsys.readouterr().err
+    assert not (tmp_path / "rig.json").exists()

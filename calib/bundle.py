@@ -2,7 +2,9 @@
 
 The unknowns are the intrinsics of one or two cameras, the pose of B from A (rotation vector of a small turn applied after
 R, then t), the shape of the boards, and for every placing of a board a small turn and a translation. What is held, tied
-or free is one sparse matrix between the free unknowns and all of them.
+or free is one sparse matrix between the free unknowns and all of them. The denominator of the rational lens model, thin
+prism and tilt carry a weak prior around 0: numerator and denominator can otherwise run away together, with a pole inside
+the picture.
 """
 
 from __future__ import annotations
@@ -20,6 +22,13 @@ from .camera import Camera, FloatArray
 from .projection import Projected, camera_from, intrinsic_names, intrinsics_of, project_points
 
 _POSE_NAMES = tuple(f"pose.{name}" for name in ("rx", "ry", "rz", "tx", "ty", "tz"))
+
+_PRIOR_SIGMAS = {
+    **dict.fromkeys(("k4", "k5", "k6"), 1.0),
+    **dict.fromkeys(("s1", "s2", "s3", "s4"), 0.1),
+    **dict.fromkeys(("tau_x", "tau_y"), 0.1),
+}
+"""Of the pinhole model's higher coefficients: several times what lenses have."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -101,6 +110,18 @@ class Layout:
         self.board_starts = self.shape + 3 * np.cumsum([0, *map(len, state.boards)])
         self.placings = int(self.board_starts[-1])
         self.count = self.placings + 6 * len(state.placings)
+
+    @cached_property
+    def prior(self) -> sparse.csr_matrix:
+        """What the unknowns with a prior are divided by and where they stand, shape (priors, all)."""
+        rows = [
+            (where.start + index, 1 / _PRIOR_SIGMAS[name])
+            for where, camera in zip(self.intrinsics, self.state.cameras, strict=True)
+            for index, name in enumerate(intrinsic_names(camera.distortion.size, camera.model))
+            if camera.model == "pinhole" and name in _PRIOR_SIGMAS
+        ]
+        columns, weights = [column for column, _ in rows], [weight for _, weight in rows]
+        return sparse.csr_matrix((weights, (range(len(rows)), columns)), shape=(len(rows), self.count))
 
     @cached_property
     def origin(self) -> FloatArray:
@@ -213,10 +234,10 @@ class Problem:
         return tuple(next(by_camera[seen.camera]) for seen in self.seen)
 
     def scaled(self, free: FloatArray | None = None) -> FloatArray:
-        """Give predicted minus found over the camera's noise, shape (2 N,)."""
+        """Give predicted minus found over the camera's noise, then the priors' residuals, shape (2 N + priors,)."""
         x = self.all_unknowns(free)
         parts = [((self._project(s, x)[0].pixels - s.pixels) / self.noise[s.camera]).ravel() for s in self.stacks]
-        return np.concatenate(parts)
+        return np.concatenate([*parts, self.layout.prior @ x])
 
     def _project(self, stack: Stack, x: FloatArray) -> tuple[Projected, FloatArray, FloatArray]:
         """Project a stack's points; also give them turned in their owner's frame and then in the owner's frame."""
@@ -231,9 +252,10 @@ class Problem:
         return project_points(in_camera, x[layout.intrinsics[stack.camera]], model), turned, owned
 
     def jacobian(self, free: FloatArray | None = None) -> sparse.csr_matrix:
-        """Give the derivatives of :meth:`scaled` by the free unknowns, shape (2 N, free)."""
+        """Give the derivatives of :meth:`scaled` by the free unknowns, shape (2 N + priors, free)."""
         x = self.all_unknowns(free)
-        return sparse.vstack([self._stack_jacobian(stack, x) for stack in self.stacks], format="csr") @ self.basis
+        blocks = [*(self._stack_jacobian(stack, x) for stack in self.stacks), self.layout.prior]
+        return sparse.vstack(blocks, format="csr") @ self.basis
 
     def _stack_jacobian(self, stack: Stack, x: FloatArray) -> sparse.csr_matrix:
         layout, count = self.layout, len(stack.pixels)

@@ -1,9 +1,10 @@
 """Choosing a lens model by how well it foretells views that it was not fitted to.
 
-The rule against over-fitting: k-fold over views, and of all models the simplest whose held-out view RMS is within one
-standard error of the best one's, where the error is that of the mean difference over the same views. It is the
-one-standard-error rule of Breiman, Friedman, Olshen and Stone, Classification and Regression Trees, 1984, section 3.4.3,
-taken on paired differences, since views differ from one another far more than models do.
+The rule against over-fitting: k-fold over views, and of all models the simplest whose held-out view RMS is within two
+standard errors of the best one's, where the error is that of the mean difference over the same views. It is the
+standard-error rule of Breiman, Friedman, Olshen and Stone, Classification and Regression Trees, 1984, section 3.4.3,
+taken on paired differences, since views differ from one another far more than models do; two errors and not one, since
+the best of six is best by chance too.
 """
 
 from __future__ import annotations
@@ -21,6 +22,7 @@ from .refine import Refined, refine, rms
 from .result import ModelTrial
 
 _FOLDS = 5
+_STANDARD_ERRORS = 2.0
 _FEWEST_VIEWS = 6
 """Below this there is nothing to choose by, and the simplest model is taken."""
 
@@ -70,7 +72,7 @@ def choose_lens(
             f"no lens model fits the {len(seen)} views ({reasons}); expected views from different sides and distances"
         )
     best = min(able, key=_mean)
-    chosen = next(c for c in able if _excess(c, best) <= _standard_error(c, best))
+    chosen = next(c for c in able if _excess(c, best) <= _STANDARD_ERRORS * _standard_error(c, best))
     return chosen.lens, tuple(_trial(c, best, chosen) for c in candidates)
 
 
@@ -172,8 +174,8 @@ def _verdict(candidate: _Candidate, best: _Candidate, chosen: _Candidate) -> str
         return (
             "chosen: the best"
             if candidate is best
-            else f"chosen: the simplest within one standard error ({error:.4f} px)"
+            else f"chosen: the simplest within two standard errors ({error:.4f} px)"
         )
     if candidate is best:
-        return "the best, but by less than one standard error"
+        return "the best, but by less than two standard errors"
     return f"{excess:.4f} px above the best, standard error {error:.4f} px"

@@ -175,7 +175,9 @@ def _covariance(problem: Problem) -> tuple[FloatArray, float]:
     boards are eliminated by Schur's complement, so that the rest keeps the uncertainty they bring.
     """
     residuals, jacobian = problem.scaled(), problem.jacobian()
-    count, unknowns = jacobian.shape
+    unknowns = jacobian.shape[1]
+    residuals = residuals[: -problem.layout.prior.shape[0] or None]
+    count = len(residuals)
     inside = np.abs(residuals) <= HUBER_SIGMAS
     curvature = float(inside.mean())
     slope = np.clip(residuals, -HUBER_SIGMAS, HUBER_SIGMAS)

@@ -175,8 +175,8 @@ def _start_pinhole(seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: t
 
 
 def _start_fisheye(seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]) -> State:
-    points = [boards[s.board][s.ids].reshape(-1, 1, 3) for s in seen]
-    pixels = [s.pixels.reshape(-1, 1, 2) for s in seen]
+    points = [boards[s.board][s.ids][None] for s in seen]
+    pixels = [s.pixels[None] for s in seen]
     flags = _fisheye_flag("CALIB_RECOMPUTE_EXTRINSIC") | _fisheye_flag("CALIB_FIX_SKEW")
     try:
         _, K, distortion, turns, shifts = cv2.fisheye.calibrate(

@@ -27,6 +27,20 @@ _UNLIKELY = 0.003
 """Chance below which a change of pose is called real: 3 standard deviations of one figure."""
 
 
+_WORDS = {
+    "fx": "focal length x",
+    "fy": "focal length y",
+    "cx": "principal point x",
+    "cy": "principal point y",
+    "pose.rx": "turn of B about its x axis",
+    "pose.ry": "turn of B about its y axis",
+    "pose.rz": "turn of B about its z axis",
+    "pose.tx": "translation x",
+    "pose.ty": "translation y",
+    "pose.tz": "translation z",
+}
+
+
 @dataclass(frozen=True, kw_only=True)
 class ParameterChange:
     """One parameter of both rigs.
@@ -131,9 +145,9 @@ def compare_rigs(
     distances = [distance_m, *(volume_m or ())]
     shifts = [_depth_shift(old, new, distance) for distance in distances]
     changes = [
+        *_pose_changes(old, new),
         *_lens_changes("a", old.a, new.a, old_parameters, new_parameters),
         *_lens_changes("b", old.b, new.b, old_parameters, new_parameters),
-        *_pose_changes(old, new),
     ]
     chance = _pose_chance(old, new)
     return RigComparison(
@@ -184,19 +198,24 @@ def _depth_shift(old: Rig, new: Rig, distance_m: float) -> DepthShift:
     )
 
 
+def parameter_words(name: str) -> str:
+    """Say in plain words what a parameter is: ``a.fx`` is camera A's focal length x."""
+    owner, _, short = name.partition(".")
+    if owner == "pose":
+        return _WORDS.get(name, name)
+    return f"camera {owner.upper()} {_WORDS.get(short, f'lens {short}')}"
+
+
 def _lens_changes(
     key: str, old: Camera, new: Camera, old_parameters: Parameters | None, new_parameters: Parameters | None
 ) -> list[ParameterChange]:
-    values = [
-        (name, "px", float(old.K[row, column]), float(new.K[row, column]), _WORDS[name])
-        for name, row, column in _K_ENTRIES
-    ]
+    values = [(name, "px", float(old.K[row, column]), float(new.K[row, column])) for name, row, column in _K_ENTRIES]
     names = COEFFICIENTS[old.model][: len(old.distortion)]
     lens = zip(names, old.distortion.tolist(), new.distortion.tolist(), strict=True)
-    values += [(name, "", before, after, f"lens {name}") for name, before, after in lens]
+    values += [(name, "", before, after) for name, before, after in lens]
     return [
         ParameterChange(
-            name=f"camera {key.upper()} {words}",
+            name=parameter_words(f"{key}.{name}"),
             unit=unit,
             old=before,
             new=after,
@@ -205,7 +224,7 @@ def _lens_changes(
                 after - before, _variance(old_parameters, f"{key}.{name}"), _variance(new_parameters, f"{key}.{name}")
             ),
         )
-        for name, unit, before, after, words in values
+        for name, unit, before, after in values
     ]
 
 
@@ -235,7 +254,7 @@ def _pose_changes(old: Rig, new: Rig) -> list[ParameterChange]:
         variances = [None if rig.covariance is None else float(rig.covariance[index, index]) for rig in (old, new)]
         changes.append(
             ParameterChange(
-                name=_WORDS[name],
+                name=parameter_words(name),
                 unit="mm" if index > 2 else "degrees",
                 old=float(befores[index] * scale),
                 new=float((befores[index] + step[index]) * scale),
@@ -347,17 +366,3 @@ def comparison_figures(comparison: RigComparison) -> dict[str, Any]:
             {**asdict(shift), "corners_mm": list(shift.corners_mm), "largest_mm": shift.largest_mm} for shift in shifts
         ],
     }
-
-
-_WORDS = {
-    "fx": "focal length x",
-    "fy": "focal length y",
-    "cx": "principal point x",
-    "cy": "principal point y",
-    "pose.rx": "turn of B about its x axis",
-    "pose.ry": "turn of B about its y axis",
-    "pose.rz": "turn of B about its z axis",
-    "pose.tx": "translation x",
-    "pose.ty": "translation y",
-    "pose.tz": "translation z",
-}

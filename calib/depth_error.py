@@ -36,6 +36,7 @@ _STEP = 0.1
 """Share of a standard deviation by which the numerical derivative moves: far from rounding, near enough to straight."""
 
 _VIEW_GRID = (17, 13)
+_UNSEEN = (np.nan, np.nan)
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -64,8 +65,8 @@ class DepthErrorCurve:
     Attributes
     ----------
     distances_m : ndarray
-    calibration_centre_m, calibration_corner_m : ndarray
-        From the parameters' covariance, in the middle of the common view and in the worst of its corners.
+    calibration_centre_m, calibration_worst_m : ndarray
+        From the parameters' covariance, in the middle of the common view and at its worst place.
     matching_m : ndarray
         From a disparity's standard deviation of ``matching_sigma_px``.
     matching_sigma_px : float
@@ -73,7 +74,7 @@ class DepthErrorCurve:
 
     distances_m: FloatArray
     calibration_centre_m: FloatArray
-    calibration_corner_m: FloatArray
+    calibration_worst_m: FloatArray
     matching_m: FloatArray
     matching_sigma_px: float
 
@@ -83,9 +84,9 @@ class DepthErrorCurve:
         return np.hypot(self.calibration_centre_m, self.matching_m)
 
     @property
-    def corner_m(self) -> FloatArray:
-        """Both parts together, in the worst corner of the common view."""
-        return np.hypot(self.calibration_corner_m, self.matching_m)
+    def worst_m(self) -> FloatArray:
+        """Both parts together, at the worst place of the common view."""
+        return np.hypot(self.calibration_worst_m, self.matching_m)
 
 
 def depth_axis(rig: Rig) -> FloatArray:
@@ -293,7 +294,7 @@ def depth_error_curve(
     far_m: float,
     *,
     disparity_sigma_px: float = MATCHING_SIGMA_PX,
-    count: int = 25,
+    count: int = 17,
 ) -> DepthErrorCurve:
     """Work out the expected depth error over a working volume.
 
@@ -316,15 +317,16 @@ def depth_error_curve(
         raise CalibrationError(f"working volume from {near_m} m to {far_m} m; expected 0 < near < far")
     distances = np.linspace(near_m, far_m, count)
     views = [common_view(result.rig, float(distance)) for distance in distances]
-    picked = [view.points_a[[view.centre, *view.corners]] for view in views if len(view.points_a)]
-    sigmas = np.full((count, 5), np.nan)
-    if picked:
-        some = np.array([len(view.points_a) > 0 for view in views])
-        sigmas[some] = depth_sigma_from_calibration(result, np.concatenate(picked)).reshape(-1, 5)
+    sigmas = depth_sigma_from_calibration(result, np.concatenate([view.points_a for view in views]))
+    shares = np.split(sigmas, np.cumsum([len(view.points_a) for view in views])[:-1])
+    both = [
+        (share[view.centre], share.max()) if len(share) else _UNSEEN for view, share in zip(views, shares, strict=True)
+    ]
+    centre, worst = np.array(both).T
     return DepthErrorCurve(
         distances_m=distances,
-        calibration_centre_m=sigmas[:, 0],
-        calibration_corner_m=sigmas[:, 1:].max(axis=1),
+        calibration_centre_m=centre,
+        calibration_worst_m=worst,
         matching_m=depth_sigma_from_matching(result.rig, distances, disparity_sigma_px),
         matching_sigma_px=disparity_sigma_px,
     )

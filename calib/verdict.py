@@ -69,6 +69,7 @@ class Finding:
     what : str
         The figure and its limit.
     remedy : str
+        Empty where it is a warning of the calibration, which names its own.
     """
 
     grade: Grade
@@ -195,7 +196,7 @@ def _depth_findings(curve: DepthErrorCurve) -> list[Finding]:
                 remedy="Name the distances where both cameras look at one place, or turn the cameras and calibrate anew.",
             )
         ]
-    share = float(np.max(curve.calibration_corner_m / curve.distances_m))
+    share = float(np.max(curve.calibration_worst_m / curve.distances_m))
     return _at_most(
         "the depth error that the calibration causes, at its worst in the working volume,",
         share,
@@ -270,14 +271,7 @@ def _view_findings(result: CalibrationResult) -> list[Finding]:
             "degrees",
             "Tilt the target by 20 to 40 degrees, to either side, up and down.",
         )
-    if result.warnings:
-        found.append(
-            Finding(
-                grade="doubtful",
-                what=f"{len(result.warnings)} warning{'s' if len(result.warnings) > 1 else ''} of the calibration stand",
-                remedy="Deal with each of the warnings listed here, then calibrate again.",
-            )
-        )
+    found += [Finding(grade="doubtful", what=warning, remedy="") for warning in result.warnings]
     return found
 
 
@@ -287,8 +281,8 @@ def _sentence(curve: DepthErrorCurve, grade: Grade, findings: tuple[Finding, ...
         return f"Between {near:.2f} m and {far:.2f} m its depth cannot be relied on: {findings[0].what}."
     first = f"Expect depth to be off by {_mm(curve.centre_m[0])} at {near:.2f} m and {_mm(curve.centre_m[-1])} at {far:.2f} m"
     second = (
-        f"(one standard deviation, middle of the picture; in the worst corner {_mm(curve.corner_m[0])} and "
-        f"{_mm(curve.corner_m[-1])}) where the surface has texture enough to be matched to {curve.matching_sigma_px:g} px."
+        f"(one standard deviation, middle of the picture; at its worst place {_mm(curve.worst_m[0])} and "
+        f"{_mm(curve.worst_m[-1])}) where the surface has texture enough to be matched to {curve.matching_sigma_px:g} px."
     )
     doubt = "" if grade == "good" else f" Take these figures as a best case: {findings[0].what}."
     return f"{first} {second}{doubt}"

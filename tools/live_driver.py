@@ -31,7 +31,7 @@ def depth_sigma_at(result: CalibrationResult, distance_m: float) -> float:
     return float(depth_sigma_from_calibration(result, chosen).max())
 
 
-def drive(session: LiveSession, config: Path, keep: Path | None) -> bool:
+def drive(session: LiveSession, config: Path, keep: Path | None, taken: list[TakenPair] | None = None) -> bool:
     """Run a session on the source that a configuration names; tell whether it was done.
 
     Parameters
@@ -41,6 +41,8 @@ def drive(session: LiveSession, config: Path, keep: Path | None) -> bool:
         A TOML file with a table ``[source]``, as ``skewline run`` reads it.
     keep : Path, optional
         Folder for the images of the views that are taken.
+    taken : list, optional
+        Where those images are put as well.
 
     Raises
     ------
@@ -51,7 +53,15 @@ def drive(session: LiveSession, config: Path, keep: Path | None) -> bool:
     """
     kind, settings, base = load_source(config, SOURCES)
     with stop_on_signals() as stop, kind.open(settings, base) as source, _display() as show:
-        return run_live(session, source, stop, show=show, keep=None if keep is None else _keeper(keep))
+        write = None if keep is None else _keeper(keep)
+
+        def put_by(pair: TakenPair) -> None:
+            if write is not None:
+                write(pair)
+            if taken is not None:
+                taken.append(pair)
+
+        return run_live(session, source, stop, show=show, keep=put_by)
 
 
 def _keeper(folder: Path) -> Callable[[TakenPair], None]:

@@ -116,7 +116,7 @@ def test_both_parts_of_the_curve_add_in_squares_and_grow_with_distance(result: C
     curve = depth_error_curve(result, 0.5, 1.2, disparity_sigma_px=0.2)
 
     assert curve.centre_m**2 == pytest.approx(curve.calibration_centre_m**2 + curve.matching_m**2)
-    assert curve.corner_m**2 == pytest.approx(curve.calibration_corner_m**2 + curve.matching_m**2)
+    assert curve.worst_m**2 == pytest.approx(curve.calibration_worst_m**2 + curve.matching_m**2)
     assert np.all(np.diff(curve.centre_m) > 0)
     assert curve.distances_m[[0, -1]] == pytest.approx([0.5, 1.2])
 

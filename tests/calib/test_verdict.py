@@ -22,7 +22,7 @@ def test_a_careful_calibration_is_good_and_its_depth_errors_are_those_of_the_cur
 
     assert (verdict.grade, verdict.findings) == ("good", ())
     assert verdict.headline.startswith("Yes")
-    for metres in (verdict.curve.centre_m[0], verdict.curve.centre_m[-1], verdict.curve.corner_m[-1]):
+    for metres in (verdict.curve.centre_m[0], verdict.curve.centre_m[-1], verdict.curve.worst_m[-1]):
         assert f"{metres * 1e3:.2g} mm" in verdict.sentence
     assert "0.1 px" in verdict.sentence
 
@@ -61,7 +61,7 @@ def test_one_figure_over_its_limit_lowers_the_grade(
         ({"pairs": 9}, "doubtful", "number of views that both cameras saw is 9; it should be 10 or more"),
         ({"pairs": 2}, "not usable", "it should be 3 or more"),
         ({"held_out": None}, "doubtful", "no view was held out"),
-        ({"warnings": ("a01.png: blurred",)}, "doubtful", "1 warning of the calibration stand"),
+        ({"warnings": ("a01.png: blurred",)}, "doubtful", "a01.png: blurred"),
         ({"rms_px": float("nan")}, "not usable", "is not known"),
     ],
 )
@@ -72,7 +72,7 @@ def test_what_is_missing_or_too_little_lowers_the_grade(
 
     assert verdict.grade == grade
     assert any(words in finding.what for finding in verdict.findings)
-    assert all(finding.remedy for finding in verdict.findings)
+    assert all(finding.remedy or finding.what in changes["warnings"] for finding in verdict.findings)
 
 
 @pytest.mark.parametrize("camera", ["a", "b"])
@@ -107,7 +107,7 @@ def test_held_out_epipolar_distances_are_held_to_the_same_limits(good: Calibrati
 def test_parameters_known_too_poorly_for_the_distance_lower_the_grade_however_well_the_corners_fit(
     good: CalibrationResult,
 ) -> None:
-    worst = float(np.max(judge(good, NEAR, FAR).curve.calibration_corner_m / np.linspace(NEAR, FAR, 25)))
+    worst = float(np.max(judge(good, NEAR, FAR).curve.calibration_worst_m / np.linspace(NEAR, FAR, 17)))
     grades = []
     for share in (0.9 * CARE.depth_share, 2 * CARE.depth_share, 2 * BAD.depth_share):
         grown = good.parameters.covariance * (share / worst) ** 2

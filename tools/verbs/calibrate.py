@@ -5,22 +5,30 @@ from __future__ import annotations
 import argparse
 import datetime
 import json
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 from pathlib import Path
 from typing import Any, get_args
 
+import numpy as np
+from numpy.typing import NDArray
+
 from ...calib import CalibrationError, Rig
+from ...calib.compare import compare_rigs, comparison_figures, comparison_text
 from ...calib.from_target import View, calibrate_pair
+from ...calib.images import grey_8_bit, read_image
 from ...calib.one_camera import LENSES
+from ...calib.report import write_report
 from ...calib.result import CalibrationResult, CameraFit
 from ...calib.targets import Target, parse_target
 from ...calib.views import PairBy
 from ..calibration_text import print_remarks, print_result, rotation_deg
 from ..calibration_views import Looked, look_at_files
-from ..live_calibration import LiveSession, Solve, parse_goal
+from ..live_calibration import LiveSession, Solve, TakenPair, parse_goal
 from ..live_driver import depth_sigma_at, drive
 from ..sighting_cache import default_folder
+
+Pictures = dict[tuple[str, str], NDArray[np.uint8]]
 
 _DESCRIPTION = (
     "Calibrate two cameras from pairs of images of a target, taken before or while it runs, and save the rig."
@@ -75,6 +83,11 @@ def configure(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--live", type=Path, metavar="CONFIG", help="take images from this node.toml's source, now")
     parser.add_argument("--goal", metavar="TEXT", help='with --live: end at such certainty, as "0.5mm at 0.9m"')
     parser.add_argument("--keep", type=Path, metavar="DIR", help="with --live: write the pairs that were taken there")
+    parser.add_argument("--report", type=Path, metavar="HTML", help="write a report with pictures, one file")
+    parser.add_argument("--compare", type=Path, metavar="RIG", help="tell what changed since this rig")
+    volume = "{} end of the working volume, for the report and the comparison; by default that of the target's places"
+    parser.add_argument("--near-m", type=float, metavar="M", help=volume.format("near"))
+    parser.add_argument("--far-m", type=float, metavar="M", help=volume.format("far"))
     parser.add_argument("--json", action="store_true", help="print the figures as JSON")
 
 
@@ -93,9 +106,9 @@ def run(arguments: argparse.Namespace) -> int:
     cache = None if arguments.no_cache else arguments.cache
     looked = look_at_files(target, arguments.a, arguments.b, pair_by=arguments.pair_by, cache=cache)
     result = solve(looked.views, looked.size_a, looked.size_b)
-    _save(arguments, target, result, len(looked.views))
+    _finish(arguments, target, result, len(looked.views), lambda: _pictures(looked, result))
     if not arguments.json:
-        _tell_remarks(looked, result)
+        print_remarks(looked.looks, {aside.name for aside in result.set_aside})
     return 0
 
 
@@ -112,30 +125,73 @@ def _solver_options(arguments: argparse.Namespace) -> dict[str, Any]:
 
 def _run_live(arguments: argparse.Namespace, target: Target, solve: Solve) -> int:
     goal = parse_goal(arguments.goal) if arguments.goal else None
-    session = LiveSession(target, solve, depth_sigma_at, goal)
-    done = drive(session, arguments.live, arguments.keep)
+    session, taken = LiveSession(target, solve, depth_sigma_at, goal), list[TakenPair]()
+    done = drive(session, arguments.live, arguments.keep, taken if arguments.report else None)
     if session.result is None:
         session.solve()
     if session.result is None:
         raise CalibrationError(f"{len(session.views)} views were taken: {session.trouble}; nothing was saved")
-    _save(arguments, target, session.result, len(session.views))
+    _finish(arguments, target, session.result, len(session.views), lambda: _taken_pictures(taken))
     if not done and goal is not None:
         print(f"the goal, {goal}, was not reached")
     return 0 if done or goal is None else 1
 
 
-def _save(arguments: argparse.Namespace, target: Target, result: CalibrationResult, views: int) -> None:
+def _finish(
+    arguments: argparse.Namespace,
+    target: Target,
+    result: CalibrationResult,
+    views: int,
+    pictures: Callable[[], Pictures],
+) -> None:
+    """Compare, save, report and print; the old rig is read before the new one may take its place."""
+    old = Rig.load(arguments.compare) if arguments.compare else None
+    near_m, far_m = _volume(arguments, result)
+    middle = 2 / (1 / near_m + 1 / far_m)
+    comparison = (
+        None
+        if old is None
+        else compare_rigs(
+            old, result.rig, distance_m=middle, volume_m=(near_m, far_m), new_parameters=result.parameters
+        )
+    )
     rig = replace(result.rig, notes=_notes(target, result, views))
     rig.save(arguments.output)
+    if arguments.report:
+        write_report(arguments.report, result, near_m=near_m, far_m=far_m, thumbnails=pictures(), old=old)
     if arguments.json:
-        print(json.dumps({**_figures(rig, result), "saved": str(arguments.output)}, indent=2))
+        compared = None if comparison is None else comparison_figures(comparison)
+        figures = {**_figures(rig, result), "comparison": compared, "saved": str(arguments.output)}
+        print(json.dumps(figures, indent=2))
         return
     print_result(result, views)
+    if comparison is not None:
+        print(comparison_text(comparison))
     print(f"saved {arguments.output}, rig {rig.fingerprint[:12]}")
+    if arguments.report:
+        print(f"report: {arguments.report}")
 
 
-def _tell_remarks(looked: Looked, result: CalibrationResult) -> None:
-    print_remarks(looked.looks, {aside.name for aside in result.set_aside})
+def _volume(arguments: argparse.Namespace, result: CalibrationResult) -> tuple[float, float]:
+    """Give the working volume: as asked for, or from the nearest to the furthest place of the target before camera A."""
+    distances = [view.T_camera_board[2, 3] for view in result.views if view.camera == "a"]
+    near_m = round(min(distances), 2) if arguments.near_m is None else arguments.near_m
+    far_m = round(max(distances), 2) if arguments.far_m is None else arguments.far_m
+    if not 0 < near_m < far_m:
+        raise CalibrationError(f"--near-m {near_m:g}, --far-m {far_m:g}; expected 0 < near < far, in metres")
+    return float(near_m), float(far_m)
+
+
+def _pictures(looked: Looked, result: CalibrationResult) -> Pictures:
+    """Read the images of the views that the report shows."""
+    wanted = {(view.camera, view.name) for view in result.views}
+    return {key: grey_8_bit(read_image(file)) for key, file in looked.files.items() if key in wanted}
+
+
+def _taken_pictures(taken: Sequence[TakenPair]) -> Pictures:
+    named = [("a", f"a{pair.number:02d}.png", pair.image_a) for pair in taken]
+    named += [("b", f"b{pair.number:02d}.png", pair.image_b) for pair in taken]
+    return {(camera, name): grey_8_bit(image) for camera, name, image in named}
 
 
 def _share(text: str) -> float:

@@ -1,0 +1,318 @@
+"""The report's plots, each an SVG text that stands inside an HTML page on its own.
+
+Colours are those that people with any colour vision tell apart (Okabe and Ito, 2008), and no colour stands alone: lines
+differ in dashes, marks in shape, areas in hatching.
+"""
+
+from __future__ import annotations
+
+import io
+import re
+from collections.abc import Iterable, Sequence
+from typing import TYPE_CHECKING
+
+import cv2
+import numpy as np
+
+from .camera import Camera, FloatArray
+from .depth_error import DepthErrorCurve, common_view
+from .errors import CalibrationError
+from .result import CalibrationResult, ViewFit
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+BLUE, ORANGE, GREEN, INK, PALE = "#0072b2", "#d55e00", "#007a5a", "#222222", "#8a8a8a"
+
+_GRID = (8, 6)
+"""The cells in which coverage is counted, as in ``CameraFit.coverage``."""
+
+_VECTOR_SHARE = 0.035
+"""Length of a large residual on the plot, as a share of the image's width."""
+
+
+_SAME_PLACE_M = 1e-3
+
+_DOT_PX = 0.5
+"""A line without any length is left out of the drawing."""
+
+
+def new_figure(width_in: float, height_in: float) -> Figure:
+    """Make an empty figure without any global state.
+
+    Raises
+    ------
+    CalibrationError
+        Where matplotlib is not installed.
+    """
+    try:
+        from matplotlib.figure import Figure
+    except ImportError as exc:
+        raise CalibrationError(
+            'a report needs matplotlib, which is not installed: pip install "skewline[report]"'
+        ) from exc
+    return Figure(figsize=(width_in, height_in), layout="constrained")
+
+
+def svg(figure: Figure, name: str, alt: str) -> str:
+    """Write a figure as inline SVG, the same bytes every time, its ids told apart by the name.
+
+    Parameters
+    ----------
+    figure : Figure
+    name : str
+        Of letters and dashes; unique on the page.
+    alt : str
+        What the plot shows, for a person who does not see it.
+    """
+    from matplotlib import rc_context
+
+    sink = io.StringIO()
+    with rc_context({"svg.hashsalt": name, "svg.fonttype": "none", "font.size": 10, "path.simplify": False}):
+        figure.savefig(sink, format="svg", metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
+    text = sink.getvalue()
+    text = text[text.index("<svg") :]
+    text = re.sub(r"<metadata>.*?</metadata>", "", text, flags=re.DOTALL)
+    head, _, body = text.partition(">")
+    box = re.search(r'viewBox="[^"]*"', head)
+    # Inside HTML the namespaces go without saying, and the page sets the size.
+    start = f'<svg {box.group(0) if box else ""} role="img" aria-label="{_attribute(alt)}">'
+    body = re.sub(r'\bid="', f'id="{name}-', body)
+    body = re.sub(r"url\(#", f"url(#{name}-", body)
+    body = re.sub(r'xlink:href="#', f'href="#{name}-', body)
+    return start + body.strip()
+
+
+def _attribute(text: str) -> str:
+    return text.replace("&", "&amp;").replace('"', "&quot;").replace("<", "&lt;")
+
+
+def _image_axes(figure: Figure, camera: Camera, title: str) -> Axes:
+    """Make axes that are the camera's image: x right, y down."""
+    axes = figure.add_subplot(1, 1, 1)
+    axes.set(xlim=(-0.5, camera.width - 0.5), ylim=(camera.height - 0.5, -0.5), aspect="equal", title=title)
+    axes.set(xlabel="pixels", ylabel="pixels")
+    return axes
+
+
+def _of(result: CalibrationResult, camera: str) -> list[ViewFit]:
+    return [view for view in result.views if view.camera == camera]
+
+
+def _stack(parts: Iterable[FloatArray]) -> FloatArray:
+    return np.concatenate([np.zeros((0, 2)), *parts])
+
+
+def residual_vectors(result: CalibrationResult, camera: str) -> str:
+    """Draw each corner's residual as an arrow where the corner was seen, enlarged, with a key."""
+    views = _of(result, camera)
+    lens: Camera = getattr(result.rig, camera)
+    lengths = np.linalg.norm(_stack(view.residuals_px for view in views), axis=1)
+    large = float(np.percentile(lengths, 95)) if len(lengths) else 0.0
+    scale = _VECTOR_SHARE * lens.width / large if large > 0 else 1.0
+    key = _round_below(large)
+    figure = new_figure(6.2, 5.1)
+    axes = _image_axes(figure, lens, "")
+    for used, colour, place in ((True, BLUE, 0.0), (False, ORANGE, 0.45)):
+        pixels = _stack(view.pixels for view in views if view.used is used)
+        if not len(pixels):
+            continue
+        arrows = _stack(view.residuals_px for view in views if view.used is used) * scale
+        axes.plot(*_arrow_lines(pixels, arrows).T, color=colour, linewidth=0.8)
+        if not used:
+            axes.plot(*_dots(pixels).T, color=colour, linewidth=2.6, solid_capstyle="round")
+        foot = np.array([[(place + 0.01) * lens.width, -0.045 * lens.height]])
+        axes.plot(*_arrow_lines(foot, np.array([[key * scale, 0.0]])).T, color=colour, linewidth=1.6, clip_on=False)
+        text = f"{key:g} px, {'view used' if used else 'held out (dot at the foot)'}"
+        axes.text(foot[0, 0] + key * scale * 1.3, foot[0, 1], text, va="center", fontsize=9)
+    axes.set_title(
+        f"Camera {camera.upper()}: found minus predicted, drawn {scale:.0f} times longer", pad=24, fontsize=10
+    )
+    alt = f"Arrows over the image of camera {camera.upper()}; 95 % of {len(lengths)} residuals are below {large:.2f} pixels."
+    return svg(figure, f"vectors-{camera}", alt)
+
+
+def _arrow_lines(feet: FloatArray, arrows: FloatArray) -> FloatArray:
+    """Give arrows as one line with gaps, shape (7 N, 2): one path draws faster than thousands of shapes."""
+    tips = feet + arrows
+    turned = np.column_stack([-arrows[:, 1], arrows[:, 0]])
+    gap = np.full_like(feet, np.nan)
+    barbs = [tips - 0.3 * arrows + side * 0.15 * turned for side in (1, -1)]
+    return np.stack([feet, tips, gap, barbs[0], tips, barbs[1], gap], axis=1).reshape(-1, 2)
+
+
+def _dots(points: FloatArray) -> FloatArray:
+    """Give points as lines almost without length, which round ends make dots; shape (3 N, 2)."""
+    return np.stack([points, points + np.array([_DOT_PX, 0.0]), np.full_like(points, np.nan)], axis=1).reshape(-1, 2)
+
+
+def _round_below(value: float) -> float:
+    """Give the largest of 1, 2 or 5 times a power of ten that is not above the value."""
+    if value <= 0:
+        return 1.0
+    power = 10.0 ** np.floor(np.log10(value))
+    return float(max(step for step in (1, 2, 5) if step * power <= value * (1 + 1e-9)) * power)
+
+
+def residual_histogram(result: CalibrationResult) -> str:
+    """Draw how residuals in x and y spread, against the normal curve of the estimated noise."""
+    figure = new_figure(9.2, 3.4)
+    worst = max((float(np.abs(view.residuals_px).max()) for view in result.views), default=1.0)
+    noise = max(result.noise_px, 1e-6)
+    reach = min(max(4 * noise, 1e-6), max(worst, noise) * 1.05)
+    edges = np.linspace(-reach, reach, 42)
+    beyond = 0
+    for number, camera in enumerate("ab", start=1):
+        axes = figure.add_subplot(1, 2, number)
+        residuals = _stack(view.residuals_px for view in _of(result, camera) if view.used)
+        beyond += int((np.abs(residuals) > reach).sum())
+        for column, colour, dashes in ((0, BLUE, "-"), (1, ORANGE, "--")):
+            if len(residuals):
+                counts = np.histogram(residuals[:, column], bins=edges)[0] / (len(residuals) * np.diff(edges))
+                axes.stairs(counts, edges, color=colour, linestyle=dashes, linewidth=1.4, label="xy"[column])
+        x = np.linspace(-reach, reach, 200)
+        axes.plot(
+            x, np.exp(-((x / noise) ** 2) / 2) / (noise * np.sqrt(2 * np.pi)), color=INK, ls=":", lw=1.6, label="normal"
+        )
+        axes.set(title=f"Camera {camera.upper()}", xlabel="residual, pixels", yticks=[], ylabel="share of corners")
+        axes.legend(frameon=False)
+    alt = f"Histograms of residuals beside a normal curve of {result.noise_px:.3f} pixels; {beyond} residuals lie off the plot."
+    return svg(figure, "histogram", alt)
+
+
+def coverage(result: CalibrationResult, camera: str) -> str:
+    """Draw where in the image corners were seen; cells without any are hatched."""
+    from matplotlib.patches import Rectangle
+
+    lens: Camera = getattr(result.rig, camera)
+    pixels = _stack(view.pixels for view in _of(result, camera))
+    figure = new_figure(5.2, 4.2)
+    axes = _image_axes(figure, lens, f"Camera {camera.upper()}: hatched = no corner seen there")
+    edges = np.linspace(0, lens.width, _GRID[0] + 1), np.linspace(0, lens.height, _GRID[1] + 1)
+    counts = np.histogram2d(pixels[:, 0], pixels[:, 1], bins=edges)[0]
+    for column, row in np.argwhere(counts == 0):
+        corner = (edges[0][column], edges[1][row])
+        wide, high = np.diff(edges[0])[0], np.diff(edges[1])[0]
+        axes.add_patch(Rectangle(corner, wide, high, facecolor="#fbe3d2", edgecolor=ORANGE, hatch="///", linewidth=0))
+    axes.plot(*_dots(pixels).T, color=BLUE, linewidth=2.2, solid_capstyle="round")
+    axes.set(xticks=edges[0], yticks=edges[1])
+    axes.tick_params(labelsize=7)
+    axes.grid(color=PALE, linewidth=0.5)
+    alt = f"Corners in the image of camera {camera.upper()}: {int((counts > 0).sum())} of {counts.size} cells hold one or more."
+    return svg(figure, f"coverage-{camera}", alt)
+
+
+def boards_in_a(result: CalibrationResult) -> list[tuple[ViewFit, FloatArray]]:
+    """Give the points of every board in A's frame, (N, 3) in metres; of a board that both saw, as A saw it.
+
+    Where the corners' rays cut the board's plane: a board that is not flat is drawn as if it were.
+    """
+    by_a = _of(result, "a")
+    chosen = [*by_a, *(view for view in _of(result, "b") if not any(_same_board(result, seen, view) for seen in by_a))]
+    return [(view, _on_board(result, view)) for view in chosen]
+
+
+def _same_board(result: CalibrationResult, seen_a: ViewFit, seen_b: ViewFit) -> bool:
+    """Tell whether two views show one board at one instant: it stands at one place, to a millimetre."""
+    place: FloatArray = (seen_b.T_camera_board[:3, 3] - result.rig.t) @ result.rig.R
+    return seen_a.board == seen_b.board and bool(np.linalg.norm(place - seen_a.T_camera_board[:3, 3]) < _SAME_PLACE_M)
+
+
+def _on_board(result: CalibrationResult, view: ViewFit) -> FloatArray:
+    lens: Camera = getattr(result.rig, view.camera)
+    rays, normal, place = lens.rays(view.pixels), view.T_camera_board[:3, 2], view.T_camera_board[:3, 3]
+    points = rays * ((normal @ place) / (rays @ normal))[:, None]
+    points = points[np.isfinite(points).all(axis=1)]
+    in_a: FloatArray = points if view.camera == "a" else (points - result.rig.t) @ result.rig.R
+    return in_a
+
+
+def poses(result: CalibrationResult, near_m: float, far_m: float) -> str:
+    """Draw both cameras, the boards and the working volume from above and from the side."""
+    figure = new_figure(9.2, 5.2)
+    boards = boards_in_a(result)
+    for number, (title, across) in enumerate((("From above", 0), ("From the side", 1)), start=1):
+        axes = figure.add_subplot(1, 2, number)
+        for view, points in boards:
+            if len(points) < 3:
+                continue
+            flat = np.ascontiguousarray(points[:, [across, 2]], dtype=np.float32)
+            outline = cv2.convexHull(flat).reshape(-1, 2)
+            axes.fill(
+                *outline.T,
+                facecolor=BLUE if view.used else "none",
+                edgecolor=BLUE if view.used else ORANGE,
+                alpha=0.35 if view.used else 1.0,
+                linestyle="-" if view.used else "--",
+                linewidth=1,
+            )
+        _draw_cameras(axes, result, across, 0.25 * near_m)
+        _draw_volume(axes, result, across, (near_m, far_m))
+        side = "x: right of camera A, m" if across == 0 else "y: below camera A, m"
+        axes.set(title=title, xlabel=side, ylabel="z: ahead of camera A, m", aspect="equal")
+        axes.set_adjustable("datalim")
+        axes.grid(color="#dddddd", linewidth=0.5)
+    held = sum(not view.used for view, _ in boards)
+    alt = f"{len(boards)} boards, {held} of them held out, before both cameras, from above and from the side."
+    return svg(figure, "poses", alt)
+
+
+def _draw_cameras(axes: Axes, result: CalibrationResult, across: int, reach_m: float) -> None:
+    """Draw each camera as the wedge it sees, a short way out."""
+    rig = result.rig
+    for lens, R, centre, name, colour, mark, aside in (
+        (rig.a, np.eye(3), np.zeros(3), "A", INK, "s", -8),
+        (rig.b, rig.R.T, rig.centre_b, "B", GREEN, "^", 8),
+    ):
+        middle = (np.array(lens.size) - 1) / 2
+        ends = np.tile(middle, (2, 1))
+        ends[:, across] = (-0.5, lens.size[across] - 0.5)
+        tips = centre + reach_m * lens.rays(ends) @ R.T
+        for tip in tips:
+            axes.plot([centre[across], tip[across]], [centre[2], tip[2]], color=colour, linewidth=1.2)
+        axes.plot(centre[across], centre[2], mark, color=colour, markersize=7)
+        axes.annotate(
+            name, (centre[across], centre[2]), (aside, -14), textcoords="offset points", color=colour, ha="center"
+        )
+
+
+def _draw_volume(axes: Axes, result: CalibrationResult, across: int, ends_m: Sequence[float]) -> None:
+    """Mark the common view at the near and the far distance."""
+    for distance, name in zip(ends_m, ("near", "far"), strict=True):
+        points = common_view(result.rig, distance).points_a
+        if not len(points):
+            continue
+        ends = points[[int(points[:, across].argmin()), int(points[:, across].argmax())]]
+        axes.plot(ends[:, across], ends[:, 2], color=INK, linestyle=":", linewidth=1.5)
+        axes.annotate(
+            f"{name} {distance:g} m", (ends[0, across], ends[0, 2]), (0, 4), textcoords="offset points", fontsize=8
+        )
+
+
+def depth_error(curve: DepthErrorCurve) -> str:
+    """Draw the expected depth error against distance, in millimetres."""
+    figure = new_figure(9.2, 4.2)
+    axes = figure.add_subplot(1, 1, 1)
+    lines = (
+        (curve.worst_m, ORANGE, "-", "all, worst place"),
+        (curve.centre_m, BLUE, "-", "all, middle"),
+        (curve.calibration_worst_m, ORANGE, "--", "calibration, worst place"),
+        (curve.calibration_centre_m, BLUE, "--", "calibration, middle"),
+        (curve.matching_m, INK, ":", f"matching to {curve.matching_sigma_px:g} px"),
+    )
+    for metres, colour, dashes, label in lines:
+        width = 2.2 if dashes == "-" else 1.6
+        axes.plot(curve.distances_m, metres * 1e3, color=colour, linestyle=dashes, linewidth=width, label=label)
+    axes.set(
+        xlabel="distance, m", ylabel="depth error (1 sigma), mm", xlim=(curve.distances_m[0], curve.distances_m[-1])
+    )
+    axes.set_ylim(bottom=0)
+    axes.grid(color="#dddddd", linewidth=0.6)
+    axes.legend(frameon=False, loc="upper left")
+    ends = [f"{metres * 1e3:.2f} mm at {at:.2f} m" for at, metres in _ends(curve)]
+    return svg(figure, "depth-error", f"Depth error in the middle of the common view: {' and '.join(ends)}.")
+
+
+def _ends(curve: DepthErrorCurve) -> list[tuple[float, float]]:
+    return [(float(curve.distances_m[i]), float(curve.centre_m[i])) for i in (0, -1)]

@@ -24,7 +24,9 @@ BIN = VENV / ("Scripts" if os.name == "nt" else "bin")
 PYTHON = BIN / ("python.exe" if os.name == "nt" else "python")
 STAMP = VENV / "skewline-installed"
 LOG = VENV / "install.log"
-EXTRAS = {"demo": "", "test": "[dev]", "lint": "[dev]"}
+FOR_DEVELOPERS = "[dev]"
+FOR_USERS = "[report]"
+EXTRAS = {"test": FOR_DEVELOPERS, "lint": FOR_DEVELOPERS}
 
 
 class SetupError(Exception):
@@ -75,7 +77,10 @@ def usable() -> bool:
 
 def install(extra: str) -> None:
     """Make ``.venv`` where there is none to use and install the project there, editable."""
-    print(f"setting up .venv{' for development' if extra else ''} (once; about a minute) ...", file=sys.stderr)
+    print(
+        f"setting up .venv{' for development' if extra == FOR_DEVELOPERS else ''} (once; about a minute) ...",
+        file=sys.stderr,
+    )
     start = time.monotonic()
     if not usable():
         try:
@@ -98,7 +103,7 @@ def install(extra: str) -> None:
 def ensure(extra: str) -> None:
     """Install only what is missing."""
     have = installed_extras()
-    if have is None or (extra and extra not in have):
+    if have is None or not have & {extra, FOR_DEVELOPERS}:  # developers have all that users have
         install(extra)
 
 
@@ -132,7 +137,7 @@ def main(arguments: list[str]) -> int:
         print(__doc__)
         return 0 if arguments else 2
     verb, rest = arguments[0], arguments[1:]
-    ensure(EXTRAS.get(verb, ""))
+    ensure(EXTRAS.get(verb, FOR_USERS))
     if verb == "test":
         return subprocess.call([str(PYTHON), "-m", "pytest", *rest], cwd=ROOT)
     if verb == "lint":

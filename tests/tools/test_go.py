@@ -71,9 +71,18 @@ def test_an_environment_that_is_up_to_date_is_used_as_it_is(go: ModuleType) -> N
     put_python(go, "exit 1")
     go.STAMP.write_text(f"{go.wanted_stamp()}\n[dev]")
     assert go.installed_extras() == {"[dev]"}
-    go.ensure("")
+    go.ensure("[report]")
     go.ensure("[dev]")
     assert calls(go) == []
+
+
+def test_what_users_need_does_not_stand_in_for_what_developers_need(go: ModuleType, tmp_path: Path) -> None:
+    put_python(go, "exit 0")
+    go.STAMP.write_text(f"{go.wanted_stamp()}\n[report]")
+    go.ensure("[report]")
+    assert calls(go) == []
+    go.ensure("[dev]")
+    assert calls(go)[-1] == f"-m pip install --disable-pip-version-check -e {tmp_path}[dev]"
 
 
 def test_other_requirements_another_place_or_another_python_make_the_stamp_stale(
@@ -106,14 +115,14 @@ def test_a_stamp_that_was_cut_short_is_stale(go: ModuleType, stamp: str) -> None
 
 def test_an_install_is_done_once_and_keeps_the_extras_that_were_there(go: ModuleType, tmp_path: Path) -> None:
     put_python(go, "echo Collecting numpy")
-    go.ensure("")
-    go.ensure("")
-    assert go.installed_extras() == set()
-    assert calls(go) == [f"-m pip install --disable-pip-version-check -e {tmp_path}"]
+    go.ensure("[report]")
+    go.ensure("[report]")
+    assert go.installed_extras() == {"[report]"}
+    assert calls(go) == [f"-m pip install --disable-pip-version-check -e {tmp_path}[report]"]
     go.ensure("[dev]")
-    go.ensure("")
+    go.ensure("[report]")
     go.ensure("[dev]")
-    assert go.installed_extras() == {"[dev]"}
+    assert go.installed_extras() == {"[report]", "[dev]"}
     assert calls(go)[1:] == [f"-m pip install --disable-pip-version-check -e {tmp_path}[dev]"]
     assert go.LOG.read_text() == "Collecting numpy\n"
 

@@ -67,7 +67,8 @@ def test_wild_corners_hardly_move_the_solution() -> None:
 
     sigmas = np.sqrt(np.diag(fits[0].covariance))
     assert np.all(np.abs(fits[1].values - fits[0].values)[:18] < 2.0 * sigmas[:18])
-    assert fits[1].noise_px == pytest.approx(NOISE_PX, rel=0.15)
+    # Wild corners count at the bend of Huber's loss, so they still raise the noise, if not the error.
+    assert fits[1].noise_px == pytest.approx(NOISE_PX, rel=0.25)
 
 
 @pytest.mark.parametrize("board_shape", [False, True], ids=["rigid", "shape"])

@@ -18,6 +18,7 @@ from ..node import NodeError
 
 VERBS = {
     "demo": "show the whole path at work on a rendered workshop with known truth",
+    "target": "print a calibration target to scale as PDF or SVG",
     "calibrate": "intrinsics of both cameras and R, t between them from views of a target",
     "run": "run the node: frame pairs in, metric depth out over ZeroMQ",
     "listen": "show the depth frames that a node publishes, and save them",

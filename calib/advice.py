@@ -107,20 +107,20 @@ def focal_uncertainty(fit: Refined, camera: int) -> float:
     return fit.sigma(f"{letter}.fx") / abs(float(fit.values[index])) * max(noise, _ORDINARY_NOISE_PX) / noise
 
 
-def refuse_unsettled(name: str, fit: Refined, camera: int) -> None:
+def refuse_unsettled(name: str, fit: Refined, camera: int, *, limit: float = _UNSETTLED_FOCAL) -> None:
     """Refuse views that leave the focal length open: those of a target held parallel to itself, above all.
 
     Raises
     ------
     CalibrationError
-        Where the focal length's standard deviation is above 5 %.
+        Where the focal length's relative standard deviation is above the limit.
     """
     share = focal_uncertainty(fit, camera)
-    if share > _UNSETTLED_FOCAL:
+    if share > limit:
         known = f"{share:.0%}" if share < 1 else "a factor"
         raise CalibrationError(
             f"the views leave the focal length of camera {name} open (standard deviation {known}): from views that are all "
-            f"parallel, focal length and distance cannot be told apart; expected {_UNSETTLED_FOCAL:.0%} or less: tilt the "
+            f"parallel, focal length and distance cannot be told apart; expected {limit:.0%} or less: tilt the "
             "target by 20 to 40 degrees, about both ways, between views"
         )
 

@@ -30,6 +30,10 @@ from .targets import Sighting, Target
 FEWEST_VIEWS = 3
 """Zhang (2000), section 3.1: with three views or more, all intrinsic parameters have one solution."""
 
+_HOPELESS_FOCAL = 0.2
+"""Relative standard deviation of a focal length, from one camera alone, beyond which no pose can be looked for: usual
+views give 0.002, views that are all parallel 0.6 and more."""
+
 _COVERAGE_GRID = (8, 6)
 _ROUNDS = 3
 """How often bad views are set aside and the rest solved again."""
@@ -117,7 +121,11 @@ def calibrate_pair(
     ):
         seen = [s for s in usable if s.camera == "ab".index(letter) and s.placing not in apart]
         _require(len(seen), len(views) - len(apart), f"camera {letter.upper()}", target)
-        alones.append(_fit_alone(letter, seen, boards, _checked(letter, held, size), lens, held))
+        alone = _fit_alone(letter, seen, boards, _checked(letter, held, size), lens, held)
+        if held is None:
+            # Before the pose: cameras whose focal length is anybody's guess would look like pairs that do not belong.
+            refuse_unsettled(letter.upper(), alone.fit, 0, limit=_HOPELESS_FOCAL)
+        alones.append(alone)
     cameras = (alones[0].camera, alones[1].camera)
     numbered = _numbered(target, cameras, usable)
     kept = {(camera, s.placing) for camera, alone in enumerate(alones) for s in alone.seen}

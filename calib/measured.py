@@ -6,7 +6,6 @@ board's own. The ids are rows of the finding board's ``points``: row by row from
 
 from __future__ import annotations
 
-import csv
 import math
 from collections.abc import Iterable
 from dataclasses import dataclass
@@ -18,6 +17,7 @@ from numpy.typing import NDArray
 
 from .board import Board, Sighting
 from .camera import FloatArray
+from .csv_rows import read_rows
 from .errors import CalibrationError
 
 _HEADERS = {("id", "x_mm", "y_mm", "z_mm"): 1e-3, ("id", "x_m", "y_m", "z_m"): 1.0}
@@ -105,30 +105,21 @@ def load_measured(path: Path, board: Board) -> MeasuredBoard:
     CalibrationError
         Where the file is missing, or a line is no point, names one twice or one that the board has not, or points lack.
     """
+    header, rows = read_rows(path, "measured points")
     try:
-        lines = path.read_text(encoding="utf-8-sig").splitlines()
-    except OSError as exc:
-        raise CalibrationError(f"cannot read {path}: {exc.strerror}; expected a CSV file of measured points") from exc
-    except UnicodeDecodeError as exc:
-        raise CalibrationError(f"{path} is no text in UTF-8; expected a CSV file of measured points") from exc
-    try:
-        return MeasuredBoard(board=board, points=_points(lines, board))
+        return MeasuredBoard(board=board, points=_points(header, rows, board))
     except CalibrationError as exc:
         raise CalibrationError(f"{path}: {exc}") from exc
 
 
-def _points(lines: Iterable[str], board: Board) -> FloatArray:
-    reader = csv.reader(lines)
-    header = tuple(name.strip().lower() for name in next(reader, []))
+def _points(header: tuple[str, ...], rows: Iterable[tuple[int, list[str]]], board: Board) -> FloatArray:
     if header not in _HEADERS:
         raise CalibrationError(f"the first line is {','.join(header)!r}; expected {_EXPECTED}")
     points = np.full(board.points.shape, np.nan)
-    for cells in reader:
-        if not any(cell.strip() for cell in cells):
-            continue
-        number, point = _point(cells, reader.line_num, len(points))
+    for line, cells in rows:
+        number, point = _point(cells, line, len(points))
         if np.isfinite(points[number]).any():
-            raise CalibrationError(f"line {reader.line_num} names point {number} again; expected each point once")
+            raise CalibrationError(f"line {line} names point {number} again; expected each point once")
         points[number] = np.multiply(point, _HEADERS[header])
     lacking = np.flatnonzero(np.isnan(points[:, 0]))
     if lacking.size:

@@ -293,3 +293,13 @@ def test_points_at_infinity_decide_for_no_pose() -> None:
     in_b = directions @ R.T
     with pytest.raises(CalibrationError, match="of 20 points"):
         pose_before_both(essential_matrix(R, T), directions[:, :2], in_b[:, :2] / in_b[:, 2:])
+
+
+def test_two_poses_with_the_same_count_are_refused() -> None:
+    # far off one another's epipolar lines, so that these points lie before both cameras in two of the four poses
+    flat_a, flat_b = np.tile([0.166, -0.610], (3, 1)), np.tile([-0.537, 0.700], (3, 1))
+    with pytest.raises(
+        CalibrationError,
+        match=r"of 3 points (3, 0, 3, 0|3, 0, 0, 3|0, 3, 3, 0|0, 3, 0, 3) lie before both .* 75% or more in one alone",
+    ):
+        pose_before_both(essential_matrix(R, T), flat_a, flat_b)

@@ -10,7 +10,7 @@ import numpy as np
 from .bundle import Seen
 from .camera import Camera, FloatArray
 from .errors import CalibrationError
-from .focal_drift import focal_jump
+from .focal_drift import FocalJump
 from .refine import Refined
 from .result import CalibrationResult, CameraFit
 from .rig import Rig
@@ -47,6 +47,8 @@ class Account:
         Median epipolar distance of each pair by its name.
     alone : tuple of (sequence of Seen, Refined)
         Each camera on its own.
+    jump : FocalJump or None
+        A change of a focal length, if there was one.
     baseline_m : float or None
         As measured otherwise.
     """
@@ -54,6 +56,7 @@ class Account:
     result: CalibrationResult
     epipolar_px: Mapping[str, float]
     alone: tuple[tuple[Sequence[Seen], Refined], ...]
+    jump: FocalJump | None
     baseline_m: float | None
 
 
@@ -158,18 +161,18 @@ def _camera_warnings(name: str, fit: CameraFit) -> Iterator[str]:
 
 
 def _alone_warnings(account: Account) -> Iterator[str]:
-    for name, (seen, fit) in zip("AB", account.alone, strict=True):
+    for name, (_, fit) in zip("AB", account.alone, strict=True):
         share = focal_uncertainty(fit, 0)
         if share > _POOR_FOCAL:
             yield (
                 f"camera {name}: its own views give the focal length to {share:.1%} only (standard deviation); above "
                 f"{_POOR_FOCAL:.0%} distances are in doubt: tilt the target more, about both ways"
             )
-        if jump := focal_jump(seen, fit):
-            yield (
-                f"camera {name}: the focal length changes by {jump.share:+.2%} from {jump.name} on ({jump.sigmas:.0f} standard "
-                "deviations): did autofocus or zoom move? Fix the focus and take all views again"
-            )
+    if jump := account.jump:
+        yield (
+            f"camera {'AB'[jump.camera]}: the focal length changes by {jump.share:+.2%} from {jump.name} on "
+            f"({jump.sigmas:.0f} standard deviations): did autofocus or zoom move? Fix the focus and take all views again"
+        )
 
 
 def _pair_warnings(account: Account) -> Iterator[str]:

@@ -17,6 +17,7 @@ from .advice import Account, careful_warnings, refuse_folding_lens, refuse_unlik
 from .bundle import Seen, State
 from .camera import Camera, FloatArray
 from .errors import CalibrationError
+from .focal_drift import FocalJump, focal_jump
 from .judge import choose_held_out, judge_held_out, pair_distances, view_fit
 from .lens_choice import choose_lens
 from .numbering import Pair, agreed_pose, number_alike, pairs_of
@@ -159,6 +160,7 @@ def calibrate_pair(
         result=result,
         epipolar_px={name: float(np.median(d)) for name, d in distances.items()},
         alone=tuple((alone.seen, alone.fit) for alone in alones),
+        jump=joint.jump,
         baseline_m=baseline_m,
     )
     return replace(result, warnings=careful_warnings(account))
@@ -191,6 +193,7 @@ class _Joint:
     solved: tuple[Seen, ...]
     fit: Refined
     aside: tuple[SetAside, ...]
+    jump: FocalJump | None = None
 
     @property
     def pairs(self) -> list[Pair]:
@@ -306,6 +309,7 @@ def _solve_jointly(
     held = [letter for letter, alone in zip("ab", alones, strict=True) if alone.held]
     kept, aside = list(used), []
     joint = _refine(kept, start, held=held, board_shape=board_shape)
+    jump = focal_jump(joint.solved, joint.fit)  # before views that a new focal length spoils are set aside
     for _ in range(_ROUNDS):
         pairs = pairs_of(kept)
         residuals = dict(zip(((s.camera, s.placing) for s in kept), joint.fit.residuals_px, strict=True))
@@ -318,7 +322,7 @@ def _solve_jointly(
         aside += [_misfit(_pair_name(views[placing]), value, typical, limit) for placing, value in gone.items()]
         kept = [s for s in kept if s.placing not in gone]
         joint = _refine(kept, start, held=held, board_shape=board_shape)
-    return replace(joint, aside=tuple(aside))
+    return replace(joint, aside=tuple(aside), jump=jump)
 
 
 def _pairs_only(seen: Sequence[Seen]) -> list[Seen]:

@@ -25,7 +25,10 @@ _FITS = 0.2
 that is wrong by more."""
 
 _RIM_PX = 3
-"""How far beyond half darkness a circle's blurred rim is gathered."""
+"""How far beyond half darkness a circle's blurred rim is gathered, and how wide the ring of white is beyond that."""
+
+_FEWEST_WHITE_PX = 30
+"""For a plane through the white around a circle; with fewer, its brightest serve."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -199,13 +202,32 @@ def _measure(grey: NDArray[np.uint8], centre: FloatArray, reach: float) -> tuple
     window = grey[top : y + half + 1, left : x + half + 1]
     dark = float(np.median(grey[max(y - 1, 0) : y + 2, max(x - 1, 0) : x + 2]))
     bright = float(np.percentile(window, 90))
-    _, labels = cv2.connectedComponents((window < (dark + bright) / 2).astype(np.uint8))
-    spot = (labels == labels[y - top, x - left]).astype(np.uint8)
-    inside = cv2.dilate(spot, np.ones((2 * _RIM_PX + 1,) * 2, np.uint8)) > 0
-    darkness = np.where(inside, np.clip(bright - window, 0, None), 0.0)
-    rows, columns = np.indices(window.shape)
-    total = darkness.sum()
-    if labels[y - top, x - left] == 0 or total == 0:  # no dark spot after all: leave it where OpenCV saw it
+    _, labels, boxes, _ = cv2.connectedComponentsWithStats((window < (dark + bright) / 2).astype(np.uint8))
+    number = int(labels[y - top, x - left])
+    if number == 0 or dark >= bright:  # no dark spot after all: leave it where OpenCV saw it
         return float(centre[0]), float(centre[1]), 0.0
+    column, row, width, height = boxes[number, :4].tolist()
+    begin_x, begin_y = max(column - 2 * _RIM_PX, 0), max(row - 2 * _RIM_PX, 0)
+    near = slice(begin_y, row + height + 2 * _RIM_PX), slice(begin_x, column + width + 2 * _RIM_PX)
+    inside = _grown(labels[near] == number, _RIM_PX)
+    ring = _grown(inside, _RIM_PX) & ~_grown(labels[near] > 0, _RIM_PX)
+    # Over its own white: light that falls off across a spot would draw the middle to the darker side.
+    darkness = np.where(inside, 1 - window[near] / _white(window[near], ring, bright), 0.0)
+    rows, columns = np.indices(darkness.shape)
+    total = darkness.sum()
     middle_x, middle_y = (darkness * columns).sum() / total, (darkness * rows).sum() / total
-    return float(left + middle_x), float(top + middle_y), float(total / (bright - dark))
+    return float(left + begin_x + middle_x), float(top + begin_y + middle_y), float(total / (1 - dark / bright))
+
+
+def _grown(area: NDArray[np.bool_], by_px: int) -> NDArray[np.bool_]:
+    return np.asarray(cv2.dilate(area.astype(np.uint8), np.ones((2 * by_px + 1,) * 2, np.uint8)) > 0)
+
+
+def _white(window: NDArray[np.uint8], ring: NDArray[np.bool_], bright: float) -> FloatArray:
+    """Give the white that paper would show in every pixel, as a plane through a ring around the spot, shape (H, W)."""
+    rows, columns = np.indices(window.shape)
+    if ring.sum() < _FEWEST_WHITE_PX:
+        return np.full(window.shape, bright)
+    plane = np.stack([np.ones(window.shape), rows, columns], axis=-1)
+    slopes, *_ = np.linalg.lstsq(plane[ring], window[ring].astype(np.float64), rcond=None)
+    return np.asarray(np.clip(plane @ slopes, bright / 2, None))

@@ -43,6 +43,19 @@ def test_circles_are_found_to_a_fiftieth_of_a_pixel_in_one_of_their_orders(text:
     assert min(errors) < 0.02
 
 
+def test_light_that_falls_off_across_the_picture_draws_no_circle_to_the_darker_side() -> None:
+    board = grid_of("asymmetric-circles 4x11 20mm")
+    shot = picture(board, tilt_deg=20)
+    height, width = shot.image.shape
+    fall = np.linspace(1.0, 0.4, width) * np.linspace(1.0, 0.8, height)[:, None]
+
+    seen = board.find(np.rint(shot.image * fall).astype(np.uint8))
+
+    assert seen is not None
+    # Rounding to grey levels costs 0.004 px; middles weighed by plain darkness lie 0.06 px off to the right.
+    assert np.abs(seen.pixels - shot.place(board.points[:, :2] * 1e3)).max() < 0.01
+
+
 def test_the_middle_of_the_ellipse_is_not_taken_for_the_picture_of_the_circle_s_middle() -> None:
     # Large circles, near and tilted: the centres of their ellipses lie off by more than this test allows.
     board = grid_of("asymmetric-circles 3x5 20mm")

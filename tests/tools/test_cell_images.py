@@ -22,7 +22,7 @@ from skewline.tools.cell import (
     render_image,
     render_pair,
 )
-from skewline.tools.cell.render import _lens, expose, radiance
+from skewline.tools.cell.render import expose, radiance, rays_by_block
 
 SMALL = {"size_a": (320, 240), "size_b": (256, 192)}
 CLEAN = Photometry(vignetting=0, read_noise=0, shot_noise=0, blur_px=0, bit_depth=16)
@@ -69,7 +69,7 @@ def test_corners_that_opencv_finds_lie_where_opencv_projects_the_true_ones(which
 
 def test_the_rays_of_all_samples_are_those_of_the_camera_itself() -> None:
     camera = make_cell().rig.b
-    block = _lens(camera, np.eye(4), 2)(slice(700, 768), slice(0, 40))
+    block = rays_by_block(camera, np.eye(4), 2)(slice(700, 768), slice(0, 40))
     places = (np.arange(2048) + 0.5) / 2 - 0.5
     x, y = (grid.ravel() for grid in np.meshgrid(places[:80], places[1400:1536]))
 

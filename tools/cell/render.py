@@ -204,7 +204,7 @@ def radiance(
     scene: Scene, camera: Camera, T_world_camera: FloatArray, *, supersampling: int = 2
 ) -> NDArray[np.float32]:
     """Give the mean light that falls on each pixel, float32 (H, W); 1 is full scale at gain 1."""
-    ray_block = _lens(camera, T_world_camera, supersampling)
+    ray_block = rays_by_block(camera, T_world_camera, supersampling)
     origin = T_world_camera[:3, 3].astype(np.float32)
     image = np.empty((camera.height, camera.width), dtype=np.float32)
     for rows, columns in _blocks(camera.height, camera.width, max(1, _BLOCK_SAMPLES // supersampling)):
@@ -221,7 +221,7 @@ def _blocks(height: int, width: int, edge: int) -> Iterator[tuple[slice, slice]]
             yield slice(top, min(top + edge, height)), slice(left, min(left + edge, width))
 
 
-def _lens(camera: Camera, T_world_camera: FloatArray, supersampling: int) -> Callable[[slice, slice], Array]:
+def rays_by_block(camera: Camera, T_world_camera: FloatArray, supersampling: int) -> Callable[[slice, slice], Array]:
     """Give a function from a block of pixels to the rays of its samples, shape (3, N), in the world."""
     # Chebyshev nodes over the whole image, edge to edge; the camera's own exact rays there fix the polynomial.
     nodes = chebyshev.chebpts1(_LENS_NODES)

@@ -207,8 +207,9 @@ def _measure(grey: NDArray[np.uint8], centre: FloatArray, reach: float) -> tuple
     if number == 0 or dark >= bright:  # no dark spot after all: leave it where OpenCV saw it
         return float(centre[0]), float(centre[1]), 0.0
     column, row, width, height = boxes[number, :4].tolist()
-    begin_x, begin_y = max(column - 2 * _RIM_PX, 0), max(row - 2 * _RIM_PX, 0)
-    near = slice(begin_y, row + height + 2 * _RIM_PX), slice(begin_x, column + width + 2 * _RIM_PX)
+    reach_px = 3 * _RIM_PX  # the rim, the ring, and other dark spots whose rims reach into the ring
+    begin_x, begin_y = max(column - reach_px, 0), max(row - reach_px, 0)
+    near = slice(begin_y, row + height + reach_px), slice(begin_x, column + width + reach_px)
     inside = _grown(labels[near] == number, _RIM_PX)
     ring = _grown(inside, _RIM_PX) & ~_grown(labels[near] > 0, _RIM_PX)
     # Over its own white: light that falls off across a spot would draw the middle to the darker side.

@@ -13,9 +13,11 @@ def grid_of(text: str) -> CircleGrid:
     return board
 
 
-def picture(board: CircleGrid, *, turn_deg: float = 0.0, tilt_deg: float = 35.0, diameter_mm: float = 0.0) -> Shot:
+def picture(
+    board: CircleGrid, *, turn_deg: float = 0.0, tilt_deg: float = 35.0, diameter_mm: float = 0.0, fill: float = 0.4
+) -> Shot:
     sheet = circle_sheet(board.points[:, :2] * 1e3, diameter_mm or board.diameter_m * 1e3)
-    return shoot(sheet, turn_deg=turn_deg, tilt_deg=tilt_deg, fill=0.4)
+    return shoot(sheet, turn_deg=turn_deg, tilt_deg=tilt_deg, fill=fill)
 
 
 GRIDS = [
@@ -43,17 +45,18 @@ def test_circles_are_found_to_a_fiftieth_of_a_pixel_in_one_of_their_orders(text:
     assert min(errors) < 0.02
 
 
-def test_light_that_falls_off_across_the_picture_draws_no_circle_to_the_darker_side() -> None:
+@pytest.mark.parametrize(("fill", "limit_px"), [(0.4, 0.01), (0.1, 0.03)], ids=["large", "crowded"])
+def test_light_that_falls_off_draws_no_circle_to_the_darker_side(fill: float, limit_px: float) -> None:
     board = grid_of("asymmetric-circles 4x11 20mm")
-    shot = picture(board, tilt_deg=20)
+    shot = picture(board, tilt_deg=20, fill=fill)
     height, width = shot.image.shape
     fall = np.linspace(1.0, 0.4, width) * np.linspace(1.0, 0.8, height)[:, None]
 
     seen = board.find(np.rint(shot.image * fall).astype(np.uint8))
 
     assert seen is not None
-    # Rounding to grey levels costs 0.004 px; middles weighed by plain darkness lie 0.06 px off to the right.
-    assert np.abs(seen.pixels - shot.place(board.points[:, :2] * 1e3)).max() < 0.01
+    # Middles weighed by plain darkness lie up to 0.08 and 0.055 px off.
+    assert np.abs(seen.pixels - shot.place(board.points[:, :2] * 1e3)).max() < limit_px
 
 
 def test_the_middle_of_the_ellipse_is_not_taken_for_the_picture_of_the_circle_s_middle() -> None:

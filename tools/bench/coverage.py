@@ -31,8 +31,7 @@ from ...calib.from_target import View, calibrate_pair
 from ...calib.projection import intrinsics_of
 from ...calib.result import CalibrationResult
 from ...calib.targets import Target, parse_target
-from ..cell import Cell, board_poses, make_cell
-from ..cell.flat import FlatRenderer, Sheet, draw_sheet, light_on_board
+from ..cell import Cell, FlatRenderer, Sheet, board_poses, draw_sheet, light_on_board, make_cell
 from ..cell.pose import transform
 
 SIZE_A, SIZE_B = (640, 480), (800, 600)

@@ -216,7 +216,7 @@ def depth_sigma_from_calibration(source: Rig | CalibrationResult, points_a: Floa
     pixels_a, pixels_b = rig.a.project(points_a), rig.b.project(points_a @ rig.R.T + rig.t)
     axis = depth_axis(rig)
     variance = np.zeros(len(points_a))
-    for direction in _principal_steps(covariance):
+    for direction in principal_steps(covariance):
         step = dict(zip(names, direction * _STEP, strict=True))
         back = {name: -value for name, value in step.items()}
         depths = [points_from_disparity(moved_rig(rig, by), pixels_a, pixels_b) @ axis for by in (step, back)]
@@ -235,8 +235,14 @@ def _uncertainty(source: Rig | CalibrationResult) -> tuple[Rig, tuple[str, ...],
     return source, POSE_NAMES, source.covariance
 
 
-def _principal_steps(covariance: FloatArray) -> FloatArray:
-    """Give vectors, one a row, whose outer products add up to the covariance."""
+def principal_steps(covariance: FloatArray) -> FloatArray:
+    """Give vectors, one a row, whose outer products add up to the covariance; all 0 for what does not vary.
+
+    Raises
+    ------
+    CalibrationError
+        Where the covariance is none: not finite, or with a negative variance in some direction.
+    """
     sigmas = np.sqrt(np.clip(np.diag(covariance), 0, None))
     moving = np.flatnonzero(sigmas > 0)
     if not np.isfinite(covariance).all():

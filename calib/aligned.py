@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .camera import Camera, FloatArray
-from .errors import CalibrationError
+from .errors import NoAlignedViewError
 
 Float32Image = NDArray[np.float32]
 
@@ -31,8 +31,9 @@ _MOST_PIXELS = 2.5e6
 
 _MOST_DISPARITIES = 768
 
-_STEEPEST_VIEW = 0.2
-"""Least cosine-like share of the mean optical axis across the baseline: below, the cameras look along it."""
+_WIDEST = 3.5
+"""Largest x/z of a view, 74 degrees from its axis: beyond, the baseline all but enters the field of view and places are
+stretched too far to be told again."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -90,18 +91,15 @@ def facing_rotation(R: FloatArray, t: FloatArray) -> FloatArray:
 
     Raises
     ------
-    CalibrationError
+    NoAlignedViewError
         Where the cameras look along the line that joins them.
     """
     x = -R.T @ t / np.linalg.norm(t)
     mean_axis = np.array([0.0, 0.0, 1.0]) + R[2]
     z = mean_axis - x * (x @ mean_axis)
     length = float(np.linalg.norm(z))
-    if length < _STEEPEST_VIEW:
-        raise CalibrationError(
-            "by this pose the cameras look along the line that joins them, where places cannot be matched row by row; "
-            "expected cameras side by side or one above the other: check the pictures, or mount them so"
-        )
+    if length < 1 / _WIDEST:
+        raise NoAlignedViewError(_along_the_baseline())
     z /= length
     return np.array([x, np.cross(z, x), z])
 
@@ -120,12 +118,19 @@ def align(
         The matched points in both cameras.
     inverse_depths : ndarray of shape (N,)
         One over the distance along A's rays, in baselines.
+
+    Raises
+    ------
+    NoAlignedViewError
+        Where the points lie nearly along the baseline.
     """
     R_view_a = facing_rotation(R, t)
     rotations = (R_view_a, R_view_a @ R.T)
     rays = [camera.rays(some) @ turn.T for camera, some, turn in zip((a, b), pixels, rotations, strict=True)]
     focal = max(a.focal_px, b.focal_px)
     ends = [_extent(some, focal) for some in rays]
+    if max(np.abs([low, high]).max() for low, high in ends) > _WIDEST:
+        raise NoAlignedViewError(_along_the_baseline())
     low_y, high_y = min(low[1] for low, _ in ends), max(high[1] for _, high in ends)
     width = max(high[0] - low[0] for low, high in ends)
     focal *= min(1.0, float(np.sqrt(_MOST_PIXELS / (focal**2 * width * (high_y - low_y)))))
@@ -141,6 +146,13 @@ def align(
     first = int(np.floor(focal * (lowest - margin) + offset))
     count = int(np.ceil((focal * (highest + margin) + offset - first) / 16)) * 16
     return Aligned(a=views[0], b=views[1], disparities=(first, min(count, _MOST_DISPARITIES)))
+
+
+def _along_the_baseline() -> str:
+    return (
+        "by this pose the cameras look along the line that joins them, or nearly so, where places cannot be matched row by "
+        "row; expected cameras side by side or one above the other: check the pictures, or mount them so"
+    )
 
 
 def _extent(rays: FloatArray, focal: float) -> tuple[FloatArray, FloatArray]:

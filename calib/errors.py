@@ -23,3 +23,7 @@ class ImageFileError(CalibrationError):
     def __init__(self, reason: str, message: str) -> None:
         super().__init__(message)
         self.reason = reason
+
+
+class NoAlignedViewError(CalibrationError):
+    """The cameras look along the line that joins them, so that no views exist in which places share a row."""

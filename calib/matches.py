@@ -187,7 +187,7 @@ def find_matches(
     order = order[doubt[order] < ratio]
     for pixels in (a.pixels[rows_a], b.pixels[rows_b]):  # one place may have several features, each its own direction
         order = order[np.sort(np.unique(pixels[order], axis=0, return_index=True)[1])]
-    order = order[_spread(a.pixels[rows_a[order]], doubt[order], image_a.shape[:2], most)]
+    order = order[spread(a.pixels[rows_a[order]], doubt[order], image_a.shape[:2], most)]
     return Matches(
         pixels_a=a.pixels[rows_a[order]],
         pixels_b=b.pixels[rows_b[order]],
@@ -215,7 +215,7 @@ def _features(image: NDArray[Any], camera: str) -> _Features:
             "or sharpness, put things with texture into view, or pick points by hand"
         )
     strength = np.array([keypoint.response for keypoint in keypoints])
-    kept = _spread(_pixels(keypoints), -strength, image.shape[:2], _MOST_FEATURES)
+    kept = spread(_pixels(keypoints), -strength, image.shape[:2], _MOST_FEATURES)
     keypoints, described = sift.compute(grey, [keypoints[row] for row in kept])
     roots = np.sqrt(described.astype(np.float32))
     return _Features(_pixels(keypoints), roots / np.maximum(np.linalg.norm(roots, axis=1, keepdims=True), 1e-6))
@@ -240,8 +240,22 @@ def _nearest(of: _Features, among: _Features) -> tuple[IndexArray, NDArray[np.fl
     return np.concatenate(found), np.concatenate(doubt)
 
 
-def _spread(pixels: FloatArray, doubt: NDArray[Any], shape: tuple[int, ...], most: int) -> IndexArray:
-    """Choose at most so many points, in turns from all cells of an image, of each the least doubtful first."""
+def spread(pixels: FloatArray, doubt: NDArray[Any], shape: tuple[int, ...], most: int) -> IndexArray:
+    """Choose at most so many points, in turns from all cells of an image, of each the least doubtful first.
+
+    Parameters
+    ----------
+    pixels : ndarray of shape (N, 2)
+    doubt : ndarray of shape (N,)
+    shape : (height, width, ...)
+        Of the image.
+    most : int
+
+    Returns
+    -------
+    ndarray of shape (M,), intp
+        Indices of those chosen.
+    """
     columns, rows = _CELLS
     place = (pixels + 0.5) / (shape[1], shape[0]) * _CELLS
     column, row = np.clip(place.astype(np.intp), 0, (columns - 1, rows - 1)).T

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from .aligned import Aligned, Float32Image
 from .camera import FloatArray
 from .images import grey_8_bit
+from .matches import spread
 
 MOST_PLACES = 8000
 _APART_PX = 3
@@ -57,9 +58,13 @@ class Tracked:
 
 
 def choose_places(image: NDArray[Any], most: int = MOST_PLACES) -> FloatArray:
-    """Choose corners of a picture (Shi and Tomasi, CVPR 1994) to match, shape (N, 2), in pixels."""
-    found = cv2.goodFeaturesToTrack(grey_8_bit(image), most, _QUALITY, _APART_PX, blockSize=_CORNER_BLOCK)
-    return np.zeros((0, 2)) if found is None else found.reshape(-1, 2).astype(np.float64)
+    """Choose corners of a picture (Shi and Tomasi, CVPR 1994) to match, from all of it, shape (N, 2), in pixels."""
+    found: Any = cv2.goodFeaturesToTrack(grey_8_bit(image), MOST_PLACES, _QUALITY, _APART_PX, blockSize=_CORNER_BLOCK)
+    if found is None:
+        return np.zeros((0, 2))
+    corners = found.reshape(-1, 2).astype(np.float64)
+    chosen: FloatArray = corners[spread(corners, np.arange(len(corners)), image.shape[:2], most)]
+    return chosen
 
 
 def track_places(

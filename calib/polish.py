@@ -16,7 +16,7 @@ from scipy.spatial.transform import Rotation
 from .aligned import Aligned, align
 from .camera import Camera, FloatArray
 from .errors import CalibrationError
-from .places import Tracked, choose_places, track_places
+from .places import MOST_PLACES, Tracked, choose_places, track_places
 from .settle import Settled, settle
 from .sight_lines import Sightings, SightLines
 
@@ -28,6 +28,9 @@ _STILL_SIGMAS = 0.1
 
 _SAME_START_PX = 0.5
 """A pose that moved the places by less than this leaves them where the dense disparity need not be sought again."""
+
+_MOST_IN_ALL = 30_000
+"""Places sought in all pairs together: more take time and bring little, since errors that go together stay."""
 
 _CELLS = (8, 6)
 """Errors within one such part of a picture may go together."""
@@ -71,7 +74,8 @@ def polish(
     CalibrationError
         Where places cannot be matched.
     """
-    sought = list(places) if places is not None else [choose_places(image) for image, _ in pairs]
+    most = min(MOST_PLACES, _MOST_IN_ALL // len(pairs))
+    sought = list(places) if places is not None else [choose_places(image, most) for image, _ in pairs]
     expected: list[FloatArray | None] = [None] * len(pairs)
     settled, known = start, tuple(groups)
     for number in range(rounds):

@@ -20,6 +20,7 @@ VERBS = {
     "demo": "show the whole path at work on a rendered workshop with known truth",
     "target": "print a calibration target to scale as PDF or SVG",
     "calibrate": "intrinsics of both cameras and R, t between them from views of a target",
+    "pose": "R and t between two cameras from any scene, without a target",
     "run": "run the node: frame pairs in, metric depth out over ZeroMQ",
     "listen": "show the depth frames that a node publishes, and save them",
 }

@@ -1,0 +1,132 @@
+"""The pose from pictures alone, on real pictures with known truth, and on pictures of others."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import cv2
+import leuven
+import numpy as np
+import pytest
+from motorcycle import Scene, commonly_seen, reimaged
+from pose_errors import PoseErrors, errors_of
+from scipy.spatial.transform import Rotation
+from skewline.calib import CalibrationError, Camera, Rig
+from skewline.calib.chessboard import Chessboard
+from skewline.calib.from_scene import ScenePose, pose_from_scene
+from skewline.calib.from_target import View, calibrate_pair
+from skewline.calib.images import find_images, read_image
+from skewline.calib.matches import Matches
+from skewline.calib.targets import Target
+
+CHESSBOARDS = Path(__file__).parent.parent / "data" / "chessboard-pairs"
+
+
+def solved(scene: Scene) -> tuple[ScenePose, PoseErrors]:
+    pose = pose_from_scene(scene.rig.a, scene.rig.b, [(scene.image_a, scene.image_b)])
+    return pose, errors_of(scene.rig, pose, scene.points_a[commonly_seen(scene)][::37])
+
+
+@pytest.mark.parametrize("yaw_deg", [0.0, 22.0])
+def test_one_pair_of_unlike_cameras_gives_the_pose_within_the_floors(yaw_deg: float) -> None:
+    """Truth: Scharstein et al., GCPR 2014. The pair's own rows are off by -0.12 to -0.04 px, which bounds what it can show."""
+    pose, errors = solved(reimaged(yaw_deg))
+    assert [stage.name for stage in pose.stages] == ["linear", "robust", "refined", "polished"]
+    assert errors.rotation_deg < 0.08
+    assert errors.direction_deg < 0.4
+    assert errors.depth < 0.015
+    assert not pose.rig.scale_known
+    assert pose.rig.baseline_m == pytest.approx(1)
+
+
+@pytest.mark.long
+def test_twenty_solutions_of_four_yaws_and_five_seeds_stay_within_the_floors(
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    found = [solved(reimaged(yaw_deg, seed))[1] for yaw_deg in (0.0, 10.0, 16.0, 22.0) for seed in range(5)]
+    figures = np.array([(e.rotation_deg, e.direction_deg, e.depth, e.chi_square) for e in found])
+    with capsys.disabled():
+        print("\nmedian", np.median(figures, axis=0), "worst", figures.max(axis=0))
+    assert (np.median(figures, axis=0)[:3] < (0.04, 0.25, 0.008)).all()
+    assert (figures.max(axis=0)[:3] < (0.08, 0.4, 0.015)).all()
+
+
+@pytest.fixture(scope="module")
+def chessboard_rig() -> Rig:
+    board = Chessboard(columns=9, rows=6, square_m=0.03)
+    views = [
+        View(name_a=a.name, name_b=b.name, seen_a=board.find(read_image(a)), seen_b=board.find(read_image(b)))
+        for a, b in zip(*chessboard_files(), strict=True)
+    ]
+    return calibrate_pair(Target((board,)), views, (640, 480), (640, 480)).rig
+
+
+def chessboard_files() -> tuple[list[Path], list[Path]]:
+    return find_images(str(CHESSBOARDS / "left*.jpg")), find_images(str(CHESSBOARDS / "right*.jpg"))
+
+
+def apart_deg(one: Rig, other: Rig) -> tuple[float, float]:
+    turn = Rotation.from_matrix(one.R @ other.R.T).magnitude()
+    directions = one.t / one.baseline_m, other.t / other.baseline_m
+    return float(np.rad2deg(turn)), float(np.rad2deg(np.arccos(np.clip(directions[0] @ directions[1], -1, 1))))
+
+
+def test_chessboard_corners_taken_as_plain_correspondences_give_the_rotation_of_the_target_solve(
+    chessboard_rig: Rig,
+) -> None:
+    board = Chessboard(columns=9, rows=6, square_m=0.03)
+    parts = []
+    for number, (a, b) in enumerate(zip(*chessboard_files(), strict=True)):
+        in_a, in_b = board.find(read_image(a)), board.find(read_image(b))
+        assert in_a
+        assert in_b
+        count = len(in_a)
+        parts.append(
+            Matches(
+                pixels_a=in_a.pixels,
+                pixels_b=in_b.pixels,
+                pair=np.full(count, number),
+                labels=("",) * count,
+                picked=np.ones(count, dtype=bool),
+            )
+        )
+    pose = pose_from_scene(chessboard_rig.a, chessboard_rig.b, [], picks=Matches.join(parts), features=False)
+    turned, aside = apart_deg(pose.rig, chessboard_rig)
+    assert turned < 0.15
+    assert aside < 0.5
+
+
+def test_chessboard_pictures_taken_as_any_scene_give_the_rotation_of_the_target_solve(chessboard_rig: Rig) -> None:
+    files = list(zip(*chessboard_files(), strict=True))[::3]
+    pose = pose_from_scene(chessboard_rig.a, chessboard_rig.b, [(read_image(a), read_image(b)) for a, b in files])
+    turned, _ = apart_deg(pose.rig, chessboard_rig)
+    assert turned < 0.15
+
+
+def test_the_castle_pair_agrees_with_opencvs_pose_on_the_same_matches() -> None:
+    """Reference: cv2.findEssentialMat and cv2.recoverPose; pictures and intrinsics are OpenCV's samples."""
+    pair = leuven.load()
+    height, width = pair.image_a.shape
+    camera = Camera(width=width, height=height, K=pair.K)
+    pose = pose_from_scene(camera, camera, [(pair.image_a, pair.image_b)])
+    inliers = pose.matches.chosen(pose.inliers)
+    E, kept = cv2.findEssentialMat(inliers.pixels_a, inliers.pixels_b, pair.K, method=cv2.RANSAC, threshold=0.5)
+    _, R, t, _ = cv2.recoverPose(E, inliers.pixels_a, inliers.pixels_b, pair.K, mask=kept)
+    turned, aside = apart_deg(pose.rig, Rig(a=camera, b=camera, R=R, t=t.ravel()))
+    assert turned < 0.5
+    assert aside < 2.5
+    assert pose.noise_px < 0.3
+    # B stands behind A, 23 degrees off its axis: the baseline enters the field of view.
+    assert [stage.name for stage in pose.stages][-1] == "refined"
+    assert "rests on the features alone" in pose.remarks[-1]
+
+
+def test_a_picture_of_another_size_than_its_camera_is_refused(chessboard_rig: Rig) -> None:
+    small = np.zeros((240, 320), np.uint8)
+    with pytest.raises(CalibrationError, match=r"pair 1: the picture of camera B has 320x240 pixels; expected 640x480"):
+        pose_from_scene(chessboard_rig.a, chessboard_rig.b, [(np.zeros((480, 640), np.uint8), small)])
+
+
+def test_nothing_to_match_is_refused(chessboard_rig: Rig) -> None:
+    with pytest.raises(CalibrationError, match="neither pairs of pictures nor picked points"):
+        pose_from_scene(chessboard_rig.a, chessboard_rig.b, [])

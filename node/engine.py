@@ -12,7 +12,7 @@ from __future__ import annotations
 import time
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from types import MappingProxyType
 from typing import Any
 
@@ -39,9 +39,9 @@ class DepthEngine:
     Parameters
     ----------
     rig : Rig
-        Its scale must be known.
+        Where its scale is not known, the engine counts in baselines, frames say so, and nothing publishes them.
     near, far : float
-        Working volume along the rectified view's optical axis, in metres.
+        Working volume along the rectified view's optical axis, in metres; in baselines where the scale is not known.
     matcher : {"block", "semiglobal"}
         Shorthand for ``settings=MatchSettings(matcher=...)``.
     settings : MatchSettings, optional
@@ -52,7 +52,7 @@ class DepthEngine:
     Raises
     ------
     NodeError
-        Where the rig's scale is not known, or a setting is out of range.
+        Where a setting is out of range.
     VolumeError
         Where the rig cannot see the working volume; the message gives the angles or distances found.
     """
@@ -67,20 +67,16 @@ class DepthEngine:
         settings: MatchSettings | None = None,
         resolution: float = 1.0,
     ) -> None:
-        if not rig.scale_known:
-            raise NodeError(
-                "this rig's scale is not known, so its depth would not be in metres; expected a rig with a known length: "
-                "calibrate with a target of known size, or solve the pose with a length or the baseline given"
-            )
         if settings is not None and matcher is not None and matcher != settings.matcher:
             raise NodeError(f"matcher {matcher!r} and settings for {settings.matcher!r}; expected one or the other")
+        given, rig = rig, rig if rig.scale_known else replace(rig, t=rig.t / rig.baseline_m, covariance=None)
         self.rig = rig
         self.settings = settings or MatchSettings(matcher=matcher or "block")
         self.plan: ViewPlan = plan_views(rig, near, far, resolution=resolution)
         self._map_a = build_maps(rig.a, self.plan.R_view_a, self.plan, self.plan.principal_a)
         self._map_b = build_maps(rig.b, self.plan.R_view_b, self.plan, self.plan.principal_b)
         self._match = make_matcher(self.settings, self.plan.disparities)
-        self._fingerprint = rig.fingerprint
+        self._fingerprint = given.fingerprint
 
     def compute(
         self,
@@ -124,6 +120,7 @@ class DepthEngine:
             T_base_a=self.rig.T_base_a,
             near_m=self.plan.near_m,
             far_m=self.plan.far_m,
+            metric=self.rig.scale_known,
             stamp_ns=stamp_ns,
             skew_ns=skew_ns,
             fingerprint=self._fingerprint,

@@ -11,6 +11,11 @@
 
 from __future__ import annotations
 
+UNKNOWN_SCALE = (
+    "the rig's scale is not known; expected a rig with a known length: calibrate with a target of known size, or solve the "
+    "pose with a length or the baseline given"
+)
+
 
 class NodeError(RuntimeError):
     """A frame cannot be computed, sent or received; the message names the remedy."""

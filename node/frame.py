@@ -11,7 +11,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from .errors import NodeError
+from .errors import UNKNOWN_SCALE, NodeError
 
 Frame = Literal["view", "a", "base"]
 
@@ -34,6 +34,8 @@ class DepthFrame:
         From camera A's frame to the robot's base frame, where the rig knows it.
     near_m, far_m : float
         The working volume's distances along the view's optical axis, in metres.
+    metric : bool
+        False where the rig's scale is not known: all lengths here are then in baselines, and no metres may be made of them.
     stamp_ns : int
         Middle of camera A's exposure, nanoseconds since the Unix epoch; 0 where it is not known.
     skew_ns : int
@@ -59,6 +61,7 @@ class DepthFrame:
     T_base_a: NDArray[np.float64] | None = None
     near_m: float
     far_m: float
+    metric: bool = True
     stamp_ns: int = 0
     skew_ns: int = 0
     fingerprint: str = ""
@@ -90,12 +93,13 @@ class DepthFrame:
         Returns
         -------
         ndarray of shape (H, W, 3), float32
-            In metres; NaN where there is no depth.
+            In metres, or in baselines where the frame is not metric; NaN where there is no depth.
 
         Raises
         ------
         NodeError
-            Where the frame is none of the three, or the rig has not been placed in the robot's base frame.
+            Where the frame is none of the three, the rig has not been placed in the robot's base frame, or the base frame is
+            asked for where lengths are no metres.
         """
         if frame not in ("view", "a", "base"):
             raise NodeError(f"frame is {frame!r}; expected 'view', 'a' or 'base'")
@@ -118,4 +122,6 @@ class DepthFrame:
             raise NodeError(
                 "points wanted in the base frame, but the rig holds no T_base_a; register it with the robot"
             )
+        if not self.metric:
+            raise NodeError(f"points wanted in the base frame, but they are in baselines, since {UNKNOWN_SCALE}")
         return self.T_base_a @ self.T_a_view

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from ..calib import Rig
 from .config import NodeConfig
 from .engine import DepthEngine
-from .errors import PairError
+from .errors import UNKNOWN_SCALE, NodeError, PairError
 from .frame import DepthFrame
 from .pairing import LostPair, Pair
 from .publisher import Publisher
@@ -264,7 +264,15 @@ class _RationedLog:
 
 
 def depth_engine(rig: Rig, config: NodeConfig) -> Engine:
-    """Make the engine that the configuration asks for."""
+    """Make the engine that the configuration asks for.
+
+    Raises
+    ------
+    NodeError
+        Where the rig's scale is not known, so that there would be no metres to publish; or as the engine says.
+    """
+    if not rig.scale_known:
+        raise NodeError(f"the depth of {config.rig} would not be in metres, since {UNKNOWN_SCALE}")
     return DepthEngine(
         rig,
         near=config.volume.near_m,

@@ -13,7 +13,7 @@ import numpy as np
 from msgspec import Meta, Struct
 from numpy.typing import NDArray
 
-from .errors import WireError
+from .errors import UNKNOWN_SCALE, WireError
 from .frame import DepthFrame
 from .status import NodeStatus
 
@@ -128,9 +128,10 @@ def encode_depth(frame: DepthFrame, packing: Packing | None = None) -> bytes:
     Raises
     ------
     WireError
-        Where the frame's arrays do not fit one another.
+        Where the frame's arrays do not fit one another, or its lengths are not metres.
     """
     packing = packing or Packing()
+    _check_metric(frame)
     _check_shapes(frame)
     depth, sigma = (_pack_counts if packing.pixels == "uint16" else _pack_floats)(frame, packing)
     height, width = frame.depth.shape
@@ -228,6 +229,11 @@ def _decode(data: bytes, kind: str, keys: type[_Message]) -> _Message:
     raise WireError(
         f"message has version {envelope.version}; this program reads version {VERSION}: update the older of the two ends"
     )
+
+
+def _check_metric(frame: DepthFrame) -> None:
+    if not frame.metric:
+        raise WireError(f"this frame's depth is in baselines, not metres, since {UNKNOWN_SCALE}")
 
 
 def _check_shapes(frame: DepthFrame) -> None:

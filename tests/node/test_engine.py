@@ -312,13 +312,6 @@ def test_the_same_pair_gives_the_same_frame_bit_for_bit(
 # What it refuses to start with
 
 
-def test_a_rig_of_unknown_scale_is_refused_with_the_remedy() -> None:
-    with pytest.raises(
-        NodeError, match=r"scale is not known.* calibrate with a target of known size, or solve the pose"
-    ):
-        DepthEngine(parallel_rig(scale_known=False), near=NEAR_M, far=FAR_M)
-
-
 def test_an_unknown_matcher_is_refused_with_those_there_are() -> None:
     with pytest.raises(NodeError, match="matcher is 'blocks'; expected one of block, semiglobal"):
         DepthEngine(parallel_rig(), near=NEAR_M, far=FAR_M, matcher="blocks")  # type: ignore[arg-type]

@@ -10,8 +10,20 @@ from .camera import Camera, FloatArray
 from .eight_points import LEAST_POINTS
 from .errors import CalibrationError
 from .matches import BoolArray, Matches
+from .one_plane import PlaneFit, plane_of, poses_of_plane
+from .pose_doubts import (
+    bad_pairs,
+    plane_remarks,
+    refuse_same_images,
+    refuse_too_close,
+    refuse_turn_alone,
+    second_motion_remarks,
+)
 from .robust_pose import RobustPose, least_inliers, polished, robust_pose, share_by_chance
 from .sight_pairs import SightPairs
+
+_NEARLY_ONE_PLANE = 0.5
+"""Share of the matches on one plane from which a sample of five may have hit on the plane's second pose."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -51,14 +63,36 @@ def first_pose(a: Camera, b: Camera, matches: Matches) -> FirstPose:
     Raises
     ------
     CalibrationError
-        Where the matches do not give a pose: too few, or agreeing no better than chance.
+        Where the matches do not give a pose: too few; images that are one; no more agreeing than by chance; too close
+        together; no parallax; on one plane that two poses explain alike; or two motions of about as many matches.
     """
+    refuse_same_images(matches)
     pairs = SightPairs.of(a, b, matches)
     _refuse_few(pairs, len(matches))
-    pose = polished(pairs, _beyond_chance(pairs))
+    poses, fit = _possible(pairs, polished(pairs, _beyond_chance(pairs)))
+    pose = poses[0]
+    agreeing_pairs = pairs.chosen(pose.inliers)
+    refuse_turn_alone(agreeing_pairs, pose)
+    refuse_too_close(agreeing_pairs)
+    remarks = plane_remarks(fit, poses) if fit else []
+    bad = bad_pairs(pairs, pose)
+    remarks += [*bad.values(), *second_motion_remarks(pairs, pose)]
     inliers = np.zeros(len(matches), dtype=np.bool_)
     inliers[pairs.rows[pose.inliers]] = True
-    return FirstPose(R=pose.R, t=pose.t, inliers=inliers, other=None, remarks=())
+    inliers &= ~np.isin(matches.pair, list(bad))
+    other = (poses[1].R, poses[1].t) if len(poses) > 1 else None
+    return FirstPose(R=pose.R, t=pose.t, inliers=inliers, other=other, remarks=tuple(remarks))
+
+
+def _possible(pairs: SightPairs, pose: RobustPose) -> tuple[list[RobustPose], PlaneFit | None]:
+    """Give the poses possible, the best first, and the plane where the matches lie (nearly) on one.
+
+    Little parallax looks like a plane too, and its poses then serve as further places to start from.
+    """
+    fit = plane_of(pairs.chosen(pose.inliers))
+    if fit is None or fit.share < _NEARLY_ONE_PLANE:
+        return [pose], None
+    return poses_of_plane(pairs, fit.H, pose), fit
 
 
 def _refuse_few(pairs: SightPairs, given: int) -> None:

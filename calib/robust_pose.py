@@ -24,7 +24,7 @@ _POSES_OF_SAMPLE = 10
 _CONFIDENCE = 0.9999
 _MOST_SAMPLES = 5000
 _SHIFTS = 32
-_POLISHES = 2
+_POLISHES = 5
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -36,12 +36,19 @@ class RobustPose:
     R : ndarray of shape (3, 3)
     t : ndarray of shape (3,)
         The pose ``x_b = R x_a + t``; the length of t is 1.
-    inliers : ndarray of shape (N,), bool
+    costs : ndarray of shape (N,)
+        Squares of the misses in square pixels; what does not agree counts as if it only just did.
     """
 
     R: FloatArray
     t: FloatArray
-    inliers: BoolArray
+    costs: FloatArray
+
+    @property
+    def inliers(self) -> BoolArray:
+        """Which matches agree, shape (N,)."""
+        inliers: BoolArray = self.costs < INLIER_PX**2
+        return inliers
 
     @property
     def count(self) -> int:
@@ -73,13 +80,13 @@ def robust_pose(pairs: SightPairs) -> RobustPose | None:
         return None
     if E is None or not np.isfinite(E).all() or not E.any():
         return None
-    poses = decompose_essential(np.asarray(E[:3], dtype=np.float64))
-    return agreeing(pairs, *max(poses, key=lambda pose: agreeing(pairs, *pose).count))
+    four = [agreeing(pairs, *pose) for pose in decompose_essential(np.asarray(E[:3], dtype=np.float64))]
+    return min(four, key=lambda pose: float(pose.costs.sum()))
 
 
 def agreeing(pairs: SightPairs, R: FloatArray, t: FloatArray) -> RobustPose:
     """Give a pose with the matches that agree with it."""
-    return RobustPose(R=R, t=t, inliers=pairs.misses_px(R, t) <= INLIER_PX)
+    return RobustPose(R=R, t=t, costs=np.square(np.minimum(pairs.misses_px(R, t), INLIER_PX)))
 
 
 def polished(pairs: SightPairs, pose: RobustPose) -> RobustPose:
@@ -90,7 +97,7 @@ def polished(pairs: SightPairs, pose: RobustPose) -> RobustPose:
         except CalibrationError:
             return pose
         better = agreeing(pairs, *settled.poses.between(0, 1))
-        if better.count < pose.count / 2:
+        if better.costs.sum() >= pose.costs.sum():
             return pose
         pose = better
     return pose

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import cv2
 import leuven
 import motorcycle
@@ -120,3 +122,100 @@ def test_pictures_of_two_different_scenes_are_refused() -> None:
     other = Camera(width=pair.image_a.shape[1], height=pair.image_a.shape[0], K=pair.K)
     with pytest.raises(CalibrationError, match="do the images show the same scene"):
         first_pose(scene.rig.a, other, find_matches(scene.image_a, pair.image_a))
+
+
+def on_plane(rig: Scene, count: int, off: float = 0.0, seed: int = 0) -> np.ndarray:
+    """Points in view at 3 from camera A along a slanted plane's normal, off it by normal noise of that deviation."""
+    normal = np.array([0.4, -0.2, 1]) / np.linalg.norm([0.4, -0.2, 1])
+    points = rig.in_view(count, seed=seed)
+    along = 3 + np.random.default_rng(seed).normal(0, off, count)
+    return points * (along / (points @ normal))[:, None]
+
+
+TOWARDS_SCENE = turned((3, 2, 5), (0.2, 0.1, 1.0))
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_a_plane_seen_from_two_sides_gives_the_one_pose_that_has_it_before_both_cameras(seed: int) -> None:
+    found = first_pose(FINE, COARSE, RIG.seen(on_plane(RIG, 300, seed=seed), 0.5, seed))
+    assert max(RIG.errors_deg(found.R, found.t)) < 0.5
+    assert found.other is None
+    assert found.inliers.all()
+    assert "100% of the matches lie on one plane (limit 95%)" in found.remarks[0]
+
+
+def test_a_plane_that_two_poses_explain_alike_is_refused() -> None:
+    matches = TOWARDS_SCENE.seen(on_plane(TOWARDS_SCENE, 300), 0.5)
+    with pytest.raises(
+        CalibrationError, match=r"two poses, 7\.\d degrees of turn .* worse by \d\.\d standard .*; expected 3 or more"
+    ):
+        first_pose(FINE, COARSE, matches)
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_depth_off_a_plane_tells_its_two_poses_apart_and_the_other_is_given(seed: int) -> None:
+    found = first_pose(FINE, COARSE, TOWARDS_SCENE.seen(on_plane(TOWARDS_SCENE, 300, 0.03, seed), 0.5, seed))
+    assert max(TOWARDS_SCENE.errors_deg(found.R, found.t)) < 0.5
+    assert found.other is not None
+    assert TOWARDS_SCENE.errors_deg(*found.other)[0] > 5
+    assert "put things off the plane into view" in found.remarks[0]
+
+
+@pytest.mark.parametrize("bad", [0, 300])
+@pytest.mark.parametrize("centre", [(0.0, 0.0, 0.0), (0.01, 0.0, 0.0)])
+def test_cameras_that_only_turned_are_refused(centre: tuple[float, float, float], bad: int) -> None:
+    rig = turned((10, 3, 6), centre)
+    matches = Matches.join([rig.seen(rig.in_view(300), 0.5), wrong(FINE, COARSE, bad)])
+    with pytest.raises(
+        CalibrationError, match=r"hardly differ in place, or only turned: .* less than 1\.\d px; expected 2"
+    ):
+        first_pose(FINE, COARSE, matches)
+
+
+def test_one_image_given_twice_is_named_as_that() -> None:
+    pair = leuven.load()
+    camera = Camera(width=pair.image_a.shape[1], height=pair.image_a.shape[0], K=pair.K)
+    matches = Matches.join([RIG.seen(RIG.in_view(50)), find_matches(pair.image_a, pair.image_a, pair=3)])
+    with pytest.raises(CalibrationError, match=r"matches of pair 3 lie at the same pixel .* one and the same"):
+        first_pose(camera, camera, matches)
+
+
+def test_points_in_one_corner_are_refused_with_the_angle_they_span() -> None:
+    points = RIG.in_view(20000)
+    corner = points[(np.abs(FINE.project(points) - [600, 300]) < 50).all(axis=1)]
+    with pytest.raises(
+        CalibrationError,
+        match=r"too close together: nine in ten span [45]\.\d degrees of camera [AB].* expected 8 or more",
+    ):
+        first_pose(FINE, COARSE, RIG.seen(corner))
+
+
+def test_a_pair_that_does_not_belong_is_named_and_left_out() -> None:
+    good = [RIG.seen(RIG.in_view(150, seed=pair), pair=pair, seed=pair) for pair in (0, 2)]
+    bad = wrong(FINE, COARSE, 150, pair=1)
+    found = first_pose(FINE, COARSE, Matches.join([good[0], bad, good[1]]))
+    assert max(RIG.errors_deg(found.R, found.t)) < 0.3
+    (remark,) = found.remarks
+    assert re.match(
+        r"pair 1: \d of 150 matches agree with the pose that the other pairs give; expected \d or more", remark
+    )
+    assert not found.inliers[len(good[0]) : len(good[0]) + 150].any()
+
+
+def moved(count: int) -> Matches:
+    """What camera B sees of a part of the scene after that has moved by a tenth of a baseline and turned."""
+    other = turned((-9, 6, 2), (0.7, -0.15, 0.1))
+    return other.seen(other.in_view(count, seed=7))
+
+
+def test_a_part_of_the_scene_that_moved_is_remarked_on() -> None:
+    found = first_pose(FINE, COARSE, Matches.join([RIG.seen(RIG.in_view(300)), moved(120)]))
+    assert max(RIG.errors_deg(found.R, found.t)) < 0.3
+    (remark,) = found.remarks
+    assert "matches agree on another motion than" in remark
+    assert "(limit 20%)" in remark
+
+
+def test_two_motions_of_as_many_matches_are_refused() -> None:
+    with pytest.raises(CalibrationError, match=r"on another motion than .* expected less than 70% to know which"):
+        first_pose(FINE, COARSE, Matches.join([RIG.seen(RIG.in_view(300)), moved(300)]))

@@ -19,7 +19,7 @@ from .pose_doubts import (
     refuse_turn_alone,
     second_motion_remarks,
 )
-from .robust_pose import RobustPose, least_inliers, polished, robust_pose, share_by_chance
+from .robust_pose import RobustPose, least_inliers, robust_pose, share_by_chance
 from .sight_pairs import SightPairs
 
 _NEARLY_ONE_PLANE = 0.5
@@ -69,7 +69,7 @@ def first_pose(a: Camera, b: Camera, matches: Matches) -> FirstPose:
     refuse_same_images(matches)
     pairs = SightPairs.of(a, b, matches)
     _refuse_few(pairs, len(matches))
-    poses, fit = _possible(pairs, polished(pairs, _beyond_chance(pairs)))
+    poses, fit = _possible(pairs, _beyond_chance(pairs))
     pose = poses[0]
     agreeing_pairs = pairs.chosen(pose.inliers)
     refuse_turn_alone(agreeing_pairs, pose)

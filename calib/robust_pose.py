@@ -21,6 +21,12 @@ _SAMPLE = 5
 _POSES_OF_SAMPLE = 10
 """Nister's: five points give up to ten essential matrices."""
 
+_TRIED_PX = (0.75, INLIER_PX)
+"""Where most of a scene is one plane, a pose that is wrong by degrees agrees with it within 3 px; features are ten times
+better than that, picked points are not."""
+
+_JUDGED_PX = (0.5, 1.0, 2.0, INLIER_PX)
+
 _CONFIDENCE = 0.9999
 _MOST_SAMPLES = 5000
 _SHIFTS = 32
@@ -57,9 +63,36 @@ class RobustPose:
 
 
 def robust_pose(pairs: SightPairs) -> RobustPose | None:
-    """Find the pose that most matches agree with; None where no sample of five gave any.
+    """Find the pose that chance explains least; None where no sample of five gave any.
 
-    The same matches always give the same pose.
+    Poses are looked for with narrow and with wide limits, refined, and judged by :func:`log_by_chance`. The same matches
+    always give the same pose.
+    """
+    found = [pose for limit_px in _TRIED_PX if (pose := _sampled(pairs, limit_px)) is not None]
+    if not found:
+        return None
+    refined = [polished(pairs, pose) for pose in found]
+    return min(refined, key=lambda pose: log_by_chance(pairs, pose))
+
+
+def log_by_chance(pairs: SightPairs, pose: RobustPose) -> float:
+    """Give the logarithm of how many poses so good wrong matches would give: the least over several limits.
+
+    References
+    ----------
+    Moisan and Stival, "A probabilistic criterion to detect rigid point matches between two images and estimate the
+    fundamental matrix", IJCV 57(3), 2004, eq. 14, with ten poses for each sample of five.
+    """
+    by_chance = share_by_chance(pairs, pose.R, pose.t)
+    count = len(pairs)
+    agree = np.array([(pose.costs < limit_px**2).sum() for limit_px in _JUDGED_PX], dtype=np.float64)
+    shares = by_chance * np.array(_JUDGED_PX) / INLIER_PX
+    enough = agree > _SAMPLE
+    return float(np.min(_log_expected(count, agree[enough], shares[enough]), initial=np.inf))
+
+
+def _sampled(pairs: SightPairs, limit_px: float) -> RobustPose | None:
+    """Find the pose that most matches agree with within a limit; None where no sample gave any.
 
     References
     ----------
@@ -73,7 +106,7 @@ def robust_pose(pairs: SightPairs) -> RobustPose | None:
             np.eye(3),
             cv2.USAC_MAGSAC,
             _CONFIDENCE,
-            INLIER_PX * pairs.rad_per_px,
+            limit_px * pairs.rad_per_px,
             _MOST_SAMPLES,
         )
     except cv2.error:  # all points of a sample may be one
@@ -135,14 +168,19 @@ def least_inliers(count: int, by_chance: float) -> int:
     fundamental matrix", IJCV 57(3), 2004, eq. 14, here with ten poses for each sample of five.
     """
     k = np.arange(_SAMPLE + 1, count + 1, dtype=np.float64)
-    log_expected = (
-        np.log(_POSES_OF_SAMPLE * (count - _SAMPLE))
-        + _log_choices(float(count), k)
-        + _log_choices(k, float(_SAMPLE))
-        + (k - _SAMPLE) * np.log(by_chance)
-    )
-    explained = k[log_expected >= 0]
+    explained = k[_log_expected(count, k, by_chance) >= 0]
     return int(explained.max(initial=_SAMPLE)) + 1
+
+
+def _log_expected(count: int, agree: FloatArray, by_chance: FloatArray | float) -> FloatArray:
+    """Give the logarithm of how many poses that so many of ``count`` wrong matches agree with there would be."""
+    logs: FloatArray = (
+        np.log(_POSES_OF_SAMPLE * (count - _SAMPLE))
+        + _log_choices(float(count), agree)
+        + _log_choices(agree, float(_SAMPLE))
+        + (agree - _SAMPLE) * np.log(by_chance)
+    )
+    return logs
 
 
 def _log_choices(of: FloatArray | float, taken: FloatArray | float) -> FloatArray:

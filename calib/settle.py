@@ -173,7 +173,7 @@ def _account(
     """Work out what is left, and the covariance.
 
     Of an M-estimate it is the mean square of the loss's slope over the square of its mean curvature, times the inverse of
-    the normal equations (Huber, Robust Statistics, 1981, section 7.6). Where errors go together within clusters, the sums
+    the normal equations, with a correction for few points (Huber, Robust Statistics, 1981, section 7.6). Where errors go together within clusters, the sums
     of the slopes over each vary more than that says (White, Econometrica 48(4), 1980; Liang and Zeger, Biometrika 73(1),
     1986); by how much, in the mean over all directions, raises the whole.
     """
@@ -184,8 +184,10 @@ def _account(
     kept = share < 1
     left, slopes, share = left[kept], slopes[kept], share[kept]
     pull = left * (1 - share) ** 2
-    curvature = float(((1 - share) * (1 - 5 * share)).mean())
+    bends = (1 - share) * (1 - 5 * share)
+    curvature = float(bends.mean())
     unknowns = slopes.shape[1]
+    few = 1 + unknowns / len(pull) * float(bends.var()) / curvature**2
     variance = float((pull**2).sum()) / max(len(pull) - unknowns, 1)
     normal = slopes.T @ slopes
     _refuse_open(normal)
@@ -195,7 +197,7 @@ def _account(
         misses=tuple(misses),
         weights=tuple(_weights(groups, misses, noise)),
         noise_px=dict(noise),
-        covariance=basis @ np.linalg.inv(normal) @ basis.T * (variance / curvature**2 * relatedness),
+        covariance=basis @ np.linalg.inv(normal) @ basis.T * (variance * (few / curvature) ** 2 * relatedness),
         relatedness=relatedness,
     )
 

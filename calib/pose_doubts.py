@@ -98,9 +98,9 @@ def plane_remarks(fit: PlaneFit, poses: list[RobustPose]) -> list[str]:
     apart = np.degrees(Rotation.from_matrix(poses[0].R @ poses[1].R.T).magnitude())
     miss = [float(np.sqrt(pose.costs[pose.inliers].mean())) for pose in poses[:2]]
     two = (
-        f"{fit.share:.0%} of the matches lie within {INLIER_PX:g} px of one plane, which two poses, {apart:.1f} degrees of turn "
-        f"from one another, explain: the second fits worse by {worse:.1f} standard deviations (misses of {miss[1]:.2f} px, not "
-        f"{miss[0]:.2f} px)"
+        f"{fit.share:.0%} of the matches lie within {INLIER_PX:g} px of one plane, which two poses, {apart:.1f} degrees of "
+        f"turn from one another, explain: the second fits worse by {worse:.1f} standard deviations (misses of "
+        f"{miss[1]:.2f} px, not {miss[0]:.2f} px)"
     )
     if worse < _TOLD_APART:
         raise CalibrationError(

@@ -39,10 +39,13 @@ class Scene:
         """Points that both cameras see, at distances along A's axis, spread over A's image."""
         rng = np.random.default_rng(seed)
         kept = np.empty((0, 3))
-        while len(kept) < count:
+        for _ in range(100):
             rays = self.a.rays(rng.uniform([5, 5], [self.a.width - 5, self.a.height - 5], (4 * count, 2)))
             points = rays * (rng.uniform(near, far, len(rays)) / np.maximum(rays[:, 2], 0.3))[:, None]
             kept = np.concatenate([kept, points[self.b.contains(self.b.project(points @ self.R.T + self.t))]])
+            if len(kept) >= count:
+                break
+        assert len(kept) >= count, "the cameras hardly see the same"
         return kept[:count]
 
     def errors_deg(self, R: np.ndarray, t: np.ndarray) -> tuple[float, float]:

@@ -7,10 +7,8 @@ and aloud: no scripts, no outside files, no meaning in colour alone.
 from __future__ import annotations
 
 import html
-import math
 import os
-from collections.abc import Iterable, Mapping, Sequence
-from pathlib import Path
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from numpy.typing import NDArray
@@ -20,16 +18,14 @@ from .compare import RigComparison, compare_rigs, rows
 from .depth_error import MATCHING_SIGMA_PX
 from .errors import CalibrationError
 from .report_figures import figures_of, report_figures
+from .report_page import mm, page, paragraph, plot, px, section, table, verdict_section, with_sigma, write_page
 from .report_plots import coverage, depth_error, poses, residual_histogram, residual_vectors
-from .report_style import STYLE
 from .report_thumbnails import enlargement_text, thumbnail_figures
 from .result import CalibrationResult
-from .rig import Rig, write_atomically
+from .rig import Rig
 from .verdict import Verdict, judge
 
 __all__ = ["report_figures", "report_html", "write_report"]
-
-_MARKS = {"good": "&#10003;", "doubtful": "!", "not usable": "&#10007;"}
 
 
 def write_report(
@@ -66,11 +62,7 @@ def write_report(
     text = report_html(
         result, near_m=near_m, far_m=far_m, thumbnails=thumbnails, old=old, disparity_sigma_px=disparity_sigma_px
     )
-    target = Path(path)
-    try:
-        write_atomically(target, text.encode())
-    except OSError as exc:
-        raise CalibrationError(f"cannot write report {target}: {exc}; expected a folder that can be written") from exc
+    write_page(path, text)
 
 
 def report_html(
@@ -87,75 +79,37 @@ def report_html(
     figures = figures_of(result, verdict)
     sections = [
         _verdict_section(result, verdict),
-        _section("do", "What to do next", _actions(verdict)),
-        _section("figures", "Figures", _figure_tables(figures)),
-        *([] if old is None else [_section("comparison", "Old rig and new", _comparison(old, result, near_m, far_m))]),
-        _section("depth", "How far depth may be off", _depth(result, verdict)),
-        _section("residuals", "Where corners were off", _residuals(result)),
-        _section("coverage", "Where corners were seen", _coverage(result)),
-        _section("poses", "Where the boards stood", _poses(result, near_m, far_m)),
-        _section("correlations", "Parameters that trade against each other", _correlations(figures["correlations"])),
-        _section("views", "Every view", _views(result, thumbnails)),
-        _section("aside", "Views set aside", _set_aside(result)),
+        section("do", "What to do next", _actions(verdict)),
+        section("figures", "Figures", _figure_tables(figures)),
+        *([] if old is None else [section("comparison", "Old rig and new", _comparison(old, result, near_m, far_m))]),
+        section("depth", "How far depth may be off", _depth(result, verdict)),
+        section("residuals", "Where corners were off", _residuals(result)),
+        section("coverage", "Where corners were seen", _coverage(result)),
+        section("poses", "Where the boards stood", _poses(result, near_m, far_m)),
+        section("correlations", "Parameters that trade against each other", _correlations(figures["correlations"])),
+        section("views", "Every view", _views(result, thumbnails)),
+        section("aside", "Views set aside", _set_aside(result)),
     ]
-    return _page(result, sections)
-
-
-def _page(result: CalibrationResult, sections: Iterable[str]) -> str:
     notes = result.rig.notes
     facts = [f"rig {result.rig.fingerprint[:12]}"]
     facts += [f"{word} {notes[key]}" for key, word in (("target", "target"), ("made", "made")) if key in notes]
-    return "\n".join(
-        [
-            '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">',
-            '<meta name="viewport" content="width=device-width, initial-scale=1">',
-            f"<title>Calibration report</title>\n<style>{STYLE}</style>\n</head>\n<body>\n<main>",
-            f'<header><h1>Calibration report</h1><p class="facts">{html.escape(" · ".join(facts))}</p></header>',
-            *sections,
-            "</main>\n</body>\n</html>\n",
-        ]
-    )
-
-
-def _section(name: str, title: str, body: str) -> str:
-    return f'<section id="{name}">\n<h2>{html.escape(title)}</h2>\n{body}\n</section>'
-
-
-def _paragraph(text: str, kind: str = "") -> str:
-    return f"<p{f' class={chr(34)}{kind}{chr(34)}' if kind else ''}>{html.escape(text)}</p>"
-
-
-def _table(head: Sequence[str], body: Iterable[Sequence[str]]) -> str:
-    """Write a table whose first column names the row; it scrolls by itself on a narrow screen."""
-    top = "".join(f'<th scope="col">{html.escape(cell)}</th>' for cell in head)
-    lines = "".join(
-        f'<tr><th scope="row">{html.escape(row[0])}</th>'
-        + "".join(f"<td>{html.escape(cell)}</td>" for cell in row[1:])
-        + "</tr>"
-        for row in body
-    )
-    return f'<div class="scroll"><table><thead><tr>{top}</tr></thead><tbody>{lines}</tbody></table></div>'
-
-
-def _plot(picture: str, caption: str) -> str:
-    return f"<figure>{picture}<figcaption>{html.escape(caption)}</figcaption></figure>"
+    return page("Calibration report", facts, sections)
 
 
 def _verdict_section(result: CalibrationResult, verdict: Verdict) -> str:
     near, far = verdict.curve.distances_m[0], verdict.curve.distances_m[-1]
-    word = verdict.grade.replace(" ", "-")
-    return (
-        f'<section id="verdict" class="{word}">\n<h2><span class="mark" aria-hidden="true">{_MARKS[verdict.grade]}</span> '
-        f"{html.escape(verdict.headline)}</h2>\n{_paragraph(verdict.sentence, 'answer')}\n"
+    body = (
+        f"{paragraph(verdict.sentence, 'answer')}\n"
         f"<ul><li><b>Judged for</b> {near:.2f} to {far:.2f} m, from {result.pairs} views of both cameras: "
         f"<b>{verdict.grade}</b>.</li><li><b>Not for</b> {html.escape(words.NOT_FOR)}</li>"
-        f"<li><b>Scale:</b> {html.escape(words.SCALE)}</li></ul>\n</section>"
+        f"<li><b>Scale:</b> {html.escape(words.SCALE)}</li></ul>"
     )
+    return verdict_section(verdict.grade, verdict.headline, body)
 
 
 def _actions(verdict: Verdict) -> str:
     if not verdict.findings:
-        return _paragraph(words.NOTHING_TO_DO)
+        return paragraph(words.NOTHING_TO_DO)
     lines = "".join(
         f"<li><b>{html.escape(finding.remedy or _capital(finding.what))}</b>"
         + (f'<br><span class="why">Because {html.escape(finding.what)}.</span>' if finding.remedy else "")
@@ -174,25 +128,25 @@ def _figure_tables(figures: Mapping[str, Any]) -> str:
     fit, held, views = figures["fit"], figures["held_out"], figures["views"]
     pose = figures["pose"]
     both = [
-        ("baseline", _known(pose["baseline_mm"], pose["baseline_sigma_mm"], "mm")),
+        ("baseline", with_sigma(pose["baseline_mm"], pose["baseline_sigma_mm"], "mm")),
         ("rotation of B from A", f"{pose['rotation_deg']:.3f} degrees"),
         *(
-            (f"turn about {axis}", _known(turn, sigma, "degrees", 4))
+            (f"turn about {axis}", with_sigma(turn, sigma, "degrees", 4))
             for axis, turn, sigma in zip(
                 "xyz", pose["rotation_vector_deg"], _three(pose["rotation_sigma_deg"]), strict=True
             )
         ),
         *(
-            (f"translation {axis}", _known(shift, sigma, "mm"))
+            (f"translation {axis}", with_sigma(shift, sigma, "mm"))
             for axis, shift, sigma in zip("xyz", pose["t_mm"], _three(pose["t_sigma_mm"]), strict=True)
         ),
-        ("reprojection error, RMS", _px(fit["rms_px"])),
-        ("noise of one corner coordinate", _px(fit["noise_px"])),
-        ("epipolar distance, median and 95 %", f"{_px(fit['epipolar_median_px'])}, {_px(fit['epipolar_95_px'])}"),
-        ("held-out views: reprojection error, RMS", "none held out" if held is None else _px(held["rms_px"])),
+        ("reprojection error, RMS", px(fit["rms_px"])),
+        ("noise of one corner coordinate", px(fit["noise_px"])),
+        ("epipolar distance, median and 95 %", f"{px(fit['epipolar_median_px'])}, {px(fit['epipolar_95_px'])}"),
+        ("held-out views: reprojection error, RMS", "none held out" if held is None else px(held["rms_px"])),
         (
             "held-out views: epipolar distance, median and 95 %",
-            "none held out" if held is None else f"{_px(held['epipolar_median_px'])}, {_px(held['epipolar_95_px'])}",
+            "none held out" if held is None else f"{px(held['epipolar_median_px'])}, {px(held['epipolar_95_px'])}",
         ),
         (
             "views",
@@ -201,17 +155,17 @@ def _figure_tables(figures: Mapping[str, Any]) -> str:
         ),
     ]
     tables = [
-        _table(("both cameras", "value ± 1 sigma"), both),
-        _table(("", "camera A", "camera B"), _camera_rows(a, b)),
+        table(("both cameras", "value ± 1 sigma"), both),
+        table(("", "camera A", "camera B"), _camera_rows(a, b)),
     ]
     if figures["trials"]:
         tables.append(
-            _table(
+            table(
                 ("lens model tried", "error in held-out views", "parameters", "taken", "why"),
                 [
                     (
                         trial["name"],
-                        _px(trial["held_out_rms_px"]),
+                        px(trial["held_out_rms_px"]),
                         str(trial["parameters"]),
                         "yes" if trial["chosen"] else "no",
                         trial["note"],
@@ -230,16 +184,18 @@ def _camera_rows(a: Mapping[str, Any], b: Mapping[str, Any]) -> list[tuple[str, 
     return [
         row("image, pixels", lambda c: f"{c['width']} x {c['height']}"),
         row("lens model", lambda c: f"{c['model']}, {len(c['distortion'])} coefficients"),
-        row("focal length x", lambda c: _known(c["focal_px"][0], c["focal_sigma_px"][0], "px", 2)),
-        row("focal length y", lambda c: _known(c["focal_px"][1], c["focal_sigma_px"][1], "px", 2)),
+        row("focal length x", lambda c: with_sigma(c["focal_px"][0], c["focal_sigma_px"][0], "px", 2)),
+        row("focal length y", lambda c: with_sigma(c["focal_px"][1], c["focal_sigma_px"][1], "px", 2)),
         row(
-            "principal point x", lambda c: _known(c["principal_point_px"][0], c["principal_point_sigma_px"][0], "px", 2)
+            "principal point x",
+            lambda c: with_sigma(c["principal_point_px"][0], c["principal_point_sigma_px"][0], "px", 2),
         ),
         row(
-            "principal point y", lambda c: _known(c["principal_point_px"][1], c["principal_point_sigma_px"][1], "px", 2)
+            "principal point y",
+            lambda c: with_sigma(c["principal_point_px"][1], c["principal_point_sigma_px"][1], "px", 2),
         ),
         row("lens coefficients", lambda c: ", ".join(f"{value:.5f}" for value in c["distortion"]) or "none"),
-        row("reprojection error on its own, RMS", lambda c: _px(c["rms_px"])),
+        row("reprojection error on its own, RMS", lambda c: px(c["rms_px"])),
         row("picture reached by corners", lambda c: f"{c['coverage']:.0%}"),
         row("largest tilt of the target", lambda c: f"{c['largest_tilt_deg']:.0f} degrees"),
     ]
@@ -249,23 +205,13 @@ def _three(values: Sequence[float] | None) -> Sequence[float | None]:
     return (None, None, None) if values is None else values
 
 
-def _known(value: float, sigma: float | None, unit: str, digits: int = 3) -> str:
-    if not sigma:
-        return f"{value:.{digits}f} {unit} ({'held' if sigma == 0 else 'sigma not known'})"
-    return f"{value:.{digits}f} ± {sigma:.{digits}f} {unit}"
-
-
-def _px(value: float | None) -> str:
-    return "not known" if value is None else f"{value:.3f} px"
-
-
 def _comparison(old: Rig, result: CalibrationResult, near_m: float, far_m: float) -> str:
     try:
         comparison = compare_rigs(
             old, result.rig, distance_m=(near_m + far_m) / 2, volume_m=(near_m, far_m), new_parameters=result.parameters
         )
     except CalibrationError as exc:
-        return _paragraph(f"The two rigs cannot be compared: {exc}.")
+        return paragraph(f"The two rigs cannot be compared: {exc}.")
     return comparison_html(comparison)
 
 
@@ -283,8 +229,8 @@ def comparison_html(comparison: RigComparison) -> str:
     parameters = [(name, old, new, change, sigmas, unit) for name, old, new, change, sigmas, unit in rows(comparison)]
     return "\n".join(
         [
-            _paragraph(comparison.sentence, "answer"),
-            _table(
+            paragraph(comparison.sentence, "answer"),
+            table(
                 (
                     "the same pixels at",
                     "depth change: middle",
@@ -293,7 +239,7 @@ def comparison_html(comparison: RigComparison) -> str:
                 ),
                 shifts,
             ),
-            _table(("parameter", "old", "new", "change", "in sigmas", "unit"), parameters),
+            table(("parameter", "old", "new", "change", "in sigmas", "unit"), parameters),
         ]
     )
 
@@ -301,15 +247,15 @@ def comparison_html(comparison: RigComparison) -> str:
 def _depth(result: CalibrationResult, verdict: Verdict) -> str:
     curve = verdict.curve
     picked = [0, len(curve.distances_m) // 2, -1]
-    table = _table(
+    values = table(
         ("distance", "middle, all", "worst place, all", "of it calibration (middle, worst)", "of it matching"),
         [
             (
                 f"{curve.distances_m[i]:.2f} m",
-                _mm(curve.centre_m[i]),
-                _mm(curve.worst_m[i]),
-                f"{_mm(curve.calibration_centre_m[i])}, {_mm(curve.calibration_worst_m[i])}",
-                _mm(curve.matching_m[i]),
+                mm(curve.centre_m[i]),
+                mm(curve.worst_m[i]),
+                f"{mm(curve.calibration_centre_m[i])}, {mm(curve.calibration_worst_m[i])}",
+                mm(curve.matching_m[i]),
             )
             for i in picked
         ],
@@ -318,41 +264,37 @@ def _depth(result: CalibrationResult, verdict: Verdict) -> str:
         f"Here f = {max(result.rig.a.focal_px, result.rig.b.focal_px):.0f} px, B = {result.rig.baseline_m * 1e3:.1f} mm, "
         f"sigma of a match {curve.matching_sigma_px:g} px."
     )
-    return table + _plot(depth_error(curve), f"{words.DEPTH} {law}")
-
-
-def _mm(metres: float) -> str:
-    return f"{metres * 1e3:.2f} mm" if math.isfinite(metres) else "not known"
+    return values + plot(depth_error(curve), f"{words.DEPTH} {law}")
 
 
 def _residuals(result: CalibrationResult) -> str:
-    arrows = "".join(_plot(residual_vectors(result, camera), words.ARROWS) for camera in "ab")
-    return f'<div class="pair">{arrows}</div>' + _plot(residual_histogram(result), words.HISTOGRAM)
+    arrows = "".join(plot(residual_vectors(result, camera), words.ARROWS) for camera in "ab")
+    return f'<div class="pair">{arrows}</div>' + plot(residual_histogram(result), words.HISTOGRAM)
 
 
 def _coverage(result: CalibrationResult) -> str:
-    return '<div class="pair">' + "".join(_plot(coverage(result, camera), words.COVERAGE) for camera in "ab") + "</div>"
+    return '<div class="pair">' + "".join(plot(coverage(result, camera), words.COVERAGE) for camera in "ab") + "</div>"
 
 
 def _poses(result: CalibrationResult, near_m: float, far_m: float) -> str:
-    return _plot(poses(result, near_m, far_m), words.POSES)
+    return plot(poses(result, near_m, far_m), words.POSES)
 
 
 def _correlations(strong: Sequence[Mapping[str, Any]]) -> str:
     if not strong:
-        return _paragraph(words.NO_CORRELATIONS)
-    table = _table(
+        return paragraph(words.NO_CORRELATIONS)
+    values = table(
         ("parameter", "and parameter", "correlation"), [(*pair["words"], f"{pair['r']:+.3f}") for pair in strong]
     )
-    return _paragraph(words.CORRELATIONS) + table
+    return paragraph(words.CORRELATIONS) + values
 
 
 def _views(result: CalibrationResult, thumbnails: Mapping[tuple[str, str], NDArray[Any]] | None) -> str:
     text = f"Worst first. {enlargement_text(result)} {words.WORST_VIEW}"
-    return _paragraph(text) + f'<div class="views">{thumbnail_figures(result, thumbnails)}</div>'
+    return paragraph(text) + f'<div class="views">{thumbnail_figures(result, thumbnails)}</div>'
 
 
 def _set_aside(result: CalibrationResult) -> str:
     if not result.set_aside:
-        return _paragraph("None.")
-    return _table(("view", "why it took no part"), [(view.name, view.reason) for view in result.set_aside])
+        return paragraph("None.")
+    return table(("view", "why it took no part"), [(view.name, view.reason) for view in result.set_aside])

@@ -1,13 +1,7 @@
-"""The report's plots, each an SVG text that stands inside an HTML page on its own.
-
-Colours are those that people with any colour vision tell apart (Okabe and Ito, 2008), and no colour stands alone: lines
-differ in dashes, marks in shape, areas in hatching.
-"""
+"""The plots of a calibration's report, each an SVG text that stands inside an HTML page on its own."""
 
 from __future__ import annotations
 
-import io
-import re
 from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING
 
@@ -16,84 +10,27 @@ import numpy as np
 
 from .camera import Camera, FloatArray
 from .depth_error import DepthErrorCurve, common_view
-from .errors import CalibrationError
+from .report_drawing import (
+    BLUE,
+    CELLS,
+    GREEN,
+    INK,
+    ORANGE,
+    VECTOR_SHARE,
+    arrow_lines,
+    coverage_axes,
+    dots,
+    image_axes,
+    new_figure,
+    round_below,
+    svg,
+)
 from .result import CalibrationResult, ViewFit
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
-    from matplotlib.figure import Figure
-
-BLUE, ORANGE, GREEN, INK, PALE = "#0072b2", "#d55e00", "#007a5a", "#222222", "#8a8a8a"
-
-_GRID = (8, 6)
-"""The cells in which coverage is counted, as in ``CameraFit.coverage``."""
-
-_VECTOR_SHARE = 0.035
-"""Length of a large residual on the plot, as a share of the image's width."""
-
 
 _SAME_PLACE_M = 1e-3
-
-_DOT_PX = 0.5
-"""A line without any length is left out of the drawing."""
-
-
-def new_figure(width_in: float, height_in: float) -> Figure:
-    """Make an empty figure without any global state.
-
-    Raises
-    ------
-    CalibrationError
-        Where matplotlib is not installed.
-    """
-    try:
-        from matplotlib.figure import Figure
-    except ImportError as exc:
-        raise CalibrationError(
-            'a report needs matplotlib, which is not installed: pip install "skewline[report]"'
-        ) from exc
-    return Figure(figsize=(width_in, height_in), layout="constrained")
-
-
-def svg(figure: Figure, name: str, alt: str) -> str:
-    """Write a figure as inline SVG, the same bytes every time, its ids told apart by the name.
-
-    Parameters
-    ----------
-    figure : Figure
-    name : str
-        Of letters and dashes; unique on the page.
-    alt : str
-        What the plot shows, for a person who does not see it.
-    """
-    from matplotlib import rc_context
-
-    sink = io.StringIO()
-    with rc_context({"svg.hashsalt": name, "svg.fonttype": "none", "font.size": 10, "path.simplify": False}):
-        figure.savefig(sink, format="svg", metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
-    text = sink.getvalue()
-    text = text[text.index("<svg") :]
-    text = re.sub(r"<metadata>.*?</metadata>", "", text, flags=re.DOTALL)
-    head, _, body = text.partition(">")
-    box = re.search(r'viewBox="[^"]*"', head)
-    # Inside HTML the namespaces go without saying, and the page sets the size.
-    start = f'<svg {box.group(0) if box else ""} role="img" aria-label="{_attribute(alt)}">'
-    body = re.sub(r'\bid="', f'id="{name}-', body)
-    body = re.sub(r"url\(#", f"url(#{name}-", body)
-    body = re.sub(r'xlink:href="#', f'href="#{name}-', body)
-    return start + body.strip()
-
-
-def _attribute(text: str) -> str:
-    return text.replace("&", "&amp;").replace('"', "&quot;").replace("<", "&lt;")
-
-
-def _image_axes(figure: Figure, camera: Camera, title: str) -> Axes:
-    """Make axes that are the camera's image: x right, y down."""
-    axes = figure.add_subplot(1, 1, 1)
-    axes.set(xlim=(-0.5, camera.width - 0.5), ylim=(camera.height - 0.5, -0.5), aspect="equal", title=title)
-    axes.set(xlabel="pixels", ylabel="pixels")
-    return axes
 
 
 def _of(result: CalibrationResult, camera: str) -> list[ViewFit]:
@@ -110,20 +47,20 @@ def residual_vectors(result: CalibrationResult, camera: str) -> str:
     lens: Camera = getattr(result.rig, camera)
     lengths = np.linalg.norm(_stack(view.residuals_px for view in views), axis=1)
     large = float(np.percentile(lengths, 95)) if len(lengths) else 0.0
-    scale = _VECTOR_SHARE * lens.width / large if large > 0 else 1.0
-    key = _round_below(large)
+    scale = VECTOR_SHARE * lens.width / large if large > 0 else 1.0
+    key = round_below(large)
     figure = new_figure(6.2, 5.1)
-    axes = _image_axes(figure, lens, "")
+    axes = image_axes(figure, lens, "")
     for used, colour, place in ((True, BLUE, 0.0), (False, ORANGE, 0.45)):
         pixels = _stack(view.pixels for view in views if view.used is used)
         if not len(pixels):
             continue
         arrows = _stack(view.residuals_px for view in views if view.used is used) * scale
-        axes.plot(*_arrow_lines(pixels, arrows).T, color=colour, linewidth=0.8)
+        axes.plot(*arrow_lines(pixels, arrows).T, color=colour, linewidth=0.8)
         if not used:
-            axes.plot(*_dots(pixels).T, color=colour, linewidth=2.6, solid_capstyle="round")
+            axes.plot(*dots(pixels).T, color=colour, linewidth=2.6, solid_capstyle="round")
         foot = np.array([[(place + 0.01) * lens.width, -0.045 * lens.height]])
-        axes.plot(*_arrow_lines(foot, np.array([[key * scale, 0.0]])).T, color=colour, linewidth=1.6, clip_on=False)
+        axes.plot(*arrow_lines(foot, np.array([[key * scale, 0.0]])).T, color=colour, linewidth=1.6, clip_on=False)
         text = f"{key:g} px, {'view used' if used else 'held out (dot at the foot)'}"
         axes.text(foot[0, 0] + key * scale * 1.3, foot[0, 1], text, va="center", fontsize=9)
     axes.set_title(
@@ -131,28 +68,6 @@ def residual_vectors(result: CalibrationResult, camera: str) -> str:
     )
     alt = f"Arrows over the image of camera {camera.upper()}; 95 % of {len(lengths)} residuals are below {large:.2f} pixels."
     return svg(figure, f"vectors-{camera}", alt)
-
-
-def _arrow_lines(feet: FloatArray, arrows: FloatArray) -> FloatArray:
-    """Give arrows as one line with gaps, shape (7 N, 2): one path draws faster than thousands of shapes."""
-    tips = feet + arrows
-    turned = np.column_stack([-arrows[:, 1], arrows[:, 0]])
-    gap = np.full_like(feet, np.nan)
-    barbs = [tips - 0.3 * arrows + side * 0.15 * turned for side in (1, -1)]
-    return np.stack([feet, tips, gap, barbs[0], tips, barbs[1], gap], axis=1).reshape(-1, 2)
-
-
-def _dots(points: FloatArray) -> FloatArray:
-    """Give points as lines almost without length, which round ends make dots; shape (3 N, 2)."""
-    return np.stack([points, points + np.array([_DOT_PX, 0.0]), np.full_like(points, np.nan)], axis=1).reshape(-1, 2)
-
-
-def _round_below(value: float) -> float:
-    """Give the largest of 1, 2 or 5 times a power of ten that is not above the value."""
-    if value <= 0:
-        return 1.0
-    power = 10.0 ** np.floor(np.log10(value))
-    return float(max(step for step in (1, 2, 5) if step * power <= value * (1 + 1e-9)) * power)
 
 
 def residual_histogram(result: CalibrationResult) -> str:
@@ -183,23 +98,12 @@ def residual_histogram(result: CalibrationResult) -> str:
 
 def coverage(result: CalibrationResult, camera: str) -> str:
     """Draw where in the image corners were seen; cells without any are hatched."""
-    from matplotlib.patches import Rectangle
-
     lens: Camera = getattr(result.rig, camera)
     pixels = _stack(view.pixels for view in _of(result, camera))
     figure = new_figure(5.2, 4.2)
-    axes = _image_axes(figure, lens, f"Camera {camera.upper()}: hatched = no corner seen there")
-    edges = np.linspace(0, lens.width, _GRID[0] + 1), np.linspace(0, lens.height, _GRID[1] + 1)
-    counts = np.histogram2d(pixels[:, 0], pixels[:, 1], bins=edges)[0]
-    for column, row in np.argwhere(counts == 0):
-        corner = (edges[0][column], edges[1][row])
-        wide, high = np.diff(edges[0])[0], np.diff(edges[1])[0]
-        axes.add_patch(Rectangle(corner, wide, high, facecolor="#fbe3d2", edgecolor=ORANGE, hatch="///", linewidth=0))
-    axes.plot(*_dots(pixels).T, color=BLUE, linewidth=2.2, solid_capstyle="round")
-    axes.set(xticks=edges[0], yticks=edges[1])
-    axes.tick_params(labelsize=7)
-    axes.grid(color=PALE, linewidth=0.5)
-    alt = f"Corners in the image of camera {camera.upper()}: {int((counts > 0).sum())} of {counts.size} cells hold one or more."
+    reached = coverage_axes(figure, lens, pixels, f"Camera {camera.upper()}: hatched = no corner seen there")
+    cells = CELLS[0] * CELLS[1]
+    alt = f"Corners in the image of camera {camera.upper()}: {reached} of {cells} cells hold one or more."
     return svg(figure, f"coverage-{camera}", alt)
 
 

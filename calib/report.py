@@ -17,8 +17,10 @@ from . import report_words as words
 from .compare import RigComparison, compare_rigs, rows
 from .depth_error import MATCHING_SIGMA_PX
 from .errors import CalibrationError
+from .report_epipolar import epipolar_figures
 from .report_figures import figures_of, report_figures
 from .report_page import mm, page, paragraph, plot, px, section, table, verdict_section, with_sigma, write_page
+from .report_pairs import pairs_of_views
 from .report_plots import coverage, depth_error, poses, residual_histogram, residual_vectors
 from .report_thumbnails import enlargement_text, thumbnail_figures
 from .result import CalibrationResult
@@ -84,6 +86,7 @@ def report_html(
         *([] if old is None else [section("comparison", "Old rig and new", _comparison(old, result, near_m, far_m))]),
         section("depth", "How far depth may be off", _depth(result, verdict)),
         section("residuals", "Where corners were off", _residuals(result)),
+        section("epipolar", "Whether both cameras agree, seen in the pictures", _epipolar(result, thumbnails)),
         section("coverage", "Where corners were seen", _coverage(result)),
         section("poses", "Where the boards stood", _poses(result, near_m, far_m)),
         section("correlations", "Parameters that trade against each other", _correlations(figures["correlations"])),
@@ -270,6 +273,25 @@ def _depth(result: CalibrationResult, verdict: Verdict) -> str:
 def _residuals(result: CalibrationResult) -> str:
     arrows = "".join(plot(residual_vectors(result, camera), words.ARROWS) for camera in "ab")
     return f'<div class="pair">{arrows}</div>' + plot(residual_histogram(result), words.HISTOGRAM)
+
+
+def _epipolar(result: CalibrationResult, thumbnails: Mapping[tuple[str, str], NDArray[Any]] | None) -> str:
+    """Show the pair that fits worst, and one that fits as most do."""
+    pairs, images = pairs_of_views(result), thumbnails or {}
+    if not pairs:
+        return paragraph(words.NO_PAIRS)
+    shown = {"worst pair": pairs[0], "typical pair": pairs[len(pairs) // 2]} if len(pairs) > 1 else {"pair": pairs[0]}
+    drawn = [
+        epipolar_figures(
+            result.rig,
+            (images.get(("a", pair.name_a)), images.get(("b", pair.name_b))),
+            pair.pixels_a,
+            pair.pixels_b,
+            title=f"{kind} ({pair.name_a}, {pair.name_b})",
+        )
+        for kind, pair in shown.items()
+    ]
+    return paragraph(words.EPIPOLAR) + "".join(drawn)
 
 
 def _coverage(result: CalibrationResult) -> str:

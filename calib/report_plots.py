@@ -25,12 +25,11 @@ from .report_drawing import (
     round_below,
     svg,
 )
+from .report_pairs import same_board
 from .result import CalibrationResult, ViewFit
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
-
-_SAME_PLACE_M = 1e-3
 
 
 def _of(result: CalibrationResult, camera: str) -> list[ViewFit]:
@@ -113,14 +112,8 @@ def boards_in_a(result: CalibrationResult) -> list[tuple[ViewFit, FloatArray]]:
     Where the corners' rays cut the board's plane: a board that is not flat is drawn as if it were.
     """
     by_a = _of(result, "a")
-    chosen = [*by_a, *(view for view in _of(result, "b") if not any(_same_board(result, seen, view) for seen in by_a))]
+    chosen = [*by_a, *(view for view in _of(result, "b") if not any(same_board(result, seen, view) for seen in by_a))]
     return [(view, _on_board(result, view)) for view in chosen]
-
-
-def _same_board(result: CalibrationResult, seen_a: ViewFit, seen_b: ViewFit) -> bool:
-    """Tell whether two views show one board at one instant: it stands at one place, to a millimetre."""
-    place: FloatArray = (seen_b.T_camera_board[:3, 3] - result.rig.t) @ result.rig.R
-    return seen_a.board == seen_b.board and bool(np.linalg.norm(place - seen_a.T_camera_board[:3, 3]) < _SAME_PLACE_M)
 
 
 def _on_board(result: CalibrationResult, view: ViewFit) -> FloatArray:

@@ -65,7 +65,7 @@ def _figure(
     caption = (
         f"{html.escape(first.name)}<br>camera {first.camera.upper()} · <b>{rms:.2f} px</b> · {corners} corners · {use}"
     )
-    picture = _picture(lens, image)
+    picture = picture_element(lens, image)
     marks = "".join(_marks(numbers[id(view)], view, lens, scale) for view in views)
     return (
         f'<figure class="view {"used" if first.used else "held"}">'
@@ -74,15 +74,16 @@ def _figure(
     )
 
 
-def _picture(lens: Camera, image: NDArray[Any] | None) -> str:
+def picture_element(lens: Camera, image: NDArray[Any] | None, width_px: int = _WIDTH_PX) -> str:
+    """Write a camera's picture as the ground of an SVG in its pixels; where there is none, an empty one."""
     frame = f'x="-0.5" y="-0.5" width="{lens.width}" height="{lens.height}"'
     if image is None:
         return f'<rect {frame} fill="#e4e4e4"/>'
-    return f'<image {frame} preserveAspectRatio="none" href="{data_uri(image)}"/>'
+    return f'<image {frame} preserveAspectRatio="none" href="{data_uri(image, width_px)}"/>'
 
 
-def data_uri(image: NDArray[Any]) -> str:
-    """Write an image as a grey JPEG of at most 320 pixels across, as an address that holds all of it.
+def data_uri(image: NDArray[Any], width_px: int = _WIDTH_PX) -> str:
+    """Write an image as a grey JPEG of at most so many pixels across, as an address that holds all of it.
 
     Raises
     ------
@@ -90,8 +91,8 @@ def data_uri(image: NDArray[Any]) -> str:
         Where it cannot be written as JPEG.
     """
     grey = grey_8_bit(image)
-    if grey.shape[1] > _WIDTH_PX:
-        size = (_WIDTH_PX, max(1, round(grey.shape[0] * _WIDTH_PX / grey.shape[1])))
+    if grey.shape[1] > width_px:
+        size = (width_px, max(1, round(grey.shape[0] * width_px / grey.shape[1])))
         grey = np.asarray(cv2.resize(grey, size, interpolation=cv2.INTER_AREA), dtype=np.uint8)
     done, data = cv2.imencode(".jpg", grey, [cv2.IMWRITE_JPEG_QUALITY, _JPEG_QUALITY])
     if not done:

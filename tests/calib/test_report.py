@@ -21,7 +21,7 @@ from skewline.calib.result import CalibrationResult
 
 NEAR, FAR = 0.5, 1.1
 SECTIONS = [
-    "verdict", "do", "figures", "depth", "residuals", "coverage", "poses", "correlations", "views", "aside"
+    "verdict", "do", "figures", "depth", "residuals", "epipolar", "coverage", "poses", "correlations", "views", "aside"
 ]  # fmt: skip
 VOID = {"meta", "br", "link", "img", "hr", "input"}
 
@@ -104,14 +104,16 @@ def test_every_reference_inside_the_page_leads_to_one_thing(text: str, page: Pag
 def test_every_picture_says_what_it_shows(page: Page) -> None:
     pictures = [attrs for tag, attrs in page.tags if tag == "svg"]
 
-    assert len(pictures) == 7 + 32  # two of arrows, histograms, two of coverage, poses, depth; and one each view
+    assert (
+        len(pictures) == 7 + 4 + 32
+    )  # two of arrows, histograms, two of coverage, poses, depth; two pairs; and one each view
     assert all(attrs.get("role") == "img" and len(attrs.get("aria-label") or "") > 20 for attrs in pictures)
 
 
 def test_every_drawing_is_well_formed(text: str) -> None:
     drawings = re.findall(r"<svg .*?</svg>", text, flags=re.DOTALL)
 
-    assert len(drawings) == 39
+    assert len(drawings) == 43
     for drawing in drawings:
         root = ET.fromstring(drawing)  # noqa: S314 - of our own making
         assert len(list(root.iter())) > 3
@@ -176,6 +178,17 @@ def test_each_view_stands_with_its_error_the_worst_first(page: Page, result: Cal
         assert (use == "used") is by_name[name].used
 
 
+def test_the_pairs_with_epipolar_lines_are_pictures_of_one_instant_the_worst_named_so(page: Page) -> None:
+    titles = re.findall(r"(worst|typical) pair \(a(\d\d)\.png, b(\d\d)\.png\), camera A", page.text["epipolar"])
+
+    assert [kind for kind, *_ in titles] == ["worst", "typical"]
+    assert all(number_a == number_b for _, number_a, number_b in titles)
+    # The corners' noise is 0.08 px in either picture: 0.11 px between a point and the line of its partner.
+    off = [float(value) for value in re.findall(r"\d\.\d\d", page.text["epipolar"].partition("off the line")[2])]
+    assert len(off) == 32
+    assert 0.02 < np.median(off) < 0.2
+
+
 def test_thumbnails_are_whole_jpegs_and_a_missing_one_leaves_an_empty_picture(
     result: CalibrationResult, thumbnails: dict[tuple[str, str], np.ndarray], page: Page
 ) -> None:
@@ -183,10 +196,10 @@ def test_thumbnails_are_whole_jpegs_and_a_missing_one_leaves_an_empty_picture(
     some = {key: image for key, image in thumbnails.items() if key[0] == "a"}
     fewer = Page(report_html(result, near_m=NEAR, far_m=FAR, thumbnails=some))
 
-    assert len(images) == 32
+    assert len(images) == 4 + 32
     data = np.frombuffer(__import__("base64").b64decode((images[0] or "").partition(",")[2]), np.uint8)
     assert cv2.imdecode(data, cv2.IMREAD_UNCHANGED).shape == (96, 128)
-    assert sum(tag == "image" for tag, _ in fewer.tags) == 16
+    assert sum(tag == "image" for tag, _ in fewer.tags) == 2 + 16
 
 
 def test_views_set_aside_stand_with_their_reason(page: Page, result: CalibrationResult) -> None:

@@ -295,7 +295,7 @@ def common_view(rig: Rig, distance_m: float) -> CommonView:
 
 
 def depth_error_curve(
-    result: CalibrationResult,
+    source: Rig | CalibrationResult,
     near_m: float,
     far_m: float,
     *,
@@ -306,7 +306,8 @@ def depth_error_curve(
 
     Parameters
     ----------
-    result : CalibrationResult
+    source : Rig or CalibrationResult
+        A rig alone knows the covariance of its pose only. Where its scale is not known, metres are baselines.
     near_m, far_m : float
         Along the rectified axis, in metres.
     disparity_sigma_px : float
@@ -317,13 +318,14 @@ def depth_error_curve(
     Raises
     ------
     CalibrationError
-        Where the distances are no working volume.
+        Where the distances are no working volume, or a rig has no covariance.
     """
     if not (np.isfinite([near_m, far_m]).all() and 0 < near_m < far_m):
         raise CalibrationError(f"working volume from {near_m} m to {far_m} m; expected 0 < near < far")
     distances = np.linspace(near_m, far_m, count)
-    views = [common_view(result.rig, float(distance)) for distance in distances]
-    sigmas = depth_sigma_from_calibration(result, np.concatenate([view.points_a for view in views]))
+    rig = source if isinstance(source, Rig) else source.rig
+    views = [common_view(rig, float(distance)) for distance in distances]
+    sigmas = depth_sigma_from_calibration(source, np.concatenate([view.points_a for view in views]))
     shares = np.split(sigmas, np.cumsum([len(view.points_a) for view in views])[:-1])
     both = [
         (share[view.centre], share.max()) if len(share) else _UNSEEN for view, share in zip(views, shares, strict=True)
@@ -333,6 +335,6 @@ def depth_error_curve(
         distances_m=distances,
         calibration_centre_m=centre,
         calibration_worst_m=worst,
-        matching_m=depth_sigma_from_matching(result.rig, distances, disparity_sigma_px),
+        matching_m=depth_sigma_from_matching(rig, distances, disparity_sigma_px),
         matching_sigma_px=disparity_sigma_px,
     )

@@ -280,7 +280,7 @@ def _epipolar(result: CalibrationResult, thumbnails: Mapping[tuple[str, str], ND
     pairs, images = pairs_of_views(result), thumbnails or {}
     if not pairs:
         return paragraph(words.NO_PAIRS)
-    shown = {"worst pair": pairs[0], "typical pair": pairs[len(pairs) // 2]} if len(pairs) > 1 else {"pair": pairs[0]}
+    shown = {"Worst pair": pairs[0], "Typical pair": pairs[len(pairs) // 2]} if len(pairs) > 1 else {"Pair": pairs[0]}
     drawn = [
         epipolar_figures(
             result.rig,

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import io
 import re
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -24,8 +25,11 @@ BLUE, ORANGE, GREEN, INK, PALE = "#0072b2", "#d55e00", "#007a5a", "#222222", "#8
 CELLS = (8, 6)
 """Columns and rows in which coverage of a picture is counted."""
 
-VECTOR_SHARE = 0.035
+_VECTOR_SHARE = 0.035
 """Length of a large residual on a plot, as a share of the image's width."""
+
+MOST_DOTS = 4000
+"""Dots on one plot beyond which no eye gains anything and the page grows heavy."""
 
 _DOT_PX = 0.5
 """A line without any length is left out of the drawing."""
@@ -103,6 +107,39 @@ def dots(points: FloatArray) -> FloatArray:
     return np.stack([points, points + np.array([_DOT_PX, 0.0]), np.full_like(points, np.nan)], axis=1).reshape(-1, 2)
 
 
+def thinned(rows: FloatArray, most: int) -> FloatArray:
+    """Give at most so many of an array's rows, evenly picked."""
+    return rows[:: -(-len(rows) // most)] if len(rows) > most else rows
+
+
+def residual_axes(figure: Figure, camera: Camera, parts: Sequence[tuple[FloatArray, FloatArray, str]]) -> float:
+    """Draw residuals as arrows in a camera's image, enlarged, with a key; give the length that 95 % are below, in pixels.
+
+    Parameters
+    ----------
+    figure : Figure
+    camera : Camera
+    parts : sequence of (pixels, residuals, label)
+        Both of shape (N, 2), in pixels; one or two parts, of which the second is told apart by dots at the arrows' feet.
+    """
+    lengths = np.linalg.norm(np.concatenate([np.zeros((0, 2)), *(residuals for _, residuals, _ in parts)]), axis=1)
+    large = float(np.percentile(lengths, 95)) if len(lengths) else 0.0
+    scale = _VECTOR_SHARE * camera.width / large if large > 0 else 1.0
+    key = round_below(large)
+    axes = image_axes(figure, camera, "")
+    for (pixels, residuals, label), colour, place in zip(parts, (BLUE, ORANGE), (0.0, 0.45), strict=False):
+        if not len(pixels):
+            continue
+        axes.plot(*arrow_lines(pixels, residuals * scale).T, color=colour, linewidth=0.8)
+        if place:
+            axes.plot(*dots(pixels).T, color=colour, linewidth=2.0, solid_capstyle="round")
+        foot = np.array([[(place + 0.01) * camera.width, -0.045 * camera.height]])
+        axes.plot(*arrow_lines(foot, np.array([[key * scale, 0.0]])).T, color=colour, linewidth=1.6, clip_on=False)
+        axes.text(foot[0, 0] + key * scale * 1.3, foot[0, 1], f"{key:g} px, {label}", va="center", fontsize=9)
+    axes.set_title(f"found minus predicted, drawn {scale:.3g} times longer", pad=24, fontsize=10)
+    return large
+
+
 def round_below(value: float) -> float:
     """Give the largest of 1, 2 or 5 times a power of ten that is not above the value."""
     if value <= 0:
@@ -112,7 +149,10 @@ def round_below(value: float) -> float:
 
 
 def coverage_axes(figure: Figure, camera: Camera, pixels: FloatArray, title: str) -> int:
-    """Draw where in a camera's image pixels, shape (N, 2), lie; hatch the cells without any. Give how many have some."""
+    """Draw where in a camera's image pixels, shape (N, 2), lie; hatch the cells without any. Give how many have some.
+
+    Of very many pixels only some are drawn; all are counted.
+    """
     from matplotlib.patches import Rectangle
 
     axes = image_axes(figure, camera, title)
@@ -122,7 +162,7 @@ def coverage_axes(figure: Figure, camera: Camera, pixels: FloatArray, title: str
     for column, row in np.argwhere(counts == 0):
         corner = (edges[0][column], edges[1][row])
         axes.add_patch(Rectangle(corner, wide, high, facecolor="#fbe3d2", edgecolor=ORANGE, hatch="///", linewidth=0))
-    axes.plot(*dots(pixels).T, color=BLUE, linewidth=2.2, solid_capstyle="round")
+    axes.plot(*dots(thinned(pixels, MOST_DOTS)).T, color=BLUE, linewidth=2.2, solid_capstyle="round")
     axes.set(xticks=edges[0], yticks=edges[1])
     axes.tick_params(labelsize=7)
     axes.grid(color=PALE, linewidth=0.5)

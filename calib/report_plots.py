@@ -16,13 +16,9 @@ from .report_drawing import (
     GREEN,
     INK,
     ORANGE,
-    VECTOR_SHARE,
-    arrow_lines,
     coverage_axes,
-    dots,
-    image_axes,
     new_figure,
-    round_below,
+    residual_axes,
     svg,
 )
 from .report_pairs import same_board
@@ -42,30 +38,17 @@ def _stack(parts: Iterable[FloatArray]) -> FloatArray:
 
 def residual_vectors(result: CalibrationResult, camera: str) -> str:
     """Draw each corner's residual as an arrow where the corner was seen, enlarged, with a key."""
-    views = _of(result, camera)
     lens: Camera = getattr(result.rig, camera)
-    lengths = np.linalg.norm(_stack(view.residuals_px for view in views), axis=1)
-    large = float(np.percentile(lengths, 95)) if len(lengths) else 0.0
-    scale = VECTOR_SHARE * lens.width / large if large > 0 else 1.0
-    key = round_below(large)
     figure = new_figure(6.2, 5.1)
-    axes = image_axes(figure, lens, "")
-    for used, colour, place in ((True, BLUE, 0.0), (False, ORANGE, 0.45)):
-        pixels = _stack(view.pixels for view in views if view.used is used)
-        if not len(pixels):
-            continue
-        arrows = _stack(view.residuals_px for view in views if view.used is used) * scale
-        axes.plot(*arrow_lines(pixels, arrows).T, color=colour, linewidth=0.8)
-        if not used:
-            axes.plot(*dots(pixels).T, color=colour, linewidth=2.6, solid_capstyle="round")
-        foot = np.array([[(place + 0.01) * lens.width, -0.045 * lens.height]])
-        axes.plot(*arrow_lines(foot, np.array([[key * scale, 0.0]])).T, color=colour, linewidth=1.6, clip_on=False)
-        text = f"{key:g} px, {'view used' if used else 'held out (dot at the foot)'}"
-        axes.text(foot[0, 0] + key * scale * 1.3, foot[0, 1], text, va="center", fontsize=9)
-    axes.set_title(
-        f"Camera {camera.upper()}: found minus predicted, drawn {scale:.0f} times longer", pad=24, fontsize=10
-    )
-    alt = f"Arrows over the image of camera {camera.upper()}; 95 % of {len(lengths)} residuals are below {large:.2f} pixels."
+    parts = []
+    for used, label in ((True, "view used"), (False, "held out (dot at the foot)")):
+        views = [view for view in _of(result, camera) if view.used is used]
+        residuals = _stack(view.residuals_px for view in views)
+        parts.append((_stack(view.pixels for view in views), residuals, label))
+    large = residual_axes(figure, lens, parts)
+    count = sum(len(pixels) for pixels, _, _ in parts)
+    figure.axes[0].set_title(f"Camera {camera.upper()}: {figure.axes[0].get_title()}", pad=24, fontsize=10)
+    alt = f"Arrows over the image of camera {camera.upper()}; 95 % of {count} residuals are below {large:.2f} pixels."
     return svg(figure, f"vectors-{camera}", alt)
 
 

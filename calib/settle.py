@@ -173,9 +173,9 @@ def _account(
     """Work out what is left, and the covariance.
 
     Of an M-estimate it is the mean square of the loss's slope over the square of its mean curvature, times the inverse of
-    the normal equations, with a correction for few points (Huber, Robust Statistics, 1981, section 7.6). Where errors go together within clusters, the sums
-    of the slopes over each vary more than that says (White, Econometrica 48(4), 1980; Liang and Zeger, Biometrika 73(1),
-    1986); by how much, in the mean over all directions, raises the whole.
+    the normal equations, with a correction for few points (Huber, Robust Statistics, 1981, section 7.6). Where errors go
+    together within clusters, the sums of the slopes over each vary more than that says (White, Econometrica 48(4), 1980;
+    Liang and Zeger, Biometrika 73(1), 1986); by how much, in the mean over all directions, raises the whole.
     """
     basis = poses.free_steps()
     left, slopes = _stacked(groups, misses, [np.ones(len(g.pixels)) for g in groups], noise, basis)

@@ -10,7 +10,7 @@ from pathlib import Path
 
 from ...calib import CalibrationError, Rig
 from ...calib.from_scene import ScenePose, pose_from_scene
-from ...calib.images import find_images, read_image
+from ...calib.images import find_images, grey_8_bit, read_image
 from ...calib.known_board import KnownBoard, known_board
 from ...calib.lengths import KnownLength, kept_baseline, parse_baseline, parse_length
 from ...calib.matches import Matches
@@ -20,7 +20,7 @@ from ...calib.rig import write_atomically
 from ...calib.scale import scale_pose
 from ...calib.targets import parse_target
 from ...calib.views import PairBy, pair_files
-from ..pose_text import pose_figures, pose_notes, print_pose
+from ..pose_text import pose_figures, pose_notes, print_pose, warnings_of
 from ..progress import Progress
 
 _DESCRIPTION = "Solve where camera B stands relative to A from pictures of any scene, and save the rig."
@@ -76,6 +76,12 @@ def configure(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--show", type=Path, metavar="PNG", help="draw the matches, those that count and those rejected"
     )
+    parser.add_argument(
+        "--report",
+        type=Path,
+        metavar="HTML",
+        help="write a report: what the pose does to depth, and the pictures that say why",
+    )
     parser.add_argument("--json", action="store_true", help="print the figures as JSON")
 
 
@@ -102,11 +108,15 @@ def run(arguments: argparse.Namespace) -> int:
     rig.save(arguments.output)
     if arguments.show:
         _show(arguments.show, pairs, pose)
+    if arguments.report:
+        _report(arguments.report, rig, pose, pairs, scaled, known)
     if arguments.json:
         print(json.dumps({**pose_figures(rig, pose, scaled, known), "saved": str(arguments.output)}, indent=2))
         return 0
     print_pose(rig, pose, scaled, known, len(pairs))
     print(f"saved {arguments.output}, rig {rig.fingerprint[:12]}")
+    if arguments.report:
+        print(f"report: {arguments.report}")
     return 0
 
 
@@ -155,6 +165,20 @@ def _picks(arguments: argparse.Namespace, known: Rig) -> Matches | None:
         return None
     sizes = [(camera.width, camera.height) for camera in (known.a, known.b)]
     return read_picks(arguments.matches, *sizes)
+
+
+def _report(
+    path: Path, rig: Rig, pose: ScenePose, pairs: Sequence[ImagePair], scaled: Scaled | None, known: Rig
+) -> None:
+    from ...calib.pose_report import write_pose_report
+
+    lengths = [
+        (length.name, length.length_m * 1e3, length.sigma_m * 1e3, length.residual_sigmas)
+        for length in (() if scaled is None else scaled.lengths)
+    ]
+    warnings = warnings_of(pose, scaled, known)
+    grey = [(grey_8_bit(image_a), grey_8_bit(image_b)) for image_a, image_b in pairs]
+    write_pose_report(path, rig, pose, grey, lengths=lengths, known=known, warnings=warnings)
 
 
 def _show(path: Path, pairs: Sequence[ImagePair], pose: ScenePose) -> None:

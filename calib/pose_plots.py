@@ -34,7 +34,7 @@ _WIDE_SPREAD = 4.0
 
 
 def miss_vectors(rig: Rig, points: Sequence[PosePoints], name: str) -> str:
-    """Draw what is left at each point as an arrow where camera ``a`` or ``b`` saw it, and where points were rejected."""
+    """Draw what is left at each point where camera ``a`` or ``b`` saw it, and where points were rejected."""
     camera: Camera = getattr(rig, name)
     figure = new_figure(6.2, 5.1)
     parts = []
@@ -52,8 +52,8 @@ def miss_vectors(rig: Rig, points: Sequence[PosePoints], name: str) -> str:
     axes.set_title(f"Camera {name.upper()}: {axes.get_title()}; x: rejected", pad=24, fontsize=10)
     drawn = sum(len(pixels) for pixels, _, _ in parts)
     alt = (
-        f"Arrows over the image of camera {name.upper()} at {drawn} points, 95 % of them shorter than {large:.2f} pixels; "
-        f"crosses at {len(rejected)} rejected ones."
+        f"Arrows over the image of camera {name.upper()} at {drawn} points, 95 % of them shorter than {large:.2f} "
+        f"pixels; crosses at {len(rejected)} rejected ones."
     )
     return svg(figure, f"misses-{name}", alt)
 
@@ -111,12 +111,13 @@ def distance_histogram(distances: FloatArray, unit: str) -> str:
         axes.xaxis.set_major_formatter(StrMethodFormatter("{x:g}"))
         axes.xaxis.set_minor_formatter(NullFormatter())
     axes.set_ylim(bottom=0)
-    alt = f"{len(distances)} points, the middle one at {np.median(distances):.3g} {unit}, 99 % from {near:.3g} to {far:.3g}."
+    middle = float(np.median(distances))
+    alt = f"{len(distances)} points, the middle one at {middle:.3g} {unit}, 99 % from {near:.3g} to {far:.3g}."
     return svg(figure, "distances", alt)
 
 
 def pose_depth_error(curve: DepthErrorCurve, *, metric: bool) -> str:
-    """Draw the depth error that the pose causes against distance: in millimetres, or in percent where there are no metres."""
+    """Draw the depth error that the pose causes against distance: in millimetres, or without a scale in percent."""
     figure = new_figure(9.2, 4.0)
     axes = figure.add_subplot(1, 1, 1)
     factor = 1e3 if metric else 100 / curve.distances_m

@@ -33,8 +33,8 @@ class PosePoints:
     off_px : ndarray of shape (N,)
         How far the two sight lines miss one another, in pixels of camera A; the sign tells on which side.
     distances : ndarray of shape (N,)
-        Along the rectified axis, in metres, or in baselines where the scale is not known; infinite where the sight lines
-        do not draw together.
+        Along the rectified axis, in metres, or in baselines where the scale is not known; infinite where the sight
+        lines do not draw together.
     kept : ndarray of shape (N,), bool
         Which have a say in the pose.
     """

@@ -1,6 +1,7 @@
 """The report of a pose from the scene: one HTML file that needs nothing beside it.
 
-As the report of a calibration: the answer comes first, then what to do, then the figures, then the pictures that say why.
+As in the report of a calibration the answer comes first, then what to do, then the figures, then the pictures that say
+why.
 """
 
 from __future__ import annotations
@@ -13,34 +14,25 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.spatial.transform import Rotation
 
 from . import pose_report_words as words
 from .camera import FloatArray
 from .compare import RigComparison, compare_rigs
 from .depth_error import depth_error_curve
 from .errors import CalibrationError
-from .from_scene import ScenePose, Stage
+from .from_scene import ScenePose
 from .matches import Matches
 from .pose_plots import distance_histogram, miss_histogram, miss_vectors, point_coverage, pose_depth_error
 from .pose_points import PosePoints, agreeing_matches, distances_of, pose_points
+from .pose_tables import LengthRow, pose_table, scale_table, stages_table, turned_from
 from .pose_words import DepthSaying, depth_saying
 from .report import comparison_html
 from .report_epipolar import epipolar_figures
-from .report_page import page, paragraph, plot, section, table, verdict_section, with_sigma, write_page
+from .report_page import page, paragraph, plot, section, table, verdict_section, write_page
 from .rig import Rig
 from .verdict import BAD, CARE, Grade
 
 ReportPair = tuple[NDArray[Any], NDArray[Any]]
-LengthRow = tuple[str, float, float, float]
-"""Name, length given and its standard deviation in millimetres, and how many deviations the pose is off it."""
-
-_STAGES = {
-    "linear": "eight points, linear",
-    "robust": "five points, robust",
-    "refined": "refined on all matches",
-    "polished": "polished on places",
-}
 _ENDS_PERCENT = (5, 50, 95)
 """Of the points' distances, for which depth is judged."""
 
@@ -128,10 +120,10 @@ def pose_report_html(
         _verdict_section(facts, len(images), warnings),
         section("do", "What to do next", _actions(facts, warnings)),
         section("depth", "How far the pose puts depth off", _depth(facts)),
-        section("pose", "The pose of camera B from camera A", _pose(rig, pose)),
-        section("stages", "How the pose came about", _stages(pose)),
+        section("pose", "The pose of camera B from camera A", pose_table(rig, pose)),
+        section("stages", "How the pose came about", stages_table(pose)),
         *compared,
-        section("scale", "What the scale comes from", _scale(rig, lengths)),
+        section("scale", "What the scale comes from", scale_table(rig, lengths)),
         section("epipolar", "Whether both cameras agree, seen in the pictures", _epipolar(facts, images)),
         section("residuals", "Where points were off", _residuals(facts)),
         section("coverage", "Where points count", _coverage(facts)),
@@ -189,11 +181,14 @@ def _verdict_section(facts: _Facts, pairs: int, warnings: Sequence[str]) -> str:
 
 def _answer(facts: _Facts) -> str:
     if not facts.sayings:
-        return "How well depth is known cannot be told: this rig carries no covariance, or both cameras see nothing in common."
+        return (
+            "How well depth is known cannot be told: this rig carries no covariance, or both cameras see nothing in "
+            "common."
+        )
     share = f"{facts.share:.2%}" if facts.share < 0.1 else f"{facts.share:.0%}"
     return (
-        f"From {facts.span} the pose puts depth off by {share} of the distance at most (one standard deviation, middle of the "
-        "picture)."
+        f"From {facts.span} the pose puts depth off by {share} of the distance at most (one standard deviation, in the "
+        "middle of the picture)."
     )
 
 
@@ -234,85 +229,18 @@ def _depth(facts: _Facts) -> str:
     return values + plot(pose_depth_error(curve, metric=facts.rig.scale_known), words.DEPTH)
 
 
-def _pose(rig: Rig, pose: ScenePose) -> str:
-    turn = np.rad2deg(Rotation.from_matrix(np.array(rig.R)).as_rotvec())
-    sigmas = (None,) * 6 if rig.covariance is None else tuple(np.sqrt(np.diag(rig.covariance)).tolist())
-    size, unit, digits = (1e3, "mm", 3) if rig.scale_known else (1.0, "baselines", 5)
-    along, across = _baseline_sigmas(rig)
-    length = with_sigma(rig.baseline_m * 1e3, along * 1e3, "mm") if rig.scale_known else "length not known"
-    rows = [
-        ("baseline", length),
-        ("direction of t", f"{', '.join(f'{part:.5f}' for part in rig.t / rig.baseline_m)} ± {across:.4f} degrees"),
-        ("rotation of B from A", f"{np.linalg.norm(turn):.3f} degrees"),
-    ]
-    for index, axis in enumerate("xyz"):
-        sigma = sigmas[index]
-        rows.append((f"turn about {axis}", with_sigma(turn[index], sigma and np.rad2deg(sigma), "degrees", 4)))
-    for index, axis in enumerate("xyz"):
-        sigma = sigmas[3 + index]
-        rows.append((f"translation {axis}", with_sigma(rig.t[index] * size, sigma and sigma * size, unit, digits)))
-    note = words.RELATED.format(relatedness=pose.settled.relatedness)
-    return table(("", "value ± 1 sigma"), rows) + paragraph(note)
-
-
-def _baseline_sigmas(rig: Rig) -> tuple[float, float]:
-    """Give the standard deviations of the baseline's length, in metres, and of its direction, in degrees."""
-    if rig.covariance is None:
-        return 0.0, 0.0
-    along = rig.t / rig.baseline_m
-    across = np.eye(3) - np.outer(along, along)
-    block = rig.covariance[3:, 3:]
-    direction = np.sqrt(max(float(np.trace(across @ block @ across)), 0.0)) / rig.baseline_m
-    return float(np.sqrt(max(float(along @ block @ along), 0.0))), float(np.rad2deg(direction))
-
-
-def _stages(pose: ScenePose) -> str:
-    rows, before = [], None
-    for stage in pose.stages:
-        noise = "" if stage.noise_px is None else f"{stage.noise_px:.3f} px"
-        rows.append((_STAGES.get(stage.name, stage.name), str(stage.points), noise, *_moved(before, stage)))
-        before = stage
-    head = ("step", "points", "noise of a point", "turned by", "direction of t moved by")
-    return table(head, rows) + paragraph(words.STAGES)
-
-
-def _moved(before: Stage | None, stage: Stage) -> tuple[str, str]:
-    if before is None:
-        return "", ""
-    turned = np.rad2deg(Rotation.from_matrix(stage.R @ before.R.T).magnitude())
-    aside = np.rad2deg(np.arctan2(np.linalg.norm(np.cross(before.t, stage.t)), before.t @ stage.t))
-    return f"{turned:.3f} degrees", f"{aside:.3f} degrees"
-
-
 def _compared(facts: _Facts, known: Rig) -> str:
     near, middle, far = facts.ends
     try:
         comparison = compare_rigs(known, facts.rig, distance_m=middle, volume_m=(near, far))
     except CalibrationError as exc:
-        return paragraph(f"They cannot be compared in metres: {exc}.") + _turned(facts.rig, known)
-    return comparison_html(_changed(comparison)) + _turned(facts.rig, known)
+        return paragraph(f"They cannot be compared in metres: {exc}.") + turned_from(facts.rig, known)
+    return comparison_html(_changed(comparison)) + turned_from(facts.rig, known)
 
 
 def _changed(comparison: RigComparison) -> RigComparison:
     """Leave out what stayed as it was, such as the lenses, which the pose takes from the rig before."""
     return replace(comparison, parameters=tuple(change for change in comparison.parameters if change.change))
-
-
-def _turned(rig: Rig, known: Rig) -> str:
-    turned = np.rad2deg(Rotation.from_matrix(rig.R @ known.R.T).magnitude())
-    aside = np.rad2deg(np.arctan2(np.linalg.norm(np.cross(known.t, rig.t)), known.t @ rig.t))
-    return paragraph(
-        f"From the rig before, camera B is turned by {turned:.3f} degrees, and the direction of t by {aside:.3f} degrees."
-    )
-
-
-def _scale(rig: Rig, lengths: Sequence[LengthRow]) -> str:
-    if not rig.scale_known:
-        return paragraph(words.NO_SCALE)
-    if not lengths:
-        return paragraph(words.NO_LENGTHS)
-    rows = [(name, f"{given:.2f} ± {sigma:.2f} mm", f"{off:+.1f}") for name, given, sigma, off in lengths]
-    return paragraph(words.SCALE) + table(("length", "given", "off by, in sigmas"), rows)
 
 
 def _epipolar(facts: _Facts, images: Sequence[ReportPair]) -> str:

@@ -113,14 +113,14 @@ def thinned(rows: FloatArray, most: int) -> FloatArray:
 
 
 def residual_axes(figure: Figure, camera: Camera, parts: Sequence[tuple[FloatArray, FloatArray, str]]) -> float:
-    """Draw residuals as arrows in a camera's image, enlarged, with a key; give the length that 95 % are below, in pixels.
+    """Draw residuals as arrows in a camera's image, enlarged, with a key; give the pixels that 95 % are below.
 
     Parameters
     ----------
     figure : Figure
     camera : Camera
     parts : sequence of (pixels, residuals, label)
-        Both of shape (N, 2), in pixels; one or two parts, of which the second is told apart by dots at the arrows' feet.
+        Both of shape (N, 2), in pixels; one part or two, of which the second has dots at the arrows' feet.
     """
     lengths = np.linalg.norm(np.concatenate([np.zeros((0, 2)), *(residuals for _, residuals, _ in parts)]), axis=1)
     large = float(np.percentile(lengths, 95)) if len(lengths) else 0.0

@@ -74,8 +74,9 @@ def plot(picture: str, caption: str) -> str:
 def verdict_section(grade: str, headline: str, body: str) -> str:
     """Write the section that answers whether the rig may be used; the body is HTML."""
     return (
-        f'<section id="verdict" class="{grade.replace(" ", "-")}">\n<h2><span class="mark" aria-hidden="true">{MARKS[grade]}'
-        f"</span> {html.escape(headline)}</h2>\n{body}\n</section>"
+        f'<section id="verdict" class="{grade.replace(" ", "-")}">\n'
+        f'<h2><span class="mark" aria-hidden="true">{MARKS[grade]}</span> '
+        f"{html.escape(headline)}</h2>\n{body}\n</section>"
     )
 
 

@@ -57,11 +57,11 @@ NO_CORRELATIONS = "No two parameters depend on each other by more than 0.9: each
 WORST_VIEW = "Where one picture is far worse than the rest, look whether it is blurred or has glare, and leave it out."
 
 EPIPOLAR = (
-    "Rings: points that both cameras saw, with their numbers. Each line (its number on a white disc) is where the partner's "
-    "ray runs, by the calibration, through this camera's lens: it must pass through the middle of the ring of its number. "
-    "It ends within the picture where the point would be infinitely far, or at the other camera. "
-    "Good: all do, all over the picture. Bad: lines beside their rings, all to one side or worse in one part: a camera or a "
-    "lens moved, or pictures of two instants were taken for a pair."
+    "Rings: points that both cameras saw, with their numbers. Each line (its number on a white disc) is where the "
+    "partner's ray runs, by the calibration, through this camera's lens: it must pass through the middle of the "
+    "ring of its number. It ends within the picture where the point would be infinitely far, or at the other "
+    "camera. Good: all do, all over the picture. Bad: lines beside their rings, all to one side or worse in one "
+    "part: a camera or a lens moved, or pictures of two instants were taken for a pair."
 )
 
 NO_PAIRS = "No view of both cameras was used, so there are no partners to draw."

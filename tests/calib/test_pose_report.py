@@ -202,7 +202,7 @@ def test_beside_the_rig_before_only_what_changed_is_listed(pose: ScenePose, rig:
     known = replace(rig, R=Rotation.from_rotvec([0, np.deg2rad(0.5), 0]).as_matrix() @ rig.R)
     comparison = Page(pose_report_html(rig, pose, IMAGES, known=known)).text["comparison"]
 
-    assert "turned by 0.500 degrees, and the direction of t by 0.000 degrees" in comparison
+    assert "turned by 0.500 degrees, and t by 0.000 degrees" in comparison
     assert "turn of B about its y axis0.0000-0.5000" in comparison
     assert "focal length" not in comparison
     apart = Page(pose_report_html(pose.rig, pose, IMAGES, known=known)).text["comparison"]

@@ -17,7 +17,7 @@ from ...calib.matches import Matches
 from ...calib.picks import read_picks
 from ...calib.polish import ImagePair
 from ...calib.rig import write_atomically
-from ...calib.scale import scale_pose
+from ...calib.scale import Scaled, scale_pose
 from ...calib.targets import parse_target
 from ...calib.views import PairBy, pair_files
 from ..pose_text import pose_figures, pose_notes, print_pose, warnings_of

@@ -24,6 +24,8 @@ from .errors import CalibrationError, RigFileError
 FORMAT = "skewline rig"
 VERSION = 1
 
+FILE_REMEDY = "restore the file or calibrate again"
+
 ROTATION_TOLERANCE = 1e-6
 """How far R R^T may be from the identity: looser than any file at full precision, tighter than any edit."""
 
@@ -65,7 +67,7 @@ class Rig:
     notes: Mapping[str, Any] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
-        object.__setattr__(self, "R", _rotation(self.R, "R"))
+        object.__setattr__(self, "R", rotation(self.R, "R"))
         object.__setattr__(self, "t", frozen_array(numbers(self.t, "translation t").reshape(-1), (3,), "translation t"))
         if not np.linalg.norm(self.t) > 0:
             raise CalibrationError("translation t is zero; expected two cameras that stand apart: calibrate again")
@@ -78,7 +80,7 @@ class Rig:
             object.__setattr__(self, "covariance", frozen_array(self.covariance, (6, 6), "covariance"))
         if self.T_base_a is not None:
             transform = frozen_array(self.T_base_a, (4, 4), "T_base_a")
-            _rotation(transform[:3, :3], "T_base_a's rotation")
+            rotation(transform[:3, :3], "T_base_a's rotation")
             if not np.array_equal(transform[3], (0, 0, 0, 1)):
                 raise CalibrationError(f"T_base_a's last row is {transform[3].tolist()}; expected 0 0 0 1")
             object.__setattr__(self, "T_base_a", transform)
@@ -127,28 +129,13 @@ class Rig:
         RigFileError
             Where the file is missing, cut short, of another format or version, or holds impossible geometry.
         """
-        remedy = "restore the file or calibrate again"
-        try:
-            content = json.loads(Path(path).read_text(encoding="utf-8"))
-        except OSError as exc:
-            raise RigFileError(
-                f"cannot read rig file {path}: {exc.strerror}; expected a file that calibrate wrote"
-            ) from exc
-        except (ValueError, RecursionError) as exc:
-            raise RigFileError(f"rig file {path} is not whole JSON ({exc}); {remedy}") from exc
-        if not isinstance(content, dict) or content.get("format") != FORMAT:
-            raise RigFileError(f'{path} is no rig file; expected a JSON object with "format": "{FORMAT}"')
-        if content.get("version") != VERSION:
-            raise RigFileError(
-                f"rig file {path} has version {content.get('version')!r}; this program reads version {VERSION}: "
-                "read it with the program that wrote it, or calibrate again"
-            )
+        content = read_object(path, "rig file", FORMAT, VERSION)
         try:
             return cls(**_geometry_from(content), notes=content.get("notes", {}))
         except KeyError as exc:
-            raise RigFileError(f"rig file {path} lacks the key {exc}; {remedy}") from exc
+            raise RigFileError(f"rig file {path} lacks the key {exc}; {FILE_REMEDY}") from exc
         except CalibrationError as exc:
-            raise RigFileError(f"rig file {path}: {exc}; {remedy}") from exc
+            raise RigFileError(f"rig file {path}: {exc}; {FILE_REMEDY}") from exc
 
     @classmethod
     def from_opencv(
@@ -252,7 +239,7 @@ class Rig:
 
     def _geometry(self) -> dict[str, Any]:
         base = None if self.T_base_a is None else _plain(self.T_base_a)
-        cameras = {name: _camera_to_dict(camera) for name, camera in (("a", self.a), ("b", self.b))}
+        cameras = {name: camera_to_dict(camera) for name, camera in (("a", self.a), ("b", self.b))}
         return {**cameras, "R": _plain(self.R), "t": _plain(self.t), "scale_known": self.scale_known, "T_base_a": base}
 
     def _extras(self) -> dict[str, Any]:
@@ -264,7 +251,8 @@ def _plain(array: FloatArray) -> Any:
     return (array + 0.0).tolist()
 
 
-def _rotation(value: Any, name: str) -> FloatArray:
+def rotation(value: Any, name: str) -> FloatArray:
+    """Copy to a read-only rotation matrix of shape (3, 3); refuse what is none."""
     matrix = frozen_array(value, (3, 3), name)
     with np.errstate(over="ignore", invalid="ignore"):
         off = float(np.abs(matrix @ matrix.T - np.eye(3)).max())
@@ -274,7 +262,8 @@ def _rotation(value: Any, name: str) -> FloatArray:
     return matrix
 
 
-def _camera_to_dict(camera: Camera) -> dict[str, Any]:
+def camera_to_dict(camera: Camera) -> dict[str, Any]:
+    """Give a camera as it stands in files: plain numbers and lists at full precision."""
     return {
         "width": camera.width,
         "height": camera.height,
@@ -284,15 +273,49 @@ def _camera_to_dict(camera: Camera) -> dict[str, Any]:
     }
 
 
+def camera_from_dict(fields: Any, name: str) -> Camera:
+    """Make a camera of what :func:`camera_to_dict` gave.
+
+    Raises
+    ------
+    CalibrationError
+        For what is no object, or holds impossible values.
+    KeyError
+        Where a value is missing.
+    """
+    if not isinstance(fields, dict):
+        raise CalibrationError(f"camera {name} is {fields!r}; expected an object")
+    return Camera(**{key: fields[key] for key in ("width", "height", "K", "distortion", "model")})
+
+
 def _geometry_from(content: Mapping[str, Any]) -> dict[str, Any]:
-    cameras = {}
-    for name in ("a", "b"):
-        fields = content[name]
-        if not isinstance(fields, dict):
-            raise CalibrationError(f"camera {name} is {fields!r}; expected an object")
-        cameras[name] = Camera(**{key: fields[key] for key in ("width", "height", "K", "distortion", "model")})
+    cameras = {name: camera_from_dict(content[name], name) for name in ("a", "b")}
     optional = {key: content.get(key) for key in ("covariance", "T_base_a")}
     return {**cameras, "R": content["R"], "t": content["t"], "scale_known": content["scale_known"], **optional}
+
+
+def read_object(path: str | os.PathLike[str], kind: str, form: str, version: int) -> dict[str, Any]:
+    """Read a file that holds one JSON object with "format" and "version".
+
+    Raises
+    ------
+    RigFileError
+        Where the file is missing, cut short, or of another format or version; ``kind`` is what the message calls it.
+    """
+    try:
+        content = json.loads(Path(path).read_text(encoding="utf-8"))
+    except OSError as exc:
+        raise RigFileError(f"cannot read {kind} {path}: {exc.strerror}; expected a file that calibrate wrote") from exc
+    except (ValueError, RecursionError) as exc:
+        raise RigFileError(f"{kind} {path} is not whole JSON ({exc}); {FILE_REMEDY}") from exc
+    if not isinstance(content, dict) or content.get("format") != form:
+        raise RigFileError(f'{path} is no {kind}; expected a JSON object with "format": "{form}"')
+    if content.get("version") != version:
+        raise RigFileError(
+            f"{kind} {path} has version {content.get('version')!r}; this program reads version {version}: "
+            "read it with the program that wrote it, or calibrate again"
+        )
+    return content
 
 
 def _read_storage(path: str | os.PathLike[str]) -> dict[str, Any]:

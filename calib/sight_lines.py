@@ -71,6 +71,20 @@ class Poses:
         R = self.R[other] @ self.R[first].T
         return R, self.t[other] - R @ self.t[first]
 
+    def steps_between(self, first: int, other: int) -> FloatArray:
+        """Give how R and t of :meth:`between` answer to a step of :meth:`moved`, shape (6, 6 (C - 1)).
+
+        Rows: rotation vector (rad) of a small turn applied after R, then the change of t.
+        """
+        R, t = self.between(first, other)
+        slopes = np.zeros((6, 6 * len(self.t)))
+        slopes[:, 6 * other : 6 * other + 6] += np.eye(6)
+        slopes[:3, 6 * first : 6 * first + 3] -= R
+        slopes[3:, 6 * first + 3 : 6 * first + 6] -= R
+        # t = t_other - R t_first: the turn of R moves R t_first, which is t_other - t.
+        slopes[3:] += np.cross(self.t[other] - t, slopes[:3], axisb=0, axisc=0)
+        return slopes[:, 6:]
+
     def moved(self, step: FloatArray) -> Poses:
         """Turn each camera but the first by a small rotation vector after R and shift it; keep the size of all shifts.
 

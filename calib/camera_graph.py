@@ -10,7 +10,7 @@ from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 
 from .camera import Camera, FloatArray
-from .epipolar import nearest_to_rays
+from .epipolar import essential_matrix, nearest_to_rays
 from .errors import CalibrationError
 from .matches import Matches
 from .sight_lines import Poses
@@ -28,8 +28,10 @@ _MAD_TO_SIGMA = 1.4826
 _MEDIAN_EFFICIENCY = 1.2533
 """Standard deviation of a normal distribution over its median absolute deviation, and of a median over that of a mean."""
 
-_CONTRADICTION_DEG = 5.0
-"""Turn between a pair's own pose and that by way of other cameras, from which on the pair's is wrong."""
+_CONTRADICTION_RAD = np.deg2rad(1.0)
+"""How far a pair's sight lines miss one another, in the middle, by the poses by way of other cameras, from which on its
+matches are wrong. Its own pose is not asked: of matches near one plane it may be wrong where they are right.
+"""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -100,12 +102,18 @@ def place_cameras(
     while len(growing.R) < len(cameras):
         left.remove(growing.extend([edge for edge in left if (edge.first in growing.R) != (edge.other in growing.R)]))
     poses = growing.poses()
-    return poses, tuple(edge for edge in left if _turn_deg(edge, poses) > _CONTRADICTION_DEG)
+    return poses, tuple(edge for edge in left if not _typical_miss_rad(cameras, edge, poses) < _CONTRADICTION_RAD)
 
 
-def _turn_deg(edge: Edge, poses: Poses) -> float:
-    R, _ = poses.between(edge.first, edge.other)
-    return float(np.rad2deg(np.arccos(np.clip((np.trace(R.T @ edge.R) - 1) / 2, -1, 1))))
+def _typical_miss_rad(cameras: Sequence[Camera], edge: Edge, poses: Poses) -> float:
+    """Give the median angle between one camera's rays and the epipolar planes of the other's."""
+    from_first, from_other = (
+        cameras[edge.first].rays(edge.matches.pixels_a),
+        cameras[edge.other].rays(edge.matches.pixels_b),
+    )
+    normals = from_first @ essential_matrix(*poses.between(edge.first, edge.other)).T
+    sines = np.abs((normals * from_other).sum(axis=1)) / np.linalg.norm(normals, axis=1)
+    return float(np.nanmedian(np.arcsin(np.clip(sines, 0, 1))))
 
 
 @dataclass(eq=False)

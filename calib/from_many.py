@@ -201,8 +201,8 @@ def _started(names: Sequence[str], cameras: Sequence[Camera], graph: Graph) -> t
     refuse_parts(names, graph)
     poses, wrong = place_cameras(cameras, names, graph.edges)
     remarks = tuple(
-        f"the {len(edge.matches)} matches of cameras {names[edge.first]!r} and {names[edge.other]!r} give a pose that "
-        "contradicts that by way of other cameras, which has more matches; they are left out: look at these pictures"
+        f"the {len(edge.matches)} matches of cameras {names[edge.first]!r} and {names[edge.other]!r} contradict the poses "
+        "by way of other cameras, which have more matches; they are left out: look at these pictures"
         for edge in wrong
     )
     kept = tuple(edge for edge in graph.edges if edge not in wrong)

@@ -121,7 +121,10 @@ def find_edges(
             edges.append(_edge(cameras, pair, some, find_pose))
         except CalibrationError as exc:
             failed[pair] = str(exc)
-    remarks = tuple(f"cameras {names[a]!r} and {names[b]!r} share no view: {why}" for (a, b), why in failed.items())
+    remarks = tuple(
+        f"cameras {names[a]!r} and {names[b]!r} share no view that gives a pose: {why}"
+        for (a, b), why in failed.items()
+    )
     return Graph(edges=tuple(edges), remarks=remarks)
 
 

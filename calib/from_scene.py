@@ -16,10 +16,11 @@ from .eight_points import essential_from_fundamental, fundamental_matrix, pose_b
 from .errors import CalibrationError, NoAlignedViewError
 from .first_pose import first_pose
 from .matches import BoolArray, Matches, find_matches
-from .polish import ImagePair, picture_part, polish
+from .polish import ImagePair, polish
 from .rig import Rig
 from .settle import Settled, settle
 from .sight_lines import Poses, Sightings
+from .tracks import picture_part
 
 Progress = Callable[[str, int, int], None]
 """Called with what is being done, how much of it is done, and how much there is."""

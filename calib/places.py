@@ -72,7 +72,6 @@ def track_places(
     image_a: NDArray[Any],
     image_b: NDArray[Any],
     places: FloatArray,
-    expected_b: FloatArray | None = None,
 ) -> Tracked:
     """Find places of A's picture in B's.
 
@@ -83,8 +82,6 @@ def track_places(
         uint8 or uint16, grey or BGR.
     places : ndarray of shape (N, 2)
         In A's pixels.
-    expected_b : ndarray of shape (N, 2), optional
-        Where each is expected in B's pixels, NaN where unknown, from an earlier round; by default a dense disparity tells.
 
     Returns
     -------
@@ -95,10 +92,7 @@ def track_places(
     start = aligned.a.from_camera(places)
     ids = np.flatnonzero(_well_inside(start, aligned.a.seen))
     start = start[ids]
-    if expected_b is None:
-        guess = start - np.column_stack([_dense(aligned, view_a, view_b, start), np.zeros(len(start))])
-    else:
-        guess = aligned.b.from_camera(expected_b[ids])
+    guess = start - np.column_stack([_dense(aligned, view_a, view_b, start), np.zeros(len(start))])
     known = np.isfinite(guess).all(axis=1)
     ids, start, guess = ids[known], start[known], guess[known]
     if not len(ids):

@@ -20,7 +20,6 @@ from .places import MOST_PLACES, Tracked, choose_places, track_places
 from .settle import Settled, settle
 from .sight_lines import Misses, Poses, Sightings, SightLines
 from .tracks import Tracks, sightings_of
-from .tracks import picture_part as picture_part
 
 ImagePair = tuple[NDArray[Any], NDArray[Any]]
 HubEdge = tuple[int, int]

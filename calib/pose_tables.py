@@ -13,7 +13,7 @@ from .from_scene import ScenePose, Stage
 from .report_page import paragraph, table, with_sigma
 from .rig import Rig
 
-LengthRow = tuple[str, float, float, float]
+LengthRow = tuple[str, float, float, float | None]
 """Name, length given and its standard deviation in millimetres, and how many deviations the pose is off it."""
 
 _STAGES = {
@@ -97,7 +97,10 @@ def scale_table(rig: Rig, lengths: Sequence[LengthRow]) -> str:
         return paragraph(words.NO_SCALE)
     if not lengths:
         return paragraph(words.NO_LENGTHS)
-    rows = [(name, f"{given:.2f} ± {sigma:.2f} mm", f"{off:+.1f}") for name, given, sigma, off in lengths]
+    rows = [
+        (name, f"{given:.2f} ± {sigma:.2f} mm", "" if off is None else f"{off:+.1f}")
+        for name, given, sigma, off in lengths
+    ]
     return paragraph(words.SCALE) + table(("length", "given", "off by, in sigmas"), rows)
 
 

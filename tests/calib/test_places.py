@@ -83,19 +83,6 @@ def test_places_are_found_where_they_truly_are(scene: Scene, aligned: Aligned) -
     assert np.percentile(across, 95) < 0.8
 
 
-def test_places_expected_near_where_they_are_need_no_dense_disparity(scene: Scene, aligned: Aligned) -> None:
-    places = choose_places(scene.image_a)
-    once = track_places(aligned, scene.image_a, scene.image_b, places)
-    expected = np.full((len(places), 2), np.nan)
-    expected[once.ids] = once.pixels_b + 0.5
-    again = track_places(aligned, scene.image_a, scene.image_b, places, expected)
-    assert len(again.ids) > 0.95 * len(once.ids)
-    common, at_once, at_again = np.intersect1d(once.ids, again.ids, return_indices=True)
-    assert len(common) > 0.9 * len(once.ids)
-    apart = np.linalg.norm(once.pixels_b[at_once] - again.pixels_b[at_again], axis=1)
-    assert np.percentile(apart, 95) < 0.05
-
-
 def test_sixteen_bit_pictures_give_the_same_places_as_eight_bit_ones(scene: Scene, aligned: Aligned) -> None:
     places = choose_places(scene.image_a)
     eight = track_places(aligned, scene.image_a, scene.image_b, places)

@@ -59,8 +59,7 @@ def reimaged(yaw_deg: float, seed: int = 0) -> Scene:
     Camera B is 0.85 times the size, at gain 0.8 with noise of 1 grey level; both lenses distort.
     """
     source = original()
-    turn_a = Rotation.from_euler("yxz", [-yaw_deg / 2, 2.0, -3.0], degrees=True).as_matrix()
-    turn_b = Rotation.from_euler("yxz", [yaw_deg / 2, -1.5, 4.0], degrees=True).as_matrix()
+    turn_a, turn_b = _turns(yaw_deg)
     a = Camera(
         width=741, height=500, K=[[960, 0, 365], [0, 962, 252], [0, 0, 1]], distortion=[-0.12, 0.05, 4e-4, -3e-4, 0]
     )
@@ -73,6 +72,20 @@ def reimaged(yaw_deg: float, seed: int = 0) -> Scene:
     image_b = np.clip(np.rint(image_b * 0.8 + noise), 0, 255).astype(np.uint8)
     rig = Rig(a=a, b=b, R=turn_b @ turn_a.T, t=turn_b @ source.rig.t)
     return Scene(rig, image_a, image_b, source.points_a @ turn_a.T, source.disparity_px)
+
+
+def _turns(yaw_deg: float) -> tuple[np.ndarray, np.ndarray]:
+    """Rotations from the original cameras to the two unlike ones."""
+    turn_a = Rotation.from_euler("yxz", [-yaw_deg / 2, 2.0, -3.0], degrees=True).as_matrix()
+    turn_b = Rotation.from_euler("yxz", [yaw_deg / 2, -1.5, 4.0], degrees=True).as_matrix()
+    return turn_a, turn_b
+
+
+def carried_over(pose: Rig, yaw_deg: float) -> Rig:
+    """A pose of the original pair as the pose of the two unlike cameras, with the true baseline."""
+    turn_a, turn_b = _turns(yaw_deg)
+    like = reimaged(yaw_deg).rig
+    return Rig(a=like.a, b=like.b, R=turn_b @ pose.R @ turn_a.T, t=turn_b @ pose.t * (BASELINE_M / pose.baseline_m))
 
 
 def _seen_by(camera: Camera, turn: np.ndarray, image: np.ndarray, K_old: np.ndarray) -> np.ndarray:

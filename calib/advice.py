@@ -11,9 +11,11 @@ from .bundle import Seen
 from .camera import Camera, FloatArray
 from .errors import CalibrationError
 from .focal_drift import FocalJump
+from .printed_size import name_at
 from .refine import Refined
 from .result import CalibrationResult, CameraFit
 from .rig import Rig
+from .targets import Target
 
 _ENOUGH_VIEWS = 10
 _GOOD_RMS_PX = 0.5
@@ -49,6 +51,7 @@ class Account:
         Each camera on its own.
     jump : FocalJump or None
         A change of a focal length, if there was one.
+    target : Target
     baseline_m : float or None
         As measured otherwise.
     """
@@ -57,6 +60,7 @@ class Account:
     epipolar_px: Mapping[str, float]
     alone: tuple[tuple[Sequence[Seen], Refined], ...]
     jump: FocalJump | None
+    target: Target
     baseline_m: float | None
 
 
@@ -196,8 +200,10 @@ def _scale_warnings(account: Account) -> Iterator[str]:
         return
     ratio = account.result.rig.baseline_m / account.baseline_m
     if abs(ratio - 1) > _SAME_BASELINE:
+        name = name_at(account.target, 1 / ratio)
+        agreeing = f"{1 / ratio:.3f} times what its name says would agree" + (f', "{name}"' if name else "")
         yield (
             f"the baseline comes out as {account.result.rig.baseline_m * 1e3:.1f} mm, {ratio:.3f} times the "
-            f"{account.baseline_m * 1e3:.1f} mm given: is the target's size right ({1 / ratio:.3f} times what its name says "
-            "would agree: measure the print), and was the baseline taken between the two lenses?"
+            f"{account.baseline_m * 1e3:.1f} mm given: is the target's size right ({agreeing}: measure the print), and was "
+            "the baseline taken between the two lenses?"
         )

@@ -161,6 +161,7 @@ def calibrate_pair(
         epipolar_px={name: float(np.median(d)) for name, d in distances.items()},
         alone=tuple((alone.seen, alone.fit) for alone in alones),
         jump=joint.jump,
+        target=target,
         baseline_m=baseline_m,
     )
     return replace(result, warnings=careful_warnings(account))

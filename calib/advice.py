@@ -11,6 +11,7 @@ from .bundle import Seen
 from .camera import Camera, FloatArray
 from .errors import CalibrationError
 from .focal_drift import FocalJump
+from .folds import fold_among, fold_in_picture
 from .printed_size import name_at
 from .refine import Refined
 from .result import CalibrationResult, CameraFit
@@ -81,7 +82,7 @@ def refuse_unlike_pairs(alone_rms_px: float, rms_px: float, rig: Rig) -> None:
 
 
 def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]) -> None:
-    """Refuse a lens that fits its corners but has no ray for some of them: too many coefficients for the views.
+    """Refuse a lens that fits its corners but has no ray there or between them: too many coefficients for the views.
 
     Parameters
     ----------
@@ -94,15 +95,14 @@ def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]
     Raises
     ------
     CalibrationError
-        Where a corner has no ray.
+        Where a corner, or a pixel between corners, has no ray.
     """
-    rays = camera.rays(np.concatenate(list(corners)))
-    lost = 1 - float(np.isfinite(rays).all(axis=1).mean())
+    lost = fold_among(camera, corners)
     if lost:
         raise CalibrationError(
-            f"the lens of camera {name} ({camera.model} with {camera.distortion.size} coefficients) is not one to one where "
-            f"{lost:.1%} of its corners were seen; expected a lens that is: take a model of fewer coefficients, or more views "
-            "that reach its edges"
+            f"the lens of camera {name} ({camera.model} with {camera.distortion.size} coefficients) is not one to one in "
+            f"{lost:.1%} of where its corners were seen; expected a lens that is: take a model of fewer coefficients, or "
+            "more views that reach its edges"
         )
 
 
@@ -157,6 +157,11 @@ def _camera_warnings(name: str, fit: CameraFit) -> Iterator[str]:
         yield (
             f"camera {name}: the target was tilted by {fit.tilt_deg:.0f} degrees at most; below {_GOOD_TILT_DEG:.0f} the focal "
             "length is poorly known: tilt it more"
+        )
+    if lost := fold_in_picture(fit.camera):
+        yield (
+            f"camera {name}: its lens has no ray for {lost:.2%} of the picture, beyond where corners were seen: there is no "
+            "depth there; a fisheye's dark rim is so, else hold the target there too or take a model of fewer coefficients"
         )
     typical = float(np.median(list(fit.view_rms_px.values())))
     for view, rms in fit.view_rms_px.items():

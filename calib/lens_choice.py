@@ -5,7 +5,8 @@ standard errors of the best one's, where the error is that of the mean differenc
 tenth above it, since a wrong model's errors differ so much between views that their mean is always uncertain. It is the
 standard-error rule of Breiman, Friedman, Olshen and Stone, Classification and Regression Trees, 1984, section 3.4.3,
 taken on paired differences, since views differ from one another far more than models do; two errors and not one, since
-the best of six is best by chance too.
+the best of six is best by chance too. A model that folds where corners were seen, or between them, is out, be it
+pinhole or fisheye; a fold beyond all corners is told and decides nothing (:mod:`.folds`).
 """
 
 from __future__ import annotations
@@ -16,8 +17,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from .bundle import Seen, State
-from .camera import Camera, FloatArray
+from .camera import FloatArray
 from .errors import CalibrationError
+from .folds import fold_among, fold_in_picture
 from .one_camera import LENSES, Lens, alone_in_order, fit_camera, with_lens
 from .refine import Refined, refine, rms
 from .result import ModelTrial
@@ -41,7 +43,10 @@ class _Candidate:
 
 
 def choose_lens(
-    seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]
+    seen: Sequence[Seen],
+    boards: tuple[FloatArray, ...],
+    size: tuple[int, int],
+    lenses: Sequence[Lens] = tuple(LENSES.values()),
 ) -> tuple[Lens, tuple[ModelTrial, ...]]:
     """Choose the lens model of one camera.
 
@@ -51,6 +56,8 @@ def choose_lens(
         All that the camera saw, one a view.
     boards : tuple of ndarray of shape (K, 3)
     size : (width, height)
+    lenses : sequence of Lens
+        Those to choose from, one at least.
 
     Returns
     -------
@@ -62,11 +69,11 @@ def choose_lens(
     CalibrationError
         Where no model fits.
     """
-    simplest = LENSES["pinhole 4"]
+    lenses = sorted(lenses, key=lambda each: each.coefficients)
     if len(seen) < _FEWEST_VIEWS:
         note = f"taken as the simplest: {len(seen)} views are too few to choose by, expected {_FEWEST_VIEWS} or more"
-        return simplest, (_only(simplest, note),)
-    candidates = _held_out(_fitted(alone_in_order(seen), boards, size), alone_in_order(seen))
+        return lenses[0], (_only(lenses[0], note),)
+    candidates = _held_out(_fitted(alone_in_order(seen), boards, size, lenses), alone_in_order(seen))
     able = [c for c in candidates if c.view_rms_px is not None]
     if not able:
         reasons = "; ".join(f"{c.lens.name}: {c.note}" for c in candidates)
@@ -83,11 +90,13 @@ def _only(lens: Lens, note: str) -> ModelTrial:
     return ModelTrial(name=lens.name, held_out_rms_px=float("nan"), parameters=parameters, chosen=True, note=note)
 
 
-def _fitted(seen: list[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]) -> list[_Candidate]:
+def _fitted(
+    seen: list[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int], lenses: Sequence[Lens]
+) -> list[_Candidate]:
     """Fit every model to all views; a richer pinhole model starts from the one before it."""
     candidates = []
     previous: State | None = None
-    for lens in sorted(LENSES.values(), key=lambda each: each.coefficients):
+    for lens in lenses:
         try:
             warm = previous is not None and lens.model == "pinhole"
             fit = refine(seen, with_lens(previous, lens)) if warm and previous else fit_camera(seen, boards, size, lens)
@@ -95,18 +104,10 @@ def _fitted(seen: list[Seen], boards: tuple[FloatArray, ...], size: tuple[int, i
             candidates.append(_Candidate(lens, None, None, f"cannot be fitted: {exc}"))
             continue
         previous = fit.state if lens.model == "pinhole" else previous
-        lost = _lost(fit.state.cameras[0], seen)
-        note = f"not one to one in {lost:.1%} of the picture" if lost else ""
+        lost = fold_among(fit.state.cameras[0], [s.pixels for s in seen])
+        note = f"not one to one in {lost:.1%} of where corners were seen" if lost else ""
         candidates.append(_Candidate(lens, None if lost else fit, None, note))
     return candidates
-
-
-def _lost(camera: Camera, seen: Sequence[Seen]) -> float:
-    """Share of the picture for which the lens has no ray; of the corners for a fisheye, whose picture may be a disc."""
-    pixels = np.concatenate([s.pixels for s in seen])
-    if camera.model == "pinhole":
-        pixels = np.concatenate([pixels, camera.grid_pixels(), camera.border_pixels()])
-    return 1 - float(np.isfinite(camera.rays(pixels)).all(axis=1).mean())
 
 
 def _held_out(candidates: Sequence[_Candidate], seen: Sequence[Seen]) -> list[_Candidate]:
@@ -171,8 +172,13 @@ def _trial(candidate: _Candidate, best: _Candidate, chosen: _Candidate) -> Model
         held_out_rms_px=float(np.sqrt((errors**2).mean())),
         parameters=4 + candidate.lens.coefficients,
         chosen=candidate is chosen,
-        note=candidate.note or _verdict(candidate, best, chosen),
+        note=(candidate.note or _verdict(candidate, best, chosen)) + _remark(candidate),
     )
+
+
+def _remark(candidate: _Candidate) -> str:
+    lost = fold_in_picture(candidate.fit.state.cameras[0]) if candidate.fit else 0.0
+    return f"; no ray in {lost:.2%} of the picture, beyond all corners" if lost else ""
 
 
 def _verdict(candidate: _Candidate, best: _Candidate, chosen: _Candidate) -> str:

@@ -8,6 +8,7 @@ intrinsics within 0.9.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass, replace
 
@@ -143,7 +144,8 @@ def _solve(
     for camera, asked in enumerate(settings):
         letter = asked.letter.upper()
         seen = [s for s in usable if s.camera == camera and s.placing not in apart]
-        _require(len(seen), len(views) - len(apart), f"camera {letter}", target)
+        remarks = [remark for view in views for remark in view.missed_remarks(camera)]
+        _require(len(seen), len(views) - len(apart), f"camera {letter}", target, remarks)
         alone = settle_alone(asked.letter, seen, boards, _checked(asked), asked.model, asked.held)
         if asked.held is None:
             # Before the pose: cameras whose focal length is anybody's guess would look like pairs that do not belong.
@@ -243,12 +245,14 @@ def _usable(target: Target, views: Sequence[View]) -> tuple[list[Seen], tuple[tu
     return usable, tuple(unused)
 
 
-def _require(count: int, looked: int, who: str, target: Target) -> None:
+def _require(count: int, looked: int, who: str, target: Target, remarks: Sequence[str] = ()) -> None:
     if count < FEWEST_VIEWS:
         found = "in no view" if count == 0 else f"in {count} view{'s' if count > 1 else ''}"
+        common = Counter(remarks).most_common(1)
+        seen = f"; in {common[0][1]} of the others: {common[0][0]}" if common else ""
         raise CalibrationError(
             f"{target} was found {found} of {looked} for {who}; expected {FEWEST_VIEWS} or more: check the target's name "
-            "(inner corners, not squares), show it whole, flat, sharp and evenly lit, and take more views"
+            f"(inner corners, not squares), show it whole, flat, sharp and evenly lit, and take more views{seen}"
         )
 
 

@@ -50,6 +50,10 @@ class View:
         named = ((self.name_a, self.remarks_a), (self.name_b, self.remarks_b))
         return tuple(f"{name} {remark}" for name, remarks in named for remark in remarks)
 
+    def missed_remarks(self, camera: int) -> tuple[str, ...]:
+        """Remarks on the image of one camera in which the board was not found; none where it was."""
+        return self.remarks(camera) if (self.seen_a, self.seen_b)[camera] is None else ()
+
     def missed(self) -> list[SetAside]:
         """Say of which image it is known why the board was not found in it."""
         sides = ((self.name_a, self.seen_a, self.remarks_a), (self.name_b, self.seen_b, self.remarks_b))

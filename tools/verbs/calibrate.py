@@ -23,7 +23,7 @@ from ...calib.report import write_report
 from ...calib.result import CalibrationResult, CameraFit
 from ...calib.targets import Target, parse_target
 from ...calib.views import PairBy
-from ..calibration_text import print_remarks, print_result, rotation_deg
+from ..calibration_text import print_result, rotation_deg
 from ..calibration_views import Looked, look_at_files
 from ..live_calibration import LiveSession, Solve, TakenPair, parse_goal
 from ..live_driver import depth_sigma_at, drive
@@ -116,8 +116,6 @@ def run(arguments: argparse.Namespace) -> int:
     looked = look_at_files(target, arguments.a, arguments.b, pair_by=arguments.pair_by, cache=cache)
     result = solve(looked.views, looked.size_a, looked.size_b)
     _finish(arguments, target, result, len(looked.views), lambda: _pictures(looked, result))
-    if not arguments.json:
-        print_remarks(looked.looks, {aside.name for aside in result.set_aside})
     return 0
 
 

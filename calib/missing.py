@@ -22,6 +22,8 @@ _FEWEST_MARKERS = 4
 """Markers of another kind that must be seen before they are spoken of: one alone may be a pattern of the background."""
 
 
+_MOST_MARKERS = 600
+
 _ENOUGH_PX = 1000
 """Width or height to which pictures are made smaller before every dictionary's markers are looked for."""
 
@@ -84,32 +86,35 @@ def _markers(grey: NDArray[np.uint8], dictionary: str) -> tuple[FloatArray, NDAr
 
 
 @cache
-def _families() -> dict[str, tuple[str, ...]]:
-    """Group the dictionaries by the name before their size: the largest of each holds all markers of the others."""
-    numbers = dictionaries()
-    sizes = {name: len(cv2.aruco.getPredefinedDictionary(number).bytesList) for name, number in numbers.items()}
+def _families() -> tuple[tuple[str, ...], ...]:
+    """Group the dictionaries by kind, each from small to large: a larger one begins with the markers of the smaller.
+
+    Left out are those whose markers take long to tell apart; boards number their markers from 0, so that what is left of
+    their kind sees them too.
+    """
     families: dict[str, list[str]] = {}
-    for name in sorted(sizes, key=lambda name: sizes[name]):
+    for name in sorted(dictionaries(), key=_held):
         stem, _, size = name.rpartition("_")
-        families.setdefault(stem if size.isdecimal() else name, []).append(name)
-    return {names[-1]: tuple(names) for names in families.values()}
+        if _held(name) <= _MOST_MARKERS:
+            families.setdefault(stem if size.isdecimal() else name, []).append(name)
+    return tuple(map(tuple, families.values()))
+
+
+def _held(dictionary: str) -> int:
+    return len(cv2.aruco.getPredefinedDictionary(dictionaries()[dictionary]).bytesList)
 
 
 def _other_dictionary(grey: NDArray[np.uint8], board: Charuco, seen: int) -> str:
     """Say of which dictionary markers are seen, if of another: the smallest that has them all."""
     scale = min(_ENOUGH_PX / max(grey.shape), 1.0)
     small = np.asarray(cv2.resize(grey, None, fx=scale, fy=scale, interpolation=cv2.INTER_AREA), dtype=np.uint8)
-    found = {largest: _markers(small, largest)[1] for largest in _families()}
-    best = max(found, key=lambda name: len(found[name]))
-    if len(found[best]) < max(_FEWEST_MARKERS, len(board.marker_ids) // 4, 2 * seen):
-        return ""
-    numbers = dictionaries()
-    name = next(
-        name
-        for name in _families()[best]
-        if found[best].max() < len(cv2.aruco.getPredefinedDictionary(numbers[name]).bytesList)
-    )
-    return f"{len(found[best])} markers of {name} are seen, not of {board.dictionary}: name the dictionary of the board"
+    enough = max(_FEWEST_MARKERS, len(board.marker_ids) // 4, 2 * seen)
+    for family in _families():
+        ids = _markers(small, family[-1])[1]
+        if len(ids) >= enough and board.dictionary not in family:
+            name = next(name for name in family if ids.max() < _held(name))
+            return f"{len(ids)} markers of {name} are seen, not of {board.dictionary}: name the dictionary of the board"
+    return ""
 
 
 def _marker_places(corners: FloatArray, markers: NDArray[np.intp], board: Charuco) -> FloatArray | None:

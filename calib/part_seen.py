@@ -19,6 +19,9 @@ _SAME_PLACE = 0.3
 """How far apart, in squares, the same corner may be as two detectors see it."""
 
 
+_SIDES = ("left", "right", "top", "bottom")
+
+
 def chessboard_grid(grey: NDArray[np.uint8], least: tuple[int, int] = _LEAST) -> FloatArray | None:
     """Find the largest whole piece of chessboard.
 
@@ -92,13 +95,11 @@ def explain_chessboard(grey: NDArray[np.uint8], board: Chessboard) -> str:
 def _cut_around(grid: FloatArray, size: tuple[int, int]) -> tuple[str, ...]:
     """Name the sides of the picture at which there is no room for the next row or column of corners."""
     ends = (grid, grid[::-1], grid.transpose(1, 0, 2), grid.transpose(1, 0, 2)[::-1])
-    cut: set[str] = set()
-    for end in ends:
-        first, step = end[0], end[0] - end[1]
-        # The next line of corners, by the last step; where it lies too near to the border it cannot be seen.
-        beyond = sides_beyond(first + step * (1 + _MARGIN_SQUARES), size)
-        cut |= set(beyond)
-    return tuple(side for side in ("left", "right", "top", "bottom") if side in cut)
+    # The next line of corners, by the last step; where it lies too near to the border it cannot be seen.
+    beyond = [end[0] + (end[0] - end[1]) * (1 + _MARGIN_SQUARES) for end in ends]
+    mostly = {side for line in beyond for side in sides_beyond(np.median(line, axis=0, keepdims=True), size)}
+    cut = mostly or {side for line in beyond for side in sides_beyond(line, size)}
+    return tuple(side for side in _SIDES if side in cut)
 
 
 def sides_beyond(pixels: FloatArray, size: tuple[int, int]) -> tuple[str, ...]:
@@ -110,8 +111,8 @@ def sides_beyond(pixels: FloatArray, size: tuple[int, int]) -> tuple[str, ...]:
     size : (width, height)
     """
     x, y = pixels[:, 0], pixels[:, 1]
-    out = {"left": x < 0, "right": x > size[0] - 1, "top": y < 0, "bottom": y > size[1] - 1}
-    return tuple(side for side, beyond in out.items() if beyond.any())
+    out = (x < 0, x > size[0] - 1, y < 0, y > size[1] - 1)
+    return tuple(side for side, beyond in zip(_SIDES, out, strict=True) if beyond.any())
 
 
 def sides_cut_off(sighting: Sighting, board: Board, size: tuple[int, int]) -> tuple[str, ...]:

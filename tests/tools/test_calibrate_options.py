@@ -7,6 +7,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import cv2
 import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
@@ -149,3 +150,18 @@ def test_a_length_that_is_none_is_refused(folder: Path, capsys: Any, option: str
 
     assert ended.value.code == 2
     assert f"{length}; expected a length above 0 in millimetres" in capsys.readouterr().err
+
+
+def test_a_picture_of_the_other_camera_s_size_is_named_with_both_sizes(folder: Path, capsys: Any) -> None:
+    for file in folder.glob("right*.jpg"):
+        cv2.imwrite(str(file), cv2.imread(str(file))[:400])
+    (folder / "left01.jpg").rename(folder / "kept")
+    (folder / "right01.jpg").rename(folder / "left01.jpg")
+    (folder / "kept").rename(folder / "right01.jpg")
+    files = ["--a", str(folder / "left*.jpg"), "--b", str(folder / "right*.jpg")]
+
+    assert main(["calibrate", *files, "--target", "chessboard 9x6 30mm", "-o", str(folder / "bench.rig.json")]) == 2
+    said = capsys.readouterr().err
+    assert "left01.jpg is 640x400 pixels" in said
+    assert "640x480" in said
+    assert "it has the size of camera B's; move it there" in said

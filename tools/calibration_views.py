@@ -140,7 +140,8 @@ def _sizes(looks_a: Sequence[Look], looks_b: Sequence[Look]) -> tuple[Size, Size
             like = next(like for like in looks if like.size == usual)
             remedy = "leave out those of another"
             if look.size == other:
-                remedy = f"it has the size of camera {'B' if camera == 'A' else 'A'}'s; move it there if it is a picture of that camera"
+                owner = "B" if camera == "A" else "A"
+                remedy = f"it has the size of camera {owner}'s; move it there if it is a picture of that camera"
             raise CalibrationError(
                 f"{look.file} is {look.size[0]}x{look.size[1]} pixels and {like.file} {usual[0]}x{usual[1]}; expected one size "
                 f"for all images of camera {camera}: {remedy}"

@@ -16,7 +16,7 @@ from .judge import place_pair
 from .lens_choice import choose_lens
 from .numbering import Pair, agreed_pose, pairs_of
 from .one_camera import fit_camera, lens_named, place_board
-from .refine import Refined, refine, rms
+from .refine import SETTLED, Refined, refine, rms
 from .result import ModelTrial
 from .rig import Rig
 from .set_aside import limit_px, robust_limit, settle
@@ -35,6 +35,11 @@ that moved by 1 mm of 800 is at 3.5 to 6, then at 6 to 19; the worst of the real
 """
 
 _SMALLEST_NOISE_PX = 0.02
+
+_ROUGHLY = 1e-4
+"""How far the solution settles that holds pairs which do not belong: it would creep for long, and none is built on it.
+The change of a focal length is told by what no move of the unknowns can take up, so that their last digits tell nothing.
+"""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -206,7 +211,8 @@ def settle_jointly(
     start = _start(used, boards, (alones[0].camera, alones[1].camera))
 
     def pose_of(some: Sequence[Pair]) -> Joint:
-        return _refine([s for pair in some for s in pair], start, held=("a", "b"), board_shape=False)
+        used = [s for pair in some for s in pair]
+        return _refine(used, start, held=("a", "b"), board_shape=False, settled=SETTLED)
 
     posed, _, unlike = settle(pairs, pose_of, _judge_by_rms, fewest=FEWEST_VIEWS)
     refuse_unlike_pairs(max(alone.fit.rms_px for alone in alones), posed.fit.rms_px, posed.rig)
@@ -214,15 +220,16 @@ def settle_jointly(
     held = [letter for letter, alone in zip("ab", alones, strict=True) if alone.held]
     squares = {(c, s.placing): float((r**2).sum()) for c, alone in enumerate(alones) for s, r in _residuals(alone)}
 
-    def solve(some: Sequence[Pair]) -> Joint:
+    def solve(some: Sequence[Pair], settled: float = SETTLED) -> Joint:
         gone = {a.placing for a, _ in pairs} - {a.placing for a, _ in some}
-        return _refine([s for s in used if s.placing not in gone], start, held=held, board_shape=board_shape)
+        left = [s for s in used if s.placing not in gone]
+        return _refine(left, start, held=held, board_shape=board_shape, settled=settled)
 
     # A new focal length may spoil the very pairs that are set aside, so it is looked for among all of them.
-    whole = _solved_or_none(solve, pairs)
+    whole = _solved_or_none(lambda: solve(pairs, _ROUGHLY if unlike else SETTLED))
     joint, _, aside = settle(
         pairs,
-        lambda some: whole if whole is not None and len(some) == len(pairs) else solve(some),
+        lambda some: whole if whole is not None and len(some) == len(pairs) and not unlike else solve(some),
         lambda joint, kept, aside: _judge_apart(joint, kept, aside, squares),
         fewest=FEWEST_VIEWS,
         at_first={pairs.index(pair) for pair in unlike},
@@ -233,10 +240,10 @@ def settle_jointly(
     return replace(joint, aside=tuple(misfits), jump=jump)
 
 
-def _solved_or_none(solve: Callable[[Sequence[Pair]], Joint], pairs: Sequence[Pair]) -> Joint | None:
-    """Solve for all pairs; None where those that do not belong leave no solution."""
+def _solved_or_none(solve: Callable[[], Joint]) -> Joint | None:
+    """Solve; None where pairs that do not belong leave no solution."""
     try:
-        return solve(pairs)
+        return solve()
     except CalibrationError:
         return None
 
@@ -310,11 +317,11 @@ def _start(seen: Sequence[Seen], boards: tuple[FloatArray, ...], cameras: tuple[
     return State(cameras=cameras, R=R, t=t, placings=placings, owners=owners, boards=boards)
 
 
-def _refine(seen: Sequence[Seen], start: State, *, held: Sequence[str], board_shape: bool) -> Joint:
+def _refine(seen: Sequence[Seen], start: State, *, held: Sequence[str], board_shape: bool, settled: float) -> Joint:
     """Refine with the placings of these views alone."""
     views = sorted({s.placing for s in seen})
     number = {view: index for index, view in enumerate(views)}
     solved = tuple(replace(s, placing=number[s.placing]) for s in seen)
     part = replace(start, placings=start.placings[views], owners=start.owners[views])
-    fit = refine(solved, part, held=held, board_shape=board_shape)
+    fit = refine(solved, part, held=held, board_shape=board_shape, settled=settled)
     return Joint(seen=tuple(seen), solved=solved, fit=fit)

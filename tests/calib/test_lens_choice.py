@@ -45,7 +45,7 @@ def noisy(camera: Camera, count: int, seed: int, near_m: float) -> list[Seen]:
 
 @pytest.fixture(scope="module")
 def barrel() -> list[Seen]:
-    return noisy(BARREL, 16, seed=1, near_m=0.3)
+    return noisy(BARREL, 10, seed=1, near_m=0.3)
 
 
 def lenses(*names: str) -> list[Lens]:
@@ -65,7 +65,7 @@ def test_a_fold_counts_between_corners_and_is_only_told_beyond_them() -> None:
 
 
 def test_a_pinhole_that_folds_beyond_all_corners_is_chosen_and_its_fold_told(barrel: list[Seen]) -> None:
-    names = lenses("pinhole 4", "pinhole 5", "fisheye")
+    names = lenses("pinhole 4", "pinhole 5")
     lens, trials = choose_lens(alone_in_order(barrel[::2]), BOARDS, BARREL.size, names)
 
     assert lens.name == "pinhole 5", trials
@@ -77,7 +77,7 @@ def test_a_pinhole_that_folds_beyond_all_corners_is_chosen_and_its_fold_told(bar
 def test_a_strong_rational_lens_is_not_taken_for_a_fisheye_since_its_fit_folds_where_no_corner_was() -> None:
     seen = alone_in_order(noisy(RATIONAL, 12, seed=1, near_m=0.25)[::2])
 
-    lens, trials = choose_lens(seen, BOARDS, RATIONAL.size, lenses("pinhole 4", "pinhole 8", "fisheye"))
+    lens, trials = choose_lens(seen, BOARDS, RATIONAL.size, lenses("pinhole 8", "fisheye"))
 
     assert lens.name == "pinhole 8", trials
     (chosen,) = [trial for trial in trials if trial.chosen]
@@ -95,7 +95,7 @@ def test_the_result_warns_of_the_part_of_the_picture_that_has_no_ray(barrel: lis
 
 
 def test_a_fisheye_is_fitted_and_chosen_from_its_own_start() -> None:
-    seen = alone_in_order(noisy(FISHEYE, 16, seed=1, near_m=0.2)[::2])
+    seen = alone_in_order(noisy(FISHEYE, 8, seed=1, near_m=0.2)[::2])
 
     lens, trials = choose_lens(seen, BOARDS, FISHEYE.size, lenses("pinhole 4", "fisheye"))
     fit = fit_camera(seen, BOARDS, FISHEYE.size, LENSES["fisheye"])
@@ -106,7 +106,7 @@ def test_a_fisheye_is_fitted_and_chosen_from_its_own_start() -> None:
 
 
 def test_on_real_views_a_fisheye_has_a_figure_and_the_pinhole_is_taken() -> None:
-    found = [BOARD.find(read_image(file)) for file in find_images(str(DATA / "left*.jpg"))]
+    found = [BOARD.find(read_image(file)) for file in find_images(str(DATA / "left0*.jpg"))]
     seen = [
         Seen(name=str(i), camera=0, placing=i, board=0, ids=s.ids, pixels=s.pixels) for i, s in enumerate(found) if s
     ]
@@ -116,3 +116,11 @@ def test_on_real_views_a_fisheye_has_a_figure_and_the_pinhole_is_taken() -> None
     assert lens.name == "pinhole 4"
     by_name = {trial.name: trial.held_out_rms_px for trial in trials}
     assert by_name["pinhole 4"] < by_name["fisheye"] < 1.0
+
+
+def test_a_richer_pinhole_whose_coefficients_are_idle_is_not_held_out(barrel: list[Seen]) -> None:
+    lens, trials = choose_lens(alone_in_order(barrel[::2]), BOARDS, BARREL.size, lenses("pinhole 5", "pinhole 8"))
+
+    assert lens.name == "pinhole 5"
+    assert trials[1].note.startswith("not held out: fits all views no better than pinhole 5")
+    assert np.isnan(trials[1].held_out_rms_px)

@@ -27,11 +27,11 @@ FEWEST_VIEWS = 3
 """Zhang (2000), section 3.1: with three views or more, all intrinsic parameters have one solution."""
 
 _SUSPECT_SIGMAS = 3.0
-_MOVED_SIGMAS = 5.5
+_MOVED_SIGMAS = 6.0
 """How far A and B may differ on where the board of a pair stands, in standard deviations of corner noise for each of the
 six coordinates of a placing, or times the median of all pairs: the first raises suspicion of a pair that took part in the
 solution, the second convicts it before the solution of the others. Noise alone passes the first once in 10^9 pairs. A board
-that moved by 1 mm of 800 is at 3.5 to 6, then at 6 to 19; the worst of the real pairs in the tests at 3.9, then at 4.6.
+that moved by 1 mm of 800 is at 3.5 to 6, then at 6 to 19; the worst of the real pairs in the tests at 3.9, then at 5.6.
 """
 
 _SMALLEST_NOISE_PX = 0.02

@@ -11,9 +11,12 @@ from .bundle import Seen
 from .camera import Camera, FloatArray
 from .errors import CalibrationError
 from .focal_drift import FocalJump
+from .folds import fold_among, fold_in_picture
+from .printed_size import name_at
 from .refine import Refined
 from .result import CalibrationResult, CameraFit
 from .rig import Rig
+from .targets import Target
 
 _ENOUGH_VIEWS = 10
 _GOOD_RMS_PX = 0.5
@@ -49,6 +52,7 @@ class Account:
         Each camera on its own.
     jump : FocalJump or None
         A change of a focal length, if there was one.
+    target : Target
     baseline_m : float or None
         As measured otherwise.
     """
@@ -57,6 +61,7 @@ class Account:
     epipolar_px: Mapping[str, float]
     alone: tuple[tuple[Sequence[Seen], Refined], ...]
     jump: FocalJump | None
+    target: Target
     baseline_m: float | None
 
 
@@ -77,7 +82,7 @@ def refuse_unlike_pairs(alone_rms_px: float, rms_px: float, rig: Rig) -> None:
 
 
 def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]) -> None:
-    """Refuse a lens that fits its corners but has no ray for some of them: too many coefficients for the views.
+    """Refuse a lens that fits its corners but has no ray there or between them: too many coefficients for the views.
 
     Parameters
     ----------
@@ -90,15 +95,14 @@ def refuse_folding_lens(name: str, camera: Camera, corners: Sequence[FloatArray]
     Raises
     ------
     CalibrationError
-        Where a corner has no ray.
+        Where a corner, or a pixel between corners, has no ray.
     """
-    rays = camera.rays(np.concatenate(list(corners)))
-    lost = 1 - float(np.isfinite(rays).all(axis=1).mean())
+    lost = fold_among(camera, corners)
     if lost:
         raise CalibrationError(
-            f"the lens of camera {name} ({camera.model} with {camera.distortion.size} coefficients) is not one to one where "
-            f"{lost:.1%} of its corners were seen; expected a lens that is: take a model of fewer coefficients, or more views "
-            "that reach its edges"
+            f"the lens of camera {name} ({camera.model} with {camera.distortion.size} coefficients) is not one to one in "
+            f"{lost:.1%} of where its corners were seen; expected a lens that is: take a model of fewer coefficients, or "
+            "more views that reach its edges"
         )
 
 
@@ -154,6 +158,11 @@ def _camera_warnings(name: str, fit: CameraFit) -> Iterator[str]:
             f"camera {name}: the target was tilted by {fit.tilt_deg:.0f} degrees at most; below {_GOOD_TILT_DEG:.0f} the focal "
             "length is poorly known: tilt it more"
         )
+    if lost := fold_in_picture(fit.camera):
+        yield (
+            f"camera {name}: its lens has no ray for {lost:.2%} of the picture, beyond where corners were seen: there is no "
+            "depth there; a fisheye's dark rim is so, else hold the target there too or take a model of fewer coefficients"
+        )
     typical = float(np.median(list(fit.view_rms_px.values())))
     for view, rms in fit.view_rms_px.items():
         if rms > max(_OUTLYING_VIEW * typical, _GOOD_RMS_PX):
@@ -196,8 +205,10 @@ def _scale_warnings(account: Account) -> Iterator[str]:
         return
     ratio = account.result.rig.baseline_m / account.baseline_m
     if abs(ratio - 1) > _SAME_BASELINE:
+        name = name_at(account.target, 1 / ratio)
+        agreeing = f"{1 / ratio:.3f} times what its name says would agree" + (f', "{name}"' if name else "")
         yield (
             f"the baseline comes out as {account.result.rig.baseline_m * 1e3:.1f} mm, {ratio:.3f} times the "
-            f"{account.baseline_m * 1e3:.1f} mm given: is the target's size right ({1 / ratio:.3f} times what its name says "
-            "would agree: measure the print), and was the baseline taken between the two lenses?"
+            f"{account.baseline_m * 1e3:.1f} mm given: is the target's size right ({agreeing}: measure the print), and was "
+            "the baseline taken between the two lenses?"
         )

@@ -111,6 +111,12 @@ class Charuco:
         return range(self.first_id, self.first_id + self.columns * self.rows // 2)
 
     @property
+    def marker_corners_m(self) -> FloatArray:
+        """Corners of its markers in the board's frame, clockwise, shape (markers, 4, 2), metres."""
+        corners = [np.asarray(four)[:, :2] for four in self._opencv_board().getObjPoints()]
+        return np.array(corners, dtype=np.float64)
+
+    @property
     def largest_marker_m(self) -> float:
         """Largest edge of a marker, in metres, that leaves it enough white inside its square."""
         modules = self._opencv_dictionary().markerSize + 2

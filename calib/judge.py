@@ -84,7 +84,7 @@ def judge_held_out(seen: Sequence[Seen], state: State) -> Judgement:
     for view in sorted({s.placing for s in seen}):
         mine = [replace(s, placing=0) for s in seen if s.placing == view]
         try:
-            placed, residuals = _place(mine, state)
+            placed, residuals = place_pair(mine, state)
         except CalibrationError as exc:
             aside.append(SetAside(name=mine[0].name, reason=f"held out, but {exc}"))
             continue
@@ -104,7 +104,27 @@ def judge_held_out(seen: Sequence[Seen], state: State) -> Judgement:
     return Judgement(figures, tuple(fits), tuple(aside))
 
 
-def _place(seen: Sequence[Seen], state: State) -> tuple[State, tuple[FloatArray, ...]]:
+def place_pair(seen: Sequence[Seen], state: State) -> tuple[State, tuple[FloatArray, ...]]:
+    """Find where one board stands, the cameras and the pose being known.
+
+    Parameters
+    ----------
+    seen : sequence of Seen
+        Of one placing: one image, or both of a pair; their placing is to be 0.
+    state : State
+
+    Returns
+    -------
+    State
+        With that one placing.
+    tuple of ndarray of shape (N, 2)
+        Found minus predicted, in pixels, one array an image.
+
+    Raises
+    ------
+    CalibrationError
+        Where the points do not settle it.
+    """
     first = seen[0]
     camera = state.cameras[first.camera]
     T_owner_board = place_board(state.boards[first.board][first.ids], first.pixels, camera)

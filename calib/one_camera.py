@@ -25,6 +25,10 @@ _FLAT = 1e-4
 """Share of a board's extent by which its points may leave a plane and still start as a flat one."""
 
 
+_FOCAL_SHARES = tuple(0.15 * 1.25**step for step in range(18))
+"""Focal lengths over the picture's longer side from which a fisheye may start: a field of 380 degrees to one of 9."""
+
+
 @dataclass(frozen=True)
 class Lens:
     """A lens model and its number of coefficients, by the name that people give it."""
@@ -170,26 +174,38 @@ def _start_pinhole(seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: t
             criteria=_STOP,
         )
     except cv2.error as exc:
-        raise _unsettled(len(seen), exc) from exc
+        raise _unsettled(len(seen), exc.err.strip().splitlines()[0] if exc.err else "no solution found") from exc
     return _started(K, np.ravel(distortion)[:5], "pinhole", size, turns, shifts, boards)
 
 
 def _start_fisheye(seen: Sequence[Seen], boards: tuple[FloatArray, ...], size: tuple[int, int]) -> State:
-    points = [boards[s.board][s.ids][None] for s in seen]
-    pixels = [s.pixels[None] for s in seen]
-    flags = _fisheye_flag("CALIB_RECOMPUTE_EXTRINSIC") | _fisheye_flag("CALIB_FIX_SKEW")
-    try:
-        _, K, distortion, turns, shifts = cv2.fisheye.calibrate(
-            points, pixels, size, np.eye(3), np.zeros((4, 1)), flags=flags, criteria=_STOP
+    """Start from the undistorted fisheye, its axis in the middle, whose focal length lets the boards fit best.
+
+    Boards are placed one by one, so that no view can spoil another, as it does in OpenCV's fisheye solver.
+    """
+    best, least = None, np.inf
+    for share in _FOCAL_SHARES:
+        K = _guess(size) * [[share, 1, 1], [1, share, 1], [1, 1, 1]]
+        camera = Camera(width=size[0], height=size[1], K=K, distortion=np.zeros(4), model="fisheye")
+        try:
+            placings = [place_board(boards[s.board][s.ids], s.pixels, camera) for s in seen]
+        except CalibrationError:
+            continue  # too short a focal length lets corners look sideways
+        misfit = float(
+            np.median(
+                [_misfit(camera, T, boards[s.board][s.ids], s.pixels) for s, T in zip(seen, placings, strict=True)]
+            )
         )
-    except cv2.error as exc:
-        raise _unsettled(len(seen), exc) from exc
-    return _started(K, np.ravel(distortion), "fisheye", size, turns, shifts, boards)
+        if misfit < least:
+            best, least = alone_state(camera, placings, boards), misfit
+    if best is None:
+        raise _unsettled(len(seen), "no fisheye lets the target be placed in every one")
+    return best
 
 
-def _fisheye_flag(name: str) -> int:
-    # In its own name space up to OpenCV 4, in the common one from 5 on, with other numbers.
-    return int(getattr(cv2.fisheye if hasattr(cv2.fisheye, name) else cv2, name))
+def _misfit(camera: Camera, T: FloatArray, points: FloatArray, pixels: FloatArray) -> float:
+    off = np.linalg.norm(camera.project(points @ T[:3, :3].T + T[:3, 3]) - pixels, axis=1)
+    return float(np.median(np.where(np.isfinite(off), off, np.inf)))
 
 
 def _started(
@@ -206,10 +222,9 @@ def _started(
     return alone_state(camera_from(intrinsics, size, model), placings, boards)
 
 
-def _unsettled(views: int, exc: cv2.error) -> CalibrationError:
-    said = exc.err.strip().splitlines()[0] if exc.err else "OpenCV found no solution"
+def _unsettled(views: int, reason: str) -> CalibrationError:
     return CalibrationError(
-        f"the {views} views do not settle the camera ({said}); expected views from different sides and distances"
+        f"the {views} views do not settle the camera ({reason}); expected views from different sides and distances"
     )
 
 

@@ -14,6 +14,7 @@ from .chessboard import Chessboard
 from .circles import CircleGrid
 from .drawing import Disc, Label, Outline, Page, Shape, Stroke, outline_of_cells
 from .errors import CalibrationError
+from .printed_size import printed_size, scaled
 
 _MARGIN_MM = 10.0
 """What most printers cannot print on, and some."""
@@ -154,11 +155,11 @@ class _Art:
 def _art(board: Board) -> _Art:
     match board:
         case Chessboard():
-            return _squares(board.columns + 1, board.rows + 1, board.square_m * 1e3, 0.5, ())
+            return _squares(board, board.columns + 1, board.rows + 1, 0.5, ())
         case Charuco():
             if board.caution:
                 raise CalibrationError(board.caution)
-            return _squares(board.columns, board.rows, board.square_m * 1e3, 0.25, tuple(_markers(board)))
+            return _squares(board, board.columns, board.rows, 0.25, tuple(_markers(board)))
         case CircleGrid():
             return _circles(board)
     raise CalibrationError(
@@ -167,13 +168,16 @@ def _art(board: Board) -> _Art:
     )
 
 
-def _squares(columns: int, rows: int, edge: float, white_share: float, markers: tuple[Outline, ...]) -> _Art:
+def _squares(
+    board: Chessboard | Charuco, columns: int, rows: int, white_share: float, markers: tuple[Outline, ...]
+) -> _Art:
+    edge = board.square_m * 1e3
     dark = np.add.outer(np.arange(rows), np.arange(columns)) % 2 == 0
     return _Art(
         width=columns * edge,
         height=rows * edge,
         white=white_share * edge,
-        check=f"{columns} squares {columns * edge:g} mm, {rows} squares the other way {rows * edge:g} mm",
+        check=printed_size(board).note,
         shapes=(outline_of_cells(dark, 0, 0, edge), *markers),
     )
 
@@ -191,12 +195,11 @@ def _markers(board: Charuco) -> Iterator[Outline]:
 def _circles(board: CircleGrid) -> _Art:
     centres, radius = board.points[:, :2] * 1e3, board.diameter_m * 1e3 / 2
     across, down = map(float, centres.max(axis=0))
-    along = float(centres[board.columns - 1, 0])
     return _Art(
         width=across + 2 * radius,
         height=down + 2 * radius,
         white=board.spacing_m * 1e3 / 2,
-        check=f"first to last circle of a row {along:g} mm, first to last row {down:g} mm, middle to middle",
+        check=printed_size(board).note,
         shapes=tuple(Disc(float(x) + radius, float(y) + radius, radius) for x, y in centres),
     )
 
@@ -266,13 +269,8 @@ def _edge_m(board: Board) -> float:
 
 
 def _scaled(board: Board, share: float) -> Board:
-    match board:
-        case Chessboard():
-            return replace(board, square_m=board.square_m * share)
-        case Charuco():
-            # Down to a tenth of a millimetre, which only ever leaves the markers more white.
-            marker_mm = np.floor(board.marker_m * share * 1e4 + 1e-6) / 10
-            return replace(board, square_m=board.square_m * share, marker_m=float(marker_mm) / 1e3)
-        case CircleGrid():
-            return replace(board, spacing_m=board.spacing_m * share)
-    raise TypeError(f"no scale for {board!r}")
+    smaller = scaled(board, share)
+    if isinstance(smaller, Charuco):
+        # Down to a tenth of a millimetre, which only ever leaves the markers more white.
+        return replace(smaller, marker_m=float(np.floor(smaller.marker_m * 1e4 + 1e-6)) / 1e4)
+    return smaller

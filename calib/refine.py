@@ -26,7 +26,8 @@ _SMALLEST_NOISE_PX = 0.01
 _MAD_TO_SIGMA = 1.4826
 """Standard deviation of a normal distribution over its median absolute deviation."""
 
-_SETTLED = 1e-11
+SETTLED = 1e-11
+"""Relative change of cost or unknowns below which the refinement ends."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -76,6 +77,7 @@ def refine(
     held: Collection[str] = (),
     square_pixels: Collection[str] = (),
     board_shape: bool = False,
+    settled: float = SETTLED,
 ) -> Refined:
     """Refine all that is not held.
 
@@ -90,6 +92,8 @@ def refine(
     board_shape : bool
         Refine the boards' points too. Three points far apart fix the gauge: the first two stay, so that their distance
         sets the scale, and the third stays in the plane of the three.
+    settled : float
+        Relative change of cost or unknowns at which to end: more where the solution only serves to judge.
 
     Returns
     -------
@@ -105,7 +109,7 @@ def refine(
     noise = _noise(Problem(layout, seen, basis, (1.0,) * len(start.cameras), board_shape).residuals(), seen, 0)
     for _ in range(2):
         problem = Problem(Layout(start), seen, basis, noise, board_shape)
-        start = _solve(problem)
+        start = _solve(problem, settled)
         residuals = Problem(Layout(start), seen, basis, noise, board_shape).residuals()
         noise_before, noise = noise, _noise(residuals, seen, basis.shape[1])
         if np.allclose(noise, noise_before, rtol=0.05):
@@ -134,7 +138,7 @@ def _noise(residuals: Sequence[FloatArray], seen: Sequence[Seen], unknowns: int)
     return tuple(sigmas)
 
 
-def _solve(problem: Problem) -> State:
+def _solve(problem: Problem, settled: float) -> State:
     """Run the solver in unknowns that the normal equations at the start make equally sharp and uncorrelated.
 
     In these the inner least-squares iterations need a handful of steps instead of thousands: lens coefficients and
@@ -154,9 +158,9 @@ def _solve(problem: Problem) -> State:
         method="trf",
         loss="huber",
         f_scale=HUBER_SIGMAS,
-        ftol=_SETTLED,
-        xtol=_SETTLED,
-        gtol=_SETTLED,
+        ftol=settled,
+        xtol=settled,
+        gtol=settled,
         max_nfev=200,
     )
     try:

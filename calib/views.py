@@ -14,10 +14,10 @@ from numpy.typing import NDArray
 
 from .board import Board, Sighting
 from .camera import FloatArray
-from .chessboard import Chessboard
 from .errors import CalibrationError
 from .guidance import board_normal
 from .images import grey_8_bit
+from .part_seen import sides_cut_off
 
 PairBy = Literal["order", "number"]
 
@@ -30,7 +30,7 @@ SMALL_SHARE = 0.1
 STEEP_DEG = 60.0
 FAINT_LEVELS = 30.0
 
-_SATURATED = 250
+SATURATED = 250
 _PATCH_SHARE = 0.3
 
 
@@ -103,6 +103,8 @@ class Condition:
         Share of the picture's width or height, whichever is more, that it fills.
     tilt_deg : float
         Angle between its normal and the viewing direction, judged with a focal length of one image width.
+    cut_off : tuple of str
+        Sides of the picture beyond which points of it lie: ``left``, ``right``, ``top``, ``bottom``.
     """
 
     blur_px: float
@@ -110,11 +112,14 @@ class Condition:
     saturated: float
     width_share: float
     tilt_deg: float
+    cut_off: tuple[str, ...] = ()
 
     @property
     def complaints(self) -> tuple[str, ...]:
         """What is wrong, each in a sentence with its figure and what to do."""
         found = []
+        if self.cut_off:
+            found.append(f"the board is cut off at the {' and '.join(self.cut_off)} of the picture: show it whole")
         if self.blur_px > BLURRED_PX:
             found.append(
                 f"blurred over {self.blur_px:.1f} px (more than {BLURRED_PX:g}): hold still, focus, more light"
@@ -153,9 +158,10 @@ def inspect(image: NDArray[Any], sighting: Sighting, board: Board) -> Condition:
     return Condition(
         blur_px=float(blur),
         contrast=float(contrast),
-        saturated=float((grey[hull > 0] >= _SATURATED).mean()) if hull.any() else 0.0,
+        saturated=float((grey[hull > 0] >= SATURATED).mean()) if hull.any() else 0.0,
         width_share=float(spread.max()),
         tilt_deg=float(np.rad2deg(np.arccos(np.clip(-normal[2], -1, 1)))),
+        cut_off=sides_cut_off(sighting, board, size),
     )
 
 
@@ -177,26 +183,3 @@ def _edge(patch: NDArray[np.uint8]) -> tuple[float, float]:
     y = cv2.Sobel(patch, cv2.CV_32F, 0, 1, ksize=1, scale=0.5)
     steepest = float(np.percentile(np.hypot(x, y), 98))
     return float((high - low) / (np.sqrt(2 * np.pi) * max(steepest, 1e-3))), float(high - low)
-
-
-def explain_missing(image: NDArray[Any], board: Board) -> str:
-    """Say what may keep a board from being found: another board in the picture, or how the picture looks."""
-    grey = grey_8_bit(image)
-    if isinstance(board, Chessboard) and (other := _other_chessboard(grey, board)):
-        return f"a chessboard of {other} inner corners is seen, not {board.columns}x{board.rows}: name the board that is used"
-    low, high = np.percentile(grey, (2, 98))
-    if high - low < FAINT_LEVELS:
-        return f"only {high - low:.0f} grey levels in the whole picture: more light or exposure"
-    bright = float((grey >= _SATURATED).mean())
-    if bright > 0.5:
-        return f"{bright:.0%} of the picture is blown out: less light or exposure"
-    return "not found: show it whole, flat, sharp and evenly lit"
-
-
-def _other_chessboard(grey: NDArray[np.uint8], board: Chessboard) -> str | None:
-    """Look for a chessboard with one row or column more or fewer."""
-    for columns, rows in ((-1, 0), (0, -1), (-1, -1), (1, 0), (0, 1), (1, 1)):
-        size = board.columns + columns, board.rows + rows
-        if min(size) >= 3 and cv2.findChessboardCorners(grey, size, flags=cv2.CALIB_CB_FAST_CHECK)[0]:
-            return f"{size[0]}x{size[1]}"
-    return None

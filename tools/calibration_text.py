@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
 import cv2
 import numpy as np
 from rich.console import Console
@@ -12,7 +10,6 @@ from rich.table import Table
 from ..calib import Rig
 from ..calib.camera import FloatArray
 from ..calib.result import CalibrationResult
-from .sighting_cache import Look
 
 
 def rotation_deg(rig: Rig) -> FloatArray:
@@ -21,23 +18,14 @@ def rotation_deg(rig: Rig) -> FloatArray:
 
 
 def print_result(result: CalibrationResult, views: int) -> None:
-    """Print the figures, what was set aside, what was tried and the warnings."""
+    """Print the figures, what was tried and the warnings, what was set aside among them."""
     console = Console()
     console.print(_intrinsics(result, views))
     console.print(_pose(result))
     if len(result.trials) > 1:
         console.print(_trials(result))
-    for aside in result.set_aside:
-        print(f"set aside: {aside.name}: {aside.reason}")
     for warning in result.warnings:
         print(f"warning: {warning}")
-
-
-def print_remarks(looks: Sequence[Look], missed: set[str]) -> None:
-    """Print what is wrong with images in which a board was not found, or that were set aside."""
-    for look in looks:
-        if look.remarks and (look.file.name in missed or any(seen is None for seen in look.seen)):
-            print(f"{look.file.name}: {'; '.join(look.remarks)}")
 
 
 def _known(result: CalibrationResult, name: str, value: float, scale: float = 1.0, digits: int = 2) -> str:

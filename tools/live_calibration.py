@@ -21,6 +21,7 @@ from ..calib.from_target import View
 from ..calib.guidance import Account, StillWatch, next_view, showing_of
 from ..calib.result import CalibrationResult
 from ..calib.targets import Sighting, Target
+from ..calib.views import inspect
 from ..node.pairing import Pair
 from ..node.runner import read_ahead
 from ..node.sources import Source
@@ -159,7 +160,19 @@ class LiveSession:
 
     def _take(self, taken: TakenPair, seen_a: Sighting, seen_b: Sighting) -> TakenPair:
         name = f"{taken.number:02d}.png"
-        self.views.append(View(name_a=f"a{name}", name_b=f"b{name}", seen_a=seen_a, seen_b=seen_b))
+        remarks = [
+            inspect(image, seen, self._board).complaints
+            for image, seen in ((taken.image_a, seen_a), (taken.image_b, seen_b))
+        ]
+        view = View(
+            name_a=f"a{name}",
+            name_b=f"b{name}",
+            seen_a=seen_a,
+            seen_b=seen_b,
+            remarks_a=remarks[0],
+            remarks_b=remarks[1],
+        )
+        self.views.append(view)
         for camera, seen, size in zip("AB", (seen_a, seen_b), self._sizes or (), strict=True):
             self.accounts[camera] = self.accounts[camera].with_(showing_of(self._board, seen, size))
         if len(self.views) >= FEWEST_TO_SOLVE:

@@ -11,19 +11,22 @@ from dataclasses import dataclass
 from functools import partial
 from io import BytesIO
 from pathlib import Path
+from typing import Any
 
 import cv2
 import numpy as np
+from numpy.typing import NDArray
 
 from ..calib import CalibrationError
 from ..calib.board import Sighting
 from ..calib.exif import orientation
 from ..calib.images import decode_image, read_file
+from ..calib.missing import explain_missing
 from ..calib.rig import write_atomically
 from ..calib.targets import Target
-from ..calib.views import explain_missing, inspect
+from ..calib.views import inspect
 
-_FINDERS = 1
+_FINDERS = 2
 """Counted up whenever a finder of ours changes its results."""
 
 
@@ -38,14 +41,14 @@ class Look:
         In pixels.
     seen : tuple of (Sighting or None)
         One entry a board of the target.
-    remarks : tuple of str
-        What a person can see that is wrong, or why a board was not found.
+    remarks : tuple of (tuple of str)
+        One entry a board: what a person can see that is wrong with it, or why it was not found.
     """
 
     file: Path
     size: tuple[int, int]
     seen: tuple[Sighting | None, ...]
-    remarks: tuple[str, ...]
+    remarks: tuple[tuple[str, ...], ...]
 
 
 def default_folder() -> Path:
@@ -100,20 +103,20 @@ class SightingCache:
             # By way of memory: np.load leaves a file open that it cannot read.
             with np.load(BytesIO(entry.read_bytes()), allow_pickle=False) as arrays:
                 seen = tuple(_sighting(arrays, number) for number in range(len(self._target.boards)))
-                size, remarks = arrays["size"], arrays["remarks"]
-                return Look(file=file, size=(int(size[0]), int(size[1])), seen=seen, remarks=tuple(map(str, remarks)))
+                remarks = tuple(tuple(map(str, arrays[f"remarks{number}"])) for number in range(len(seen)))
+                size = arrays["size"]
+                return Look(file=file, size=(int(size[0]), int(size[1])), seen=seen, remarks=remarks)
         except (OSError, ValueError, KeyError, EOFError, zipfile.BadZipFile):
             return None  # damaged: it is looked at again, and written anew
 
     def _found(self, file: Path, data: bytes, key: str) -> Look:
         image = decode_image(file, data)
         seen = self._target.find(image)
-        remarks: list[str] = []
-        for board, sighting in zip(self._target.boards, seen, strict=True):
-            remarks += (
-                [explain_missing(image, board)] if sighting is None else inspect(image, sighting, board).complaints
-            )
-        look = Look(file=file, size=(image.shape[1], image.shape[0]), seen=seen, remarks=tuple(remarks))
+        remarks = tuple(
+            (explain_missing(image, board),) if sighting is None else inspect(image, sighting, board).complaints
+            for board, sighting in zip(self._target.boards, seen, strict=True)
+        )
+        look = Look(file=file, size=(image.shape[1], image.shape[0]), seen=seen, remarks=remarks)
         entry = self._entry(key)
         if entry is not None:
             _remember(entry, look)
@@ -127,7 +130,10 @@ def _sighting(arrays: np.lib.npyio.NpzFile, number: int) -> Sighting | None:
 
 
 def _remember(entry: Path, look: Look) -> None:
-    arrays = {"size": np.array(look.size), "remarks": np.array(look.remarks, dtype=np.str_)}
+    arrays: dict[str, NDArray[Any]] = {
+        f"remarks{number}": np.array(of_board, np.str_) for number, of_board in enumerate(look.remarks)
+    }
+    arrays["size"] = np.array(look.size)
     for number, sighting in enumerate(look.seen):
         if sighting is not None:
             arrays |= {f"ids{number}": sighting.ids, f"pixels{number}": sighting.pixels}

@@ -32,8 +32,7 @@ def pictured(
     return [replace(s, pixels=s.pixels + rng.normal(0, noise_px, s.pixels.shape)) for s in seen], state
 
 
-@pytest.mark.parametrize("camera", [0, 1])
-@pytest.mark.parametrize(("change", "first"), [(0.01, 6), (-0.005, 9)])
+@pytest.mark.parametrize(("camera", "change", "first"), [(0, 0.01, 6), (1, -0.005, 9)])
 def test_a_focal_length_that_changes_between_views_is_told_with_camera_view_and_size(
     camera: int, change: float, first: int
 ) -> None:
@@ -57,9 +56,9 @@ def test_the_calibration_warns_of_it_though_it_sets_views_aside() -> None:
     assert any(f"from b{view} on" in told for view in (8, 9, 10))
 
 
-@pytest.mark.parametrize("seed", range(3))
+@pytest.mark.parametrize("seed", range(2))
 def test_noise_alone_is_no_change(seed: int) -> None:
-    seen, state = pictured(seed=100 + seed, noise_px=(0.1, 0.2, 0.3)[seed % 3])
+    seen, state = pictured(seed=100 + seed, noise_px=(0.1, 0.3)[seed])
 
     assert focal_jump(seen, refine(seen, state)) is None
 

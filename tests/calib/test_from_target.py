@@ -238,7 +238,9 @@ def test_a_lens_that_folds_where_corners_were_seen_is_refused_with_the_remedy() 
     inside, outside = np.array([[320.0, 240.0], [580.0, 240.0]]), np.array([[320.0, 240.0], [600.0, 240.0]])
 
     refuse_folding_lens("A", folding, [inside])
-    with pytest.raises(CalibrationError, match=r"not one to one where 50.0% of its corners .* fewer coefficients"):
+    with pytest.raises(
+        CalibrationError, match=r"not one to one in [1-9][0-9.]*% of where its corners .* fewer coefficients"
+    ):
         refuse_folding_lens("A", folding, [outside])
 
 

@@ -11,7 +11,7 @@ from skewline.calib import CalibrationError, Camera, Rig
 from skewline.calib.from_target import View, calibrate_pair
 from skewline.calib.lens_choice import choose_lens
 from skewline.calib.one_camera import alone_in_order
-from skewline.calib.set_aside import outlying
+from skewline.calib.set_aside import limit_px, most_aside, worst_over
 from skewline.calib.targets import Target
 
 TARGET = Target((BOARD,))
@@ -147,12 +147,13 @@ def test_a_board_of_which_too_little_was_seen_is_set_aside(views: Sequence[View]
 
 def test_the_rule_of_setting_aside_takes_the_worst_and_leaves_enough() -> None:
     like = np.array([0.20, 0.21, 0.19, 0.22, 0.18, 0.20, 0.21, 0.19, 0.20, 0.20])
-    bad, limit = outlying(np.array([*like[:6], 0.9, 0.8, 0.7, 0.6]), fewest=3)
+    mixed = np.array([*like[:6], 0.9, 0.8, 0.7, 0.6])
+    bad = worst_over(mixed / limit_px(mixed), most=most_aside(10, fewest=3))
 
-    assert not outlying(like, fewest=3)[0].any()
-    assert limit >= 0.4
+    assert (like < limit_px(like)).all()
+    assert limit_px(mixed) >= 0.4
     assert np.flatnonzero(bad).tolist() == [6, 7, 8], "three of ten and no more"
-    assert not outlying(np.array([0.1, 0.1, 5.0]), fewest=3)[0].any()
+    assert most_aside(3, fewest=3) == 0
 
 
 def test_views_that_are_all_parallel_are_refused_since_they_leave_the_focal_length_open() -> None:

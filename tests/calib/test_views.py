@@ -10,7 +10,8 @@ from skewline.calib import CalibrationError
 from skewline.calib.chessboard import Chessboard
 from skewline.calib.exif import orientation
 from skewline.calib.images import find_images, read_image
-from skewline.calib.views import BLURRED_PX, explain_missing, inspect, pair_files
+from skewline.calib.missing import explain_missing
+from skewline.calib.views import BLURRED_PX, inspect, pair_files
 
 DATA = Path(__file__).parent.parent / "data" / "chessboard-pairs"
 BOARD = Chessboard(columns=9, rows=6, square_m=0.03)

@@ -7,6 +7,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import cv2
 import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
@@ -117,3 +118,50 @@ def test_a_volume_that_is_none_is_refused(folder: Path, capsys: Any) -> None:
     assert main(["calibrate", *files, *words, "--near-m", "2", "--far-m", "1"]) == 2
     assert "expected 0 < near < far" in capsys.readouterr().err
     assert not (folder / "bench.rig.json").exists()
+
+
+def test_a_scaled_print_is_refused_before_anything_is_written(folder: Path, capsys: Any) -> None:
+    (folder / "bench.rig.json").write_bytes(b"the rig of yesterday")
+    files = ["--a", str(folder / "left*.jpg"), "--b", str(folder / "right*.jpg")]
+    words = ["--target", "chessboard 9x6 30mm", "-o", str(folder / "bench.rig.json")]
+    more = ["--report", str(folder / "report.html"), "--cache", str(folder / "cache")]
+
+    assert main(["calibrate", *files, *words, *more, "--measured-board-mm", "291"]) == 2
+
+    said = " ".join(capsys.readouterr().err.split())
+    assert "291 mm, 0.9700 times the 300 mm" in said
+    assert '--target "chessboard 9x6 29.1mm"' in said
+    assert (folder / "bench.rig.json").read_bytes() == b"the rig of yesterday"
+    assert not (folder / "report.html").exists()
+    assert not (folder / "cache").exists()
+
+
+def test_a_print_that_is_true_to_its_name_is_calibrated(calibrate: Callable[..., dict[str, Any]]) -> None:
+    assert calibrate("--measured-board-mm", "300.5")["common_views"] == 6
+
+
+@pytest.mark.parametrize("option", ["--measured-board-mm", "--measured-baseline-mm"])
+@pytest.mark.parametrize("length", ["0", "-3", "nan", "inf", "3cm"])
+def test_a_length_that_is_none_is_refused(folder: Path, capsys: Any, option: str, length: str) -> None:
+    words = ["--a", "a*", "--b", "b*", "--target", "chessboard 9x6 30mm", "-o", str(folder / "bench.rig.json")]
+
+    with pytest.raises(SystemExit) as ended:
+        main(["calibrate", *words, f"{option}={length}"])
+
+    assert ended.value.code == 2
+    assert f"{length}; expected a length above 0 in millimetres" in capsys.readouterr().err
+
+
+def test_a_picture_of_the_other_camera_s_size_is_named_with_both_sizes(folder: Path, capsys: Any) -> None:
+    for file in folder.glob("right*.jpg"):
+        cv2.imwrite(str(file), cv2.imread(str(file))[:400])
+    (folder / "left01.jpg").rename(folder / "kept")
+    (folder / "right01.jpg").rename(folder / "left01.jpg")
+    (folder / "kept").rename(folder / "right01.jpg")
+    files = ["--a", str(folder / "left*.jpg"), "--b", str(folder / "right*.jpg")]
+
+    assert main(["calibrate", *files, "--target", "chessboard 9x6 30mm", "-o", str(folder / "bench.rig.json")]) == 2
+    said = capsys.readouterr().err
+    assert "left01.jpg is 640x400 pixels" in said
+    assert "640x480" in said
+    assert "it has the size of camera B's; move it there" in said

@@ -86,14 +86,27 @@ def blank_all_of_b(folder: Path) -> None:
     [
         (lose_an_image, {}, ["4 images of camera A and 3 of camera B", "expected as many"]),
         (break_an_image, {}, ["right04.jpg", "no whole image"]),
+        (None, {"target": "chessboard 10x7 30mm"}, ["a chessboard of 9x6 inner corners is seen, not 10x7"]),
         (shrink_an_image, {}, ["right04.jpg is 320x240", "640x480", "expected one size"]),
         (blank_all_of_b, {}, ["found in no view of 4 for camera B", "inner corners, not squares"]),
         (None, {"target": "chessboard 12x9 30mm"}, ["found in no view of 4 for camera A"]),
+        (None, {"target": "chessboard 8x6 30mm"}, ["only a part of the board", "9x6 inner corners", "not squares"]),
         (None, {"target": "dotted thing"}, ["'dotted thing'", 'such as "chessboard 9x6 30mm"']),
         (None, {"a": "nothing*.jpg"}, ["nothing*.jpg", "matches no file"]),
         (None, {"b": "left*.jpg"}, ["left01.jpg is given for both cameras"]),
     ],
-    ids=["count", "broken", "size", "blank", "wrong-board", "no-target", "no-file", "same-files"],
+    ids=[
+        "count",
+        "broken",
+        "squares",
+        "size",
+        "blank",
+        "wrong-board",
+        "part-of-board",
+        "no-target",
+        "no-file",
+        "same-files",
+    ],
 )
 def test_bad_input_ends_with_status_2_and_its_remedy_and_leaves_the_old_rig(
     calibrate: Callable[..., int],
@@ -113,6 +126,20 @@ def test_bad_input_ends_with_status_2_and_its_remedy_and_leaves_the_old_rig(
     assert all(word in said for word in words), said
     assert "Traceback" not in said
     assert (folder / "bench.rig.json").read_text() == "the rig of yesterday"
+
+
+def test_why_a_board_was_missed_is_said_once_to_a_person_and_stands_in_the_figures(
+    calibrate: Callable[..., int], folder: Path, capsys: Any
+) -> None:
+    image = cv2.imread(str(folder / "right04.jpg"), cv2.IMREAD_GRAYSCALE)
+    out = cv2.warpAffine(image, np.array([[1.0, 0, 450], [0, 1, 0]]), (640, 480))  # the board's middle to the border
+    cv2.imwrite(str(folder / "right04.jpg"), out)
+
+    assert calibrate("--json") == 0
+    reason = json.loads(capsys.readouterr().out)["set_aside"]["right04.jpg"]
+    assert reason.startswith("board not found: cut off at the right (")
+    assert calibrate() == 0
+    assert capsys.readouterr().out.count("cut off at the right") == 1
 
 
 def test_a_rig_that_cannot_be_saved_is_bad_input(folder: Path, capsys: Any) -> None:

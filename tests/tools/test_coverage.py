@@ -70,7 +70,7 @@ def stage() -> coverage.Stage:
 
 @pytest.fixture(scope="module")
 def result(stage: coverage.Stage) -> CalibrationResult:
-    return coverage.calibrate(stage, np.random.default_rng(1), views=10)
+    return coverage.calibrate(stage, np.random.default_rng(1), views=6)
 
 
 def test_a_trial_s_errors_are_in_the_order_of_its_standard_deviations(stage, result: CalibrationResult) -> None:
@@ -105,7 +105,7 @@ def test_shares_are_counted_parameter_by_parameter() -> None:
 
 
 def test_the_command_prints_shares_of_trials_on_processes_of_their_own(capsys: Any) -> None:
-    assert coverage.main(["--trials", "2", "--views", "6", "--json"]) == 0
+    assert coverage.main(["--trials", "2", "--views", "4", "--json"]) == 0
 
     figures = json.loads(capsys.readouterr().out)
     assert figures["trials"] == 2

@@ -41,7 +41,7 @@ def test_a_second_look_gives_the_same_without_looking(tmp_path: Path, finds: lis
     assert second.seen[0] is not None
     assert np.array_equal(first.seen[0].pixels, second.seen[0].pixels)
     assert np.array_equal(first.seen[0].ids, second.seen[0].ids)
-    assert first.remarks == second.remarks == ()
+    assert first.remarks == second.remarks == ((),)
 
 
 def test_what_was_not_found_is_remembered_too_with_its_reason(tmp_path: Path, finds: list[int]) -> None:
@@ -54,7 +54,7 @@ def test_what_was_not_found_is_remembered_too_with_its_reason(tmp_path: Path, fi
     assert len(finds) == 1
     assert [look.seen for look in looks] == [(None,), (None,)]
     assert looks[0].remarks == looks[1].remarks
-    assert "grey levels in the whole picture" in looks[1].remarks[0]
+    assert "grey levels in the whole picture" in looks[1].remarks[0][0]
 
 
 def test_content_counts_not_names_and_another_target_or_picture_is_looked_at_anew(

@@ -18,11 +18,12 @@ from ...calib.compare import compare_rigs, comparison_figures, comparison_text
 from ...calib.from_target import View, calibrate_pair
 from ...calib.images import grey_8_bit, read_image
 from ...calib.one_camera import LENSES
+from ...calib.printed_size import refuse_scaled_print
 from ...calib.report import write_report
 from ...calib.result import CalibrationResult, CameraFit
 from ...calib.targets import Target, parse_target
 from ...calib.views import PairBy
-from ..calibration_text import print_remarks, print_result, rotation_deg
+from ..calibration_text import print_result, rotation_deg
 from ..calibration_views import Looked, look_at_files
 from ..live_calibration import LiveSession, Solve, TakenPair, parse_goal
 from ..live_driver import depth_sigma_at, drive
@@ -76,7 +77,13 @@ def configure(parser: argparse.ArgumentParser) -> None:
         "--hold-out", type=_share, default=0.0, metavar="SHARE", help="share of pairs kept out of the solve"
     )
     parser.add_argument(
-        "--measured-baseline-mm", type=float, metavar="MM", help="a measured baseline, to check scale by"
+        "--measured-baseline-mm", type=_length, metavar="MM", help="a measured baseline, to check scale by"
+    )
+    parser.add_argument(
+        "--measured-board-mm",
+        type=_length,
+        metavar="MM",
+        help="the printed board's length that its page names first; refused where the target's name says another",
     )
     parser.add_argument("--cache", type=Path, default=default_folder(), metavar="DIR", help="where findings are kept")
     parser.add_argument("--no-cache", action="store_true", help="look at every image anew and keep nothing")
@@ -94,6 +101,8 @@ def configure(parser: argparse.ArgumentParser) -> None:
 def run(arguments: argparse.Namespace) -> int:
     """Calibrate and save; nothing is written unless all went well."""
     target = parse_target(arguments.target)
+    if arguments.measured_board_mm is not None:
+        refuse_scaled_print(target, arguments.measured_board_mm / 1e3)
     options = _solver_options(arguments)
 
     def solve(views: Sequence[View], size_a: tuple[int, int], size_b: tuple[int, int]) -> CalibrationResult:
@@ -107,8 +116,6 @@ def run(arguments: argparse.Namespace) -> int:
     looked = look_at_files(target, arguments.a, arguments.b, pair_by=arguments.pair_by, cache=cache)
     result = solve(looked.views, looked.size_a, looked.size_b)
     _finish(arguments, target, result, len(looked.views), lambda: _pictures(looked, result))
-    if not arguments.json:
-        print_remarks(looked.looks, {aside.name for aside in result.set_aside})
     return 0
 
 
@@ -202,6 +209,16 @@ def _share(text: str) -> float:
     if not 0 <= share <= 0.5:
         raise argparse.ArgumentTypeError(f"{text}; expected a share from 0 to 0.5, such as 0.2")
     return share
+
+
+def _length(text: str) -> float:
+    try:
+        length = float(text)
+    except ValueError:
+        length = -1.0
+    if not 0 < length < float("inf"):
+        raise argparse.ArgumentTypeError(f"{text}; expected a length above 0 in millimetres, such as 99.8")
+    return length
 
 
 def _notes(target: Target, result: CalibrationResult, views: int) -> dict[str, Any]:

@@ -132,7 +132,7 @@ def _within_2_sigma(pose: ScenePose, cell: Cell, points: FloatArray) -> bool:
     nearest = points[np.argmin(np.linalg.norm(points - middle, axis=1))][None]
     off = abs(float(_depth_ratio(pose.stages[-1], cell.rig, nearest)[0]) - 1)
     saying = depth_saying(pose.rig, middle[2] / cell.rig.baseline_m)
-    return off <= 2 * saying.sigma / saying.distance
+    return bool(off <= 2 * saying.sigma / saying.distance)
 
 
 def solve_rigs(count: int, size: tuple[int, int] = SIZE) -> list[Row]:

@@ -139,7 +139,8 @@ def main(arguments: list[str]) -> int:
     verb, rest = arguments[0], arguments[1:]
     ensure(EXTRAS.get(verb, FOR_USERS))
     if verb == "test":
-        return subprocess.call([str(PYTHON), "-m", "pytest", *rest], cwd=ROOT)
+        shared = rest or ["-n", "2", "--dist", "loadfile"]  # the whole suite in two processes, a file in one of them
+        return subprocess.call([str(PYTHON), "-m", "pytest", *shared], cwd=ROOT)
     if verb == "lint":
         return lint()
     return subprocess.call([str(PYTHON), "-m", "skewline.tools.cli", verb, *rest])

@@ -91,7 +91,7 @@ def blank_all_of_b(folder: Path) -> None:
         (None, {"target": "chessboard 12x9 30mm"}, ["found in no view of 4 for camera A"]),
         (None, {"target": "dotted thing"}, ["'dotted thing'", 'such as "chessboard 9x6 30mm"']),
         (None, {"a": "nothing*.jpg"}, ["nothing*.jpg", "matches no file"]),
-        (None, {"b": "left*.jpg"}, ["left01.jpg is given for both cameras"]),
+        (None, {"b": "left*.jpg"}, ["left01.jpg is given for cameras A and B"]),
     ],
     ids=["count", "broken", "size", "blank", "wrong-board", "no-target", "no-file", "same-files"],
 )

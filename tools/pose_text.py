@@ -11,12 +11,15 @@ from rich.console import Console
 from rich.table import Table
 from scipy.spatial.transform import Rotation
 
-from ..calib import Rig
+from ..calib import CalibrationError, Rig
 from ..calib.camera import FloatArray
 from ..calib.from_scene import ScenePose, Stage
+from ..calib.pose_points import distances_of, pose_points
 from ..calib.pose_words import DepthSaying, depth_saying
 from ..calib.scale import Scaled
 from .calibration_text import rotation_deg
+
+BASE_FRAME_KEPT = "the place in the robot's base frame is kept as it was: it holds only where camera A has not moved"
 
 
 def print_pose(
@@ -37,7 +40,6 @@ def pose_figures(
     rig: Rig, pose: ScenePose, scaled: Scaled | None, known: Rig | None, warnings: Sequence[str]
 ) -> dict[str, Any]:
     """Give all figures as plain values."""
-    saying = _saying(rig, pose)
     moved = None if known is None else _moved_deg(known, rig)
     return {
         "R": rig.R.tolist(),
@@ -60,13 +62,7 @@ def pose_figures(
         "matches": len(pose.matches),
         "inliers": int(pose.inliers.sum()),
         "relatedness": pose.settled.relatedness,
-        "depth": {
-            "distance": saying.distance,
-            "sigma": saying.sigma,
-            "unit": "m" if saying.metric else "baselines",
-            "shares": saying.shares,
-            "words": str(saying),
-        },
+        "depth": _depth_figures(_saying(rig, pose)),
         "from_given_rig_deg": None if moved is None else {"rotation": moved[0], "direction_of_t": moved[1]},
         "lengths": [] if scaled is None else [vars(length) for length in scaled.lengths],
         "warnings": list(warnings),
@@ -104,17 +100,31 @@ def warnings_of(
             for length in scaled.doubtful
         ]
     if known is not None and known.T_base_a is not None:
-        found.append(
-            "the place in the robot's base frame is kept as it was: it holds only where camera A has not moved"
-        )
+        found.append(BASE_FRAME_KEPT)
     return tuple(found)
 
 
-def _saying(rig: Rig, pose: ScenePose) -> DepthSaying:
-    """Say what the pose does to depth at the middle distance of the points it rests on."""
-    misses, kept = pose.settled.misses[-1], pose.kept(-1)
-    distance = float(np.median(1 / misses.inverse_depths[kept]))
-    return depth_saying(rig, distance * rig.baseline_m)
+def _saying(rig: Rig, pose: ScenePose) -> DepthSaying | str:
+    """Say what the pose does to depth at the middle distance of the points it rests on, or why that cannot be told."""
+    distances = distances_of(pose_points(rig, pose))
+    if not len(distances):
+        return "no point of this pose lies before both cameras, so what it does to depth cannot be told"
+    try:
+        return depth_saying(rig, float(np.median(distances)))
+    except CalibrationError as exc:
+        return f"what this pose does to depth cannot be told: {exc}"
+
+
+def _depth_figures(saying: DepthSaying | str) -> dict[str, Any]:
+    if isinstance(saying, str):
+        return {"words": saying}
+    return {
+        "distance": saying.distance,
+        "sigma": saying.sigma,
+        "unit": "m" if saying.metric else "baselines",
+        "shares": saying.shares,
+        "words": str(saying),
+    }
 
 
 def _stages(pose: ScenePose) -> Table:

@@ -18,14 +18,25 @@ from ..calib.from_many import FEWEST, MOST, poses_from_many
 from ..calib.images import read_image
 from ..calib.lengths import KnownLength, kept_baseline, parse_baseline_of
 from ..calib.views import PairBy, group_files
-from .given_cameras import GivenCamera, given_cameras
+from .given_cameras import MORE_LETTERS, GivenCamera, given_cameras
 from .many_text import many_figures, print_many, warnings_of_many
+from .pose_text import BASE_FRAME_KEPT
 from .progress import Progress
 
 _EXACT_SIGMA_M = 1e-6
 """Standard deviation of a baseline that counts as exact: far below what any pose can tell."""
 
-_FOR_TWO = ("matches", "only_picked", "length", "target", "show", "report", "guess_focal")
+_FOR_TWO = (
+    "matches",
+    "only_picked",
+    "length",
+    "target",
+    "show",
+    "report",
+    "guess_focal",
+    "same_focal",
+    "accept_guessed_intrinsics",
+)
 """Options that only two cameras have."""
 
 
@@ -59,7 +70,7 @@ def run_many(arguments: argparse.Namespace) -> int:
     given = given_cameras(arguments, known)
     names = _names(given)
     wanted = [_pair_rig(text, names) for text in arguments.pair_rig]
-    _refuse_one_file_twice([arguments.output, *(pair.path for pair in wanted)])
+    _refuse_unfit_files([arguments.output, *(pair.path for pair in wanted)])
     baselines = _baselines(arguments, names, known)
     with Progress() as progress:
         poses = poses_from_many(
@@ -70,17 +81,19 @@ def run_many(arguments: argparse.Namespace) -> int:
             polished=not arguments.no_polish,
             progress=progress,
         )
-    warnings = warnings_of_many(poses)
     scale_from = [length.name for length in baselines.values()]
-    rigs = [(pair.path, _rig(poses, pair, known, scale_from, warnings)) for pair in wanted]
+    rigs = [(pair.path, _rig(poses, pair, known, scale_from)) for pair in wanted]
+    warnings = list(warnings_of_many(poses))
+    if any(rig.T_base_a is not None for _, rig in rigs):
+        warnings.append(BASE_FRAME_KEPT)
     poses.save(arguments.output)
     for path, rig in rigs:
         rig.save(path)
     saved = [str(path) for path in (arguments.output, *(path for path, _ in rigs))]
     if arguments.json:
-        print(json.dumps({**many_figures(poses), "scale_from": scale_from, "saved": saved}, indent=2))
+        print(json.dumps({**many_figures(poses, warnings), "scale_from": scale_from, "saved": saved}, indent=2))
         return 0
-    print_many(poses)
+    print_many(poses, warnings)
     for name in saved:
         print(f"saved {name}")
     return 0
@@ -102,9 +115,8 @@ def _known_rig(arguments: argparse.Namespace) -> Rig | None:
             if not getattr(arguments, option):
                 raise CalibrationError(f"further cameras without --{option}; expected --rig, --a and --b, or --cameras")
         return Rig.load(arguments.rig)
-    letters = ("a", "b", *"cdefgh")
-    named = ["rig", "keep_baseline", *letters, *(f"camera_{letter}" for letter in letters[2:])]
-    for option in named:
+    more = (option for letter in MORE_LETTERS for option in (letter, f"camera_{letter}"))
+    for option in ("rig", "keep_baseline", "a", "b", *more):
         if getattr(arguments, option):
             raise CalibrationError(
                 f"--{option.replace('_', '-')} beside --cameras; expected one or the other, since that file names all cameras"
@@ -138,13 +150,16 @@ def _refuse_unknown(pair: tuple[str, str], names: Sequence[str], what: str) -> N
         )
 
 
-def _refuse_one_file_twice(files: Sequence[Path]) -> None:
+def _refuse_unfit_files(files: Sequence[Path]) -> None:
+    """Refuse, before the long work, files that cannot all be written."""
     places = [file.resolve() for file in files]
     for number, place in enumerate(places):
         if place in places[:number]:
             raise CalibrationError(
                 f"{files[number]} is to be written twice; expected a file of its own for each result"
             )
+        if not place.parent.is_dir():
+            raise CalibrationError(f"{files[number]} lies in no folder that there is; expected one: make it first")
 
 
 def _baselines(arguments: argparse.Namespace, names: Sequence[str], known: Rig | None) -> Baselines:
@@ -169,9 +184,7 @@ def _read_sets(given: Sequence[GivenCamera], by: PairBy) -> list[dict[str, NDArr
     return [{name: read_image(file) for name, file in group.items()} for group in groups]
 
 
-def _rig(
-    poses: CameraPoses, pair: PairRig, known: Rig | None, scale_from: Sequence[str], warnings: Sequence[str]
-) -> Rig:
+def _rig(poses: CameraPoses, pair: PairRig, known: Rig | None, scale_from: Sequence[str]) -> Rig:
     """Give two of the cameras as a rig that says where it comes from; A's place in the base frame stays A's."""
     edge = next((one for one in poses.edges if {one.first, one.other} == {pair.first, pair.other}), None)
     notes: dict[str, Any] = {
@@ -181,7 +194,7 @@ def _rig(
         "points": 0 if edge is None else edge.matches,
         "noise_px": None if edge is None else edge.noise_px,
         "scale_from": list(scale_from),
-        "warnings": list(warnings),
+        "warnings": list(poses.remarks),
     }
-    T_base_a = known.T_base_a if known is not None and pair.first == poses.names[0] else None
-    return replace(poses.rig(pair.first, pair.other), T_base_a=T_base_a, notes=notes)
+    rig = replace(poses.rig(pair.first, pair.other), notes=notes)
+    return replace(rig, T_base_a=known.T_base_a) if known is not None and pair.first == poses.names[0] else rig

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -14,16 +15,16 @@ from ..calib.camera_poses import CameraPoses
 from ..calib.epipolar import cross_matrix
 
 
-def print_many(poses: CameraPoses) -> None:
+def print_many(poses: CameraPoses, warnings: Sequence[str]) -> None:
     """Print where each camera stands, what each pair rests on, and what to look at."""
     console = Console()
     console.print(_places(poses))
     console.print(_edges(poses))
-    for warning in warnings_of_many(poses):
+    for warning in warnings:
         print(f"warning: {warning}")
 
 
-def many_figures(poses: CameraPoses) -> dict[str, Any]:
+def many_figures(poses: CameraPoses, warnings: Sequence[str]) -> dict[str, Any]:
     """Give all figures as plain values."""
     turn_sigmas, place_sigmas = _sigmas(poses)
     return {
@@ -50,7 +51,7 @@ def many_figures(poses: CameraPoses) -> dict[str, Any]:
             }
             for edge in poses.edges
         ],
-        "warnings": list(warnings_of_many(poses)),
+        "warnings": list(warnings),
     }
 
 

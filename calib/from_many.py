@@ -16,6 +16,7 @@ from .camera import Camera
 from .camera_graph import place_cameras, stars
 from .camera_poses import CameraPoses, EdgeFigures, refuse_bad_names
 from .errors import CalibrationError
+from .first_pose import first_pose
 from .known_baselines import KnownBaseline, scale_to
 from .matches import Matches
 from .polish import Polished, polish_all
@@ -40,7 +41,7 @@ def poses_from_many(
     cameras: Mapping[str, Camera],
     sets: Sequence[ImageSet],
     *,
-    find_pose: PairPoseFinder,
+    find_pose: PairPoseFinder = first_pose,
     known: Mapping[tuple[str, str], float] | None = None,
     known_sigma_m: Mapping[tuple[str, str], float] | None = None,
     polished: bool = True,
@@ -56,7 +57,7 @@ def poses_from_many(
         Pictures of one instant by the camera's name, grey or BGR, uint8 or uint16; a camera may lack in a set, and the
         scene may change between sets.
     find_pose : callable
-        Finds the pose of two cameras from matches, some of which are wrong.
+        Finds the pose of two cameras from matches, some of which are wrong; :func:`.first_pose` by default.
     known : mapping of (str, str) to float, optional
         Measured distances between the centres of two cameras, in metres.
     known_sigma_m : mapping of (str, str) to float, optional
@@ -101,7 +102,7 @@ def poses_from_matches(
     cameras: Mapping[str, Camera],
     matches: Mapping[tuple[str, str], Matches],
     *,
-    find_pose: PairPoseFinder,
+    find_pose: PairPoseFinder = first_pose,
     known: Mapping[tuple[str, str], float] | None = None,
     known_sigma_m: Mapping[tuple[str, str], float] | None = None,
 ) -> CameraPoses:

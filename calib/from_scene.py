@@ -127,9 +127,9 @@ def pose_from_scene(
     pairs : sequence of (image_a, image_b)
         Pictures of the two cameras, a pair at one instant; the scene may change between pairs.
     picks : Matches, optional
-        Picked points.
+        Picked points, or all matches where they were found before.
     features : bool
-        Whether to look for features; without, the picked points alone give the pose.
+        Whether to look for features; without, ``picks`` alone give the pose.
     polished : bool
         Whether to match thousands of places and refine on those.
     progress : callable, optional
@@ -144,7 +144,7 @@ def pose_from_scene(
         Where pictures do not have their camera's size, or the matches cannot give a pose: the message says why.
     """
     _check_sizes(a, b, pairs)
-    matches = _all_matches(pairs if features else (), picks, progress or _silent)
+    matches = find_all_matches(pairs if features else (), picks, progress)
     first = first_pose(a, b, matches)
     groups = _grouped(a, matches, first.inliers)
     settled = features_only = settle((a, b), Poses.of_pair(first.R, first.t), groups)
@@ -187,9 +187,25 @@ def _check_sizes(a: Camera, b: Camera, pairs: Sequence[ImagePair]) -> None:
                 )
 
 
-def _all_matches(pairs: Sequence[ImagePair], picks: Matches | None, progress: Progress) -> Matches:
-    """Find the features of all pairs and join the picked points to them."""
+def find_all_matches(
+    pairs: Sequence[ImagePair], picks: Matches | None = None, progress: Progress | None = None
+) -> Matches:
+    """Match the features of all pairs and join them to the picked points.
+
+    Parameters
+    ----------
+    pairs : sequence of (image_a, image_b)
+        May be empty where points are picked.
+    picks : Matches, optional
+    progress : callable, optional
+
+    Raises
+    ------
+    CalibrationError
+        Where there are neither, or a picture shows too few features.
+    """
     parts = [] if picks is None else [picks]
+    told = progress or _silent
 
     def found(number: int) -> Matches:
         return find_matches(*pairs[number], pair=number)
@@ -197,7 +213,7 @@ def _all_matches(pairs: Sequence[ImagePair], picks: Matches | None, progress: Pr
     with ThreadPoolExecutor(_WORKERS) as pool:
         for number, part in enumerate(pool.map(found, range(len(pairs)))):
             parts.append(part)
-            progress("matching features", number + 1, len(pairs))
+            told("matching features", number + 1, len(pairs))
     if not parts:
         raise CalibrationError("neither pairs of pictures nor picked points; expected one or the other")
     return Matches.join(parts)

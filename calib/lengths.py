@@ -123,6 +123,33 @@ def parse_baseline(text: str) -> KnownLength:
     return KnownLength(name="baseline", length_m=length_m, sigma_m=sigma_m)
 
 
+def parse_baseline_of(text: str) -> tuple[tuple[str, str] | None, KnownLength]:
+    """Read the distance between the centres of two of several cameras, such as ``a c 193mm`` or ``a c 193mm 0.2mm``.
+
+    Returns
+    -------
+    (str, str) or None
+        The two cameras' names; None where the text has a length alone.
+    KnownLength
+
+    Raises
+    ------
+    CalibrationError
+        Where the text is no such line, or :class:`KnownLength` refuses what it says.
+    """
+    if _ALONE.fullmatch(text.strip()):
+        return None, parse_baseline(text)
+    match = _BETWEEN.fullmatch(text.strip())
+    if not match:
+        raise CalibrationError(
+            f"baseline is {text!r}; expected the names of two cameras and a length in mm, cm or m, such as 'a c 193mm', then "
+            "its standard deviation if you know it: 'a c 193mm 0.2mm'"
+        )
+    first, second = match["first"], match["second"]
+    length_m, sigma_m = _amount(match)
+    return (first, second), KnownLength(name=f"baseline {first}-{second}", length_m=length_m, sigma_m=sigma_m)
+
+
 def _amount(match: re.Match[str]) -> tuple[float, float]:
     length_m = float(match["length"]) * _UNITS_M[match["unit"].lower()]
     if match["sigma"] is None:

@@ -142,8 +142,18 @@ def _read_only(array: NDArray[Any]) -> NDArray[Any]:
     return array
 
 
-@dataclass(frozen=True, eq=False)
-class _Features:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Features:
+    """What stands out in one image, as :func:`find_features` gives it.
+
+    Attributes
+    ----------
+    pixels : ndarray of shape (N, 2)
+        Where, in the camera's own, distorted pixels.
+    descriptions : ndarray of shape (N, 128), float32
+        What it looks like there; each of length 1.
+    """
+
     pixels: FloatArray
     descriptions: NDArray[np.float32]
 
@@ -177,7 +187,23 @@ def find_matches(
     Lowe, "Distinctive image features from scale-invariant keypoints", IJCV 60(2), 2004; square roots of descriptions
     after Arandjelovic and Zisserman, "Three things everyone should know to improve object retrieval", CVPR 2012.
     """
-    a, b = _features(image_a, "A"), _features(image_b, "B")
+    a, b = find_features(image_a, "A"), find_features(image_b, "B")
+    return match_features(a, b, image_a.shape, pair=pair, most=most, ratio=ratio)
+
+
+def match_features(
+    a: Features, b: Features, shape_a: tuple[int, ...], *, pair: int = 0, most: int = 2000, ratio: float = _RATIO
+) -> Matches:
+    """Match the features of two images, as :func:`find_matches` does.
+
+    Parameters
+    ----------
+    a, b : Features
+    shape_a : (height, width, ...)
+        Of image A.
+    pair, most, ratio
+        As for :func:`find_matches`.
+    """
     nearest_b, doubt_a = _nearest(a, b)
     nearest_a, doubt_b = _nearest(b, a)
     rows_a = np.flatnonzero(nearest_a[nearest_b] == np.arange(len(nearest_b)))
@@ -187,7 +213,7 @@ def find_matches(
     order = order[doubt[order] < ratio]
     for pixels in (a.pixels[rows_a], b.pixels[rows_b]):  # one place may have several features, each its own direction
         order = order[np.sort(np.unique(pixels[order], axis=0, return_index=True)[1])]
-    order = order[spread(a.pixels[rows_a[order]], doubt[order], image_a.shape[:2], most)]
+    order = order[spread(a.pixels[rows_a[order]], doubt[order], shape_a, most)]
     return Matches(
         pixels_a=a.pixels[rows_a[order]],
         pixels_b=b.pixels[rows_b[order]],
@@ -197,8 +223,21 @@ def find_matches(
     )
 
 
-def _features(image: NDArray[Any], camera: str) -> _Features:
-    """Find and describe features; descriptions have length 1."""
+def find_features(image: NDArray[Any], camera: str) -> Features:
+    """Find and describe what stands out in one image, spread over it.
+
+    Parameters
+    ----------
+    image : ndarray of shape (H, W) or (H, W, 3)
+        Grey or BGR, uint8 or uint16.
+    camera : str
+        The camera's letter or name, for messages.
+
+    Raises
+    ------
+    CalibrationError
+        Where the image shows too few features, or is no image.
+    """
     if image.dtype not in (np.uint8, np.uint16) or not (
         image.ndim == 2 or (image.ndim == 3 and image.shape[2] in (1, 3))
     ):
@@ -218,14 +257,15 @@ def _features(image: NDArray[Any], camera: str) -> _Features:
     kept = spread(_pixels(keypoints), -strength, image.shape[:2], _MOST_FEATURES)
     keypoints, described = sift.compute(grey, [keypoints[row] for row in kept])
     roots = np.sqrt(described.astype(np.float32))
-    return _Features(_pixels(keypoints), roots / np.maximum(np.linalg.norm(roots, axis=1, keepdims=True), 1e-6))
+    lengths = np.maximum(np.linalg.norm(roots, axis=1, keepdims=True), 1e-6)
+    return Features(pixels=_pixels(keypoints), descriptions=roots / lengths)
 
 
 def _pixels(keypoints: Sequence[cv2.KeyPoint]) -> FloatArray:
     return np.array([keypoint.pt for keypoint in keypoints]) - _DOUBLING_SHIFT_PX
 
 
-def _nearest(of: _Features, among: _Features) -> tuple[IndexArray, NDArray[np.float32]]:
+def _nearest(of: Features, among: Features) -> tuple[IndexArray, NDArray[np.float32]]:
     """Give each feature's nearest among others, and its distance over that of the second nearest."""
     found, doubt = [], []
     for start in range(0, len(of.pixels), _ROWS_AT_ONCE):

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from .camera import Camera, FloatArray
 from .camera_graph import Edge, parts
 from .errors import CalibrationError
-from .matches import BoolArray, Matches, find_matches
+from .matches import BoolArray, Features, Matches, find_features, match_features
 
 _LEAST_MATCHES = 30
 """Matches that must agree with the pose of two cameras: as many as 20 wrong ones can agree by chance."""
@@ -57,7 +57,7 @@ class Graph:
 def match_pairs(
     names: Sequence[str], sets: Sequence[Mapping[int, NDArray[Any]]], told: Progress
 ) -> tuple[dict[Pair, Matches], dict[Pair, str]]:
-    """Match the pictures of every two cameras.
+    """Match the pictures of every two cameras; the features of a picture are found once for all its partners.
 
     Parameters
     ----------
@@ -71,30 +71,36 @@ def match_pairs(
     dict of (int, int) to Matches, dict of (int, int) to str
         The matches, and for other pairs the reason why there are none.
     """
-    matches, reasons = {}, {}
     pairs = list(combinations(range(len(names)), 2))
-    for done, pair in enumerate(pairs):
-        told("finding features", done, len(pairs))
+    found: dict[Pair, list[Matches]] = {pair: [] for pair in pairs}
+    reasons: dict[Pair, str] = {}
+    for number, images in enumerate(sets):  # set by set, so that the features of one only are held at a time
+        told("matching features", number, len(sets))
+        features, faults = _features(names, images)
+        for a, b in combinations(sorted(images), 2):
+            for camera in (a, b):
+                if camera in faults:
+                    reasons.setdefault((a, b), f"set {number}: {faults[camera]}")
+            if (a, b) not in reasons:
+                found[a, b].append(match_features(features[a], features[b], images[a].shape, pair=number))
+    told("matching features", len(sets), len(sets))
+    for pair in pairs:
+        if not found[pair]:
+            reasons.setdefault(pair, "no set holds pictures of both; expected one or more")
+    return {pair: Matches.join(found[pair]) for pair in pairs if pair not in reasons}, reasons
+
+
+def _features(
+    names: Sequence[str], images: Mapping[int, NDArray[Any]]
+) -> tuple[dict[int, Features], dict[int, CalibrationError]]:
+    """Find the features of one set's pictures, and say why others have none."""
+    features, faults = {}, {}
+    for camera, image in images.items():
         try:
-            matches[pair] = _matched(names, sets, pair)
+            features[camera] = find_features(image, repr(names[camera]))
         except CalibrationError as exc:
-            reasons[pair] = str(exc)
-    told("finding features", len(pairs), len(pairs))
-    return matches, reasons
-
-
-def _matched(names: Sequence[str], sets: Sequence[Mapping[int, NDArray[Any]]], pair: Pair) -> Matches:
-    a, b = pair
-    found = []
-    for number, images in enumerate(sets):
-        if a in images and b in images:
-            try:
-                found.append(find_matches(images[a], images[b], pair=number))
-            except CalibrationError as exc:
-                raise CalibrationError(f"set {number}, A being {names[a]!r} and B {names[b]!r}: {exc}") from exc
-    if not found:
-        raise CalibrationError("no set holds pictures of both; expected one or more")
-    return Matches.join(found)
+            faults[camera] = exc
+    return features, faults
 
 
 def find_edges(

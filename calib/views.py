@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from itertools import combinations
 from pathlib import Path
 from typing import Any, Literal, get_args
 
@@ -52,21 +53,53 @@ def pair_files(
         Where one file is given for both cameras, the counts differ (by order), or a name has no number or one that
         another has too (by number).
     """
+    groups = group_files({"A": files_a, "B": files_b}, by)
+    return [(group.get("A"), group.get("B")) for group in groups]
+
+
+def group_files(files: Mapping[str, Sequence[Path]], by: PairBy = "order") -> list[dict[str, Path]]:
+    """Say which images of any number of cameras belong to one instant.
+
+    Parameters
+    ----------
+    files : mapping of str to sequence of Path
+        By the camera's letter or name.
+    by : {"order", "number"}
+        As for :func:`pair_files`; by number, an image of one instant may lack.
+
+    Returns
+    -------
+    list of dict of str to Path
+        For each instant the images by the camera's name.
+
+    Raises
+    ------
+    CalibrationError
+        As :func:`pair_files`.
+    """
     if by not in get_args(PairBy):
         raise CalibrationError(f"images paired by {by!r}; expected {' or '.join(get_args(PairBy))}")
-    if shared := set(files_a) & set(files_b):
-        raise CalibrationError(
-            f"{min(shared)} is given for both cameras; expected images of two cameras: mend the patterns"
-        )
+    for one, other in combinations(files, 2):
+        if shared := set(files[one]) & set(files[other]):
+            raise CalibrationError(
+                f"{min(shared)} is given for cameras {one} and {other}; expected images of different cameras: mend the patterns"
+            )
     if by == "number":
-        numbered_a, numbered_b = _numbered(files_a, "A"), _numbered(files_b, "B")
-        return [(numbered_a.get(n), numbered_b.get(n)) for n in sorted({*numbered_a, *numbered_b})]
-    if len(files_a) != len(files_b):
-        raise CalibrationError(
-            f"{len(files_a)} images of camera A and {len(files_b)} of camera B; expected as many of one as of the other, "
-            "in the same order: add the missing ones, narrow the patterns, or pair them by number"
-        )
-    return list(zip(files_a, files_b, strict=True))
+        numbered = {name: _numbered(some, name) for name, some in files.items()}
+        instants = sorted({number for some in numbered.values() for number in some})
+        return [{name: some[number] for name, some in numbered.items() if number in some} for number in instants]
+    _refuse_uneven(files)
+    return [dict(zip(files, group, strict=True)) for group in zip(*files.values(), strict=True)]
+
+
+def _refuse_uneven(files: Mapping[str, Sequence[Path]]) -> None:
+    first, *others = files
+    for other in others:
+        if len(files[first]) != len(files[other]):
+            raise CalibrationError(
+                f"{len(files[first])} images of camera {first} and {len(files[other])} of camera {other}; expected as many of "
+                "one as of the other, in the same order: add the missing ones, narrow the patterns, or pair them by number"
+            )
 
 
 def _numbered(files: Sequence[Path], camera: str) -> dict[int, Path]:

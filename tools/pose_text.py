@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -10,15 +11,20 @@ from rich.console import Console
 from rich.table import Table
 from scipy.spatial.transform import Rotation
 
-from ..calib import Rig
+from ..calib import CalibrationError, Rig
 from ..calib.camera import FloatArray
 from ..calib.from_scene import ScenePose, Stage
+from ..calib.pose_points import distances_of, pose_points
 from ..calib.pose_words import DepthSaying, depth_saying
 from ..calib.scale import Scaled
 from .calibration_text import rotation_deg
 
+BASE_FRAME_KEPT = "the place in the robot's base frame is kept as it was: it holds only where camera A has not moved"
 
-def print_pose(rig: Rig, pose: ScenePose, scaled: Scaled | None, known: Rig, pairs: int) -> None:
+
+def print_pose(
+    rig: Rig, pose: ScenePose, scaled: Scaled | None, known: Rig | None, pairs: int, warnings: Sequence[str]
+) -> None:
     """Print the pose, how it came about, its uncertainty and what to look at."""
     console = Console()
     console.print(_stages(pose))
@@ -26,14 +32,15 @@ def print_pose(rig: Rig, pose: ScenePose, scaled: Scaled | None, known: Rig, pai
     if scaled is not None:
         console.print(_lengths(scaled))
     print(str(_saying(rig, pose)))
-    for warning in warnings_of(pose, scaled, known):
+    for warning in warnings:
         print(f"warning: {warning}")
 
 
-def pose_figures(rig: Rig, pose: ScenePose, scaled: Scaled | None, known: Rig) -> dict[str, Any]:
+def pose_figures(
+    rig: Rig, pose: ScenePose, scaled: Scaled | None, known: Rig | None, warnings: Sequence[str]
+) -> dict[str, Any]:
     """Give all figures as plain values."""
-    saying = _saying(rig, pose)
-    turned, aside = _moved_deg(known, rig)
+    moved = None if known is None else _moved_deg(known, rig)
     return {
         "R": rig.R.tolist(),
         "t": rig.t.tolist(),
@@ -55,16 +62,10 @@ def pose_figures(rig: Rig, pose: ScenePose, scaled: Scaled | None, known: Rig) -
         "matches": len(pose.matches),
         "inliers": int(pose.inliers.sum()),
         "relatedness": pose.settled.relatedness,
-        "depth": {
-            "distance": saying.distance,
-            "sigma": saying.sigma,
-            "unit": "m" if saying.metric else "baselines",
-            "shares": saying.shares,
-            "words": str(saying),
-        },
-        "from_given_rig_deg": {"rotation": turned, "direction_of_t": aside},
+        "depth": _depth_figures(_saying(rig, pose)),
+        "from_given_rig_deg": None if moved is None else {"rotation": moved[0], "direction_of_t": moved[1]},
         "lengths": [] if scaled is None else [vars(length) for length in scaled.lengths],
-        "warnings": list(warnings_of(pose, scaled, known)),
+        "warnings": list(warnings),
         "fingerprint": rig.fingerprint,
     }
 
@@ -82,32 +83,48 @@ def pose_notes(pose: ScenePose, scaled: Scaled | None, pairs: int) -> dict[str, 
     }
 
 
-def warnings_of(pose: ScenePose, scaled: Scaled | None, known: Rig) -> tuple[str, ...]:
-    """Collect what a careful person would look at."""
+def warnings_of(
+    pose: ScenePose, scaled: Scaled | None, known: Rig | None, *, length_given: bool = False
+) -> tuple[str, ...]:
+    """Collect what a careful person would look at; of a length that was given in vain others tell."""
     found = list(pose.remarks)
-    if scaled is None:
+    if scaled is None and not length_given:
         found.append(
             "the scale is not known, so this rig gives depth in baselines and no metres: give --baseline, --keep-baseline "
             "or --matches with --length"
         )
-    else:
+    elif scaled is not None:
         found += [
             f"length {length.name} lies {abs(length.residual_sigmas or 0.0):.1f} standard deviations from what the others say "
             "(more than 3): measure it again"
             for length in scaled.doubtful
         ]
-    if known.T_base_a is not None:
-        found.append(
-            "the place in the robot's base frame is kept as it was: it holds only where camera A has not moved"
-        )
+    if known is not None and known.T_base_a is not None:
+        found.append(BASE_FRAME_KEPT)
     return tuple(found)
 
 
-def _saying(rig: Rig, pose: ScenePose) -> DepthSaying:
-    """Say what the pose does to depth at the middle distance of the points it rests on."""
-    misses, kept = pose.settled.misses[-1], pose.kept(-1)
-    distance = float(np.median(1 / misses.inverse_depths[kept]))
-    return depth_saying(rig, distance * rig.baseline_m)
+def _saying(rig: Rig, pose: ScenePose) -> DepthSaying | str:
+    """Say what the pose does to depth at the middle distance of the points it rests on, or why that cannot be told."""
+    distances = distances_of(pose_points(rig, pose))
+    if not len(distances):
+        return "no point of this pose lies before both cameras, so what it does to depth cannot be told"
+    try:
+        return depth_saying(rig, float(np.median(distances)))
+    except CalibrationError as exc:
+        return f"what this pose does to depth cannot be told: {exc}"
+
+
+def _depth_figures(saying: DepthSaying | str) -> dict[str, Any]:
+    if isinstance(saying, str):
+        return {"words": saying}
+    return {
+        "distance": saying.distance,
+        "sigma": saying.sigma,
+        "unit": "m" if saying.metric else "baselines",
+        "shares": saying.shares,
+        "words": str(saying),
+    }
 
 
 def _stages(pose: ScenePose) -> Table:
@@ -161,7 +178,7 @@ def _direction_sigma(rig: Rig) -> float:
     return float(np.sqrt(np.trace(across @ rig.covariance[3:, 3:] @ across))) / rig.baseline_m
 
 
-def _pose(rig: Rig, pose: ScenePose, known: Rig, pairs: int) -> Table:
+def _pose(rig: Rig, pose: ScenePose, known: Rig | None, pairs: int) -> Table:
     table = Table("", "", title="pose of B from A", title_justify="left", show_header=False)
     turn = rotation_deg(rig)
     sigmas = np.rad2deg(_turn_sigmas(rig))
@@ -175,8 +192,9 @@ def _pose(rig: Rig, pose: ScenePose, known: Rig, pairs: int) -> Table:
         f"{', '.join(f'{value:.4f}' for value in rig.t / rig.baseline_m)} +- {np.rad2deg(_direction_sigma(rig)):.4f} degrees",
     )
     table.add_row("points", f"{pose.stages[-1].points} in {pairs} pairs, each to {pose.noise_px:.3f} pixels")
-    turned, aside = _moved_deg(known, rig)
-    table.add_row("from the given rig", f"turned by {turned:.3f} degrees, direction of t by {aside:.3f} degrees")
+    if known is not None:
+        turned, aside = _moved_deg(known, rig)
+        table.add_row("from the given rig", f"turned by {turned:.3f} degrees, direction of t by {aside:.3f} degrees")
     return table
 
 

@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
+import cv2
 import numpy as np
 import pytest
 from camera_ring import CAMERAS, FoundPose, find_pose, true_poses, views
 from scipy.spatial.transform import Rotation
 from scipy.stats import chi2
-from skewline.calib import CalibrationError, Camera
+from skewline.calib import CalibrationError, Camera, shared_views
 from skewline.calib.camera_poses import CameraPoses
 from skewline.calib.from_many import poses_from_many, poses_from_matches
-from skewline.calib.matches import Matches
+from skewline.calib.matches import Features, Matches, find_features, find_matches
 
 THREE = dict(list(CAMERAS.items())[:3])
 CHAIN = [(0, 1), (1, 2)]
@@ -196,6 +197,31 @@ def test_cameras_whose_pictures_show_nothing_are_refused_with_the_reason() -> No
     pictures = {name: np.zeros((camera.height, camera.width), np.uint8) for name, camera in THREE.items()}
     with pytest.raises(
         CalibrationError,
-        match=r"fall into 3 parts .*share no view that gives a pose: set 0, A being 'front' .* 0 features",
+        match=r"fall into 3 parts .*share no view that gives a pose: set 0: image of camera 'front' shows 0 features",
     ):
         poses_from_many(THREE, [pictures], find_pose=find_pose)
+
+
+def test_the_features_of_a_picture_are_found_once_for_all_its_partners_and_match_as_two_pictures_alone(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    rng = np.random.default_rng(12)
+    image = cv2.GaussianBlur(rng.integers(0, 255, (240, 320), dtype=np.uint8), (0, 0), 2)
+    pictures = {0: image, 1: image[:, 20:].copy(), 2: image[15:].copy()}
+    looked_at: list[str] = []
+
+    def counted(picture: np.ndarray, camera: str) -> Features:
+        looked_at.append(camera)
+        return find_features(picture, camera)
+
+    monkeypatch.setattr(shared_views, "find_features", counted)
+
+    matches, reasons = shared_views.match_pairs("abc", [pictures, {0: image}], lambda *_: None)
+
+    assert looked_at == ["'a'", "'b'", "'c'", "'a'"]
+    assert reasons == {}
+    for (a, b), found in matches.items():
+        alone = find_matches(pictures[a], pictures[b])
+        assert len(found) > 100
+        np.testing.assert_array_equal(found.pixels_a, alone.pixels_a)
+        np.testing.assert_array_equal(found.pixels_b, alone.pixels_b)

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from made_up_result import bench_rig
 from skewline.calib import CalibrationError
-from skewline.calib.lengths import KnownLength, kept_baseline, parse_baseline, parse_length
+from skewline.calib.lengths import KnownLength, kept_baseline, parse_baseline, parse_baseline_of, parse_length
 
 
 @pytest.mark.parametrize(
@@ -90,3 +90,26 @@ def test_the_baseline_of_an_earlier_rig_is_as_sure_as_its_covariance_says_along_
 def test_the_baseline_of_a_rig_of_unknown_scale_is_no_length() -> None:
     with pytest.raises(CalibrationError, match=r"scale of old\.rig\.json is not known, so its baseline is no length"):
         kept_baseline(replace(bench_rig(), scale_known=False), "old.rig.json")
+
+
+@pytest.mark.parametrize(
+    ("text", "cameras", "length_m", "sigma_m"),
+    [
+        ("a c 193mm 0.2mm", ("a", "c"), 0.193, 0.0002),
+        ("front far-left 41.2 cm", ("front", "far-left"), 0.412, 0.000824),
+        ("193 mm 0.5 mm", None, 0.193, 0.0005),
+    ],
+)
+def test_a_baseline_of_several_cameras_is_read_with_or_without_their_names(
+    text: str, cameras: tuple[str, str] | None, length_m: float, sigma_m: float
+) -> None:
+    named, known = parse_baseline_of(text)
+
+    assert named == cameras
+    assert (known.length_m, known.sigma_m) == pytest.approx((length_m, sigma_m))
+    assert known.between is None
+
+
+def test_a_baseline_of_one_camera_alone_is_refused() -> None:
+    with pytest.raises(CalibrationError, match="expected the names of two cameras and a length"):
+        parse_baseline_of("a 193mm")

@@ -11,7 +11,7 @@ from skewline.calib.chessboard import Chessboard
 from skewline.calib.exif import orientation
 from skewline.calib.images import find_images, read_image
 from skewline.calib.missing import explain_missing
-from skewline.calib.views import BLURRED_PX, inspect, pair_files
+from skewline.calib.views import BLURRED_PX, group_files, inspect, pair_files
 
 DATA = Path(__file__).parent.parent / "data" / "chessboard-pairs"
 BOARD = Chessboard(columns=9, rows=6, square_m=0.03)
@@ -103,11 +103,23 @@ def test_images_pair_by_the_last_number_in_their_names_and_odd_ones_come_alone()
     assert pair_files(a, b, "number") == [(a[0], b[1]), (a[2], None), (None, b[2]), (a[1], b[0])]
 
 
+def test_images_of_three_cameras_meet_by_number_each_with_those_that_there_are() -> None:
+    a, b, c = paths("a1.png", "a2.png"), paths("b2.png"), paths("c1.png", "c2.png")
+
+    found = group_files({"front": a, "side": b, "far": c}, "number")
+
+    assert found == [{"front": a[0], "far": c[0]}, {"front": a[1], "side": b[0], "far": c[1]}]
+    with pytest.raises(CalibrationError, match="2 images of camera front and 1 of camera side; expected as many"):
+        group_files({"front": a, "side": b, "far": c})
+    with pytest.raises(CalibrationError, match=r"b2\.png is given for cameras side and far"):
+        group_files({"front": a, "side": b, "far": b})
+
+
 @pytest.mark.parametrize(
     ("a", "b", "by", "message"),
     [
         (["a1.png"], ["b1.png", "b2.png"], "order", r"1 images of camera A and 2 of camera B; expected as many"),
-        (["a1.png"], ["a1.png"], "order", r"a1\.png is given for both cameras"),
+        (["a1.png"], ["a1.png"], "order", r"a1\.png is given for cameras A and B"),
         (["first.png"], ["b1.png"], "number", r"first\.png of camera A has no number"),
         (["a1.png", "x01.png"], ["b1.png"], "number", r"a1\.png and x01\.png of camera A both have the number 1"),
         (["a1.png"], ["b1.png"], "time", r"paired by 'time'; expected order or number"),

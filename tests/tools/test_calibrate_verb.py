@@ -93,7 +93,7 @@ def blank_all_of_b(folder: Path) -> None:
         (None, {"target": "chessboard 8x6 30mm"}, ["only a part of the board", "9x6 inner corners", "not squares"]),
         (None, {"target": "dotted thing"}, ["'dotted thing'", 'such as "chessboard 9x6 30mm"']),
         (None, {"a": "nothing*.jpg"}, ["nothing*.jpg", "matches no file"]),
-        (None, {"b": "left*.jpg"}, ["left01.jpg is given for both cameras"]),
+        (None, {"b": "left*.jpg"}, ["left01.jpg is given for cameras A and B"]),
     ],
     ids=[
         "count",

@@ -249,7 +249,7 @@ def test_cameras_given_the_wrong_way_round_are_refused_by_their_sizes(pose: Run,
 
 
 def test_one_picture_given_for_both_cameras_is_refused(pose: Run) -> None:
-    assert "is given for both cameras" in pose(a="a0.png", b="a0.png", status=2)["message"]
+    assert "is given for cameras A and B" in pose(a="a0.png", b="a0.png", status=2)["message"]
 
 
 def test_a_length_without_picked_points_is_refused(pose: Run) -> None:

@@ -9,7 +9,8 @@ from dataclasses import replace
 from pathlib import Path
 
 from ...calib import CalibrationError, Rig
-from ...calib.from_scene import ScenePose, pose_from_scene
+from ...calib.from_scene import Progress as Told
+from ...calib.from_scene import ScenePose, find_all_matches, pose_from_scene
 from ...calib.images import find_images, grey_8_bit, read_image
 from ...calib.known_board import KnownBoard, known_board
 from ...calib.lengths import KnownLength, kept_baseline, parse_baseline, parse_length
@@ -20,10 +21,12 @@ from ...calib.rig import write_atomically
 from ...calib.scale import Scaled, scale_pose
 from ...calib.targets import parse_target
 from ...calib.views import PairBy, pair_files
+from .. import given_cameras, guessed_intrinsics, many_cameras
+from ..guessed_intrinsics import GuessedIntrinsics
 from ..pose_text import pose_figures, pose_notes, print_pose, warnings_of
 from ..progress import Progress
 
-_DESCRIPTION = "Solve where camera B stands relative to A from pictures of any scene, and save the rig."
+_DESCRIPTION = "Solve where camera B, and others, stand relative to A from pictures of any scene, and save them."
 
 _EXAMPLE = """\
 example: ten pairs of the parts on the bench; the intrinsics are those of an earlier rig, and so is the length of the
@@ -35,10 +38,19 @@ or with points picked by hand in the first pair, two of which (P and Q) lie 250 
 
   skewline pose --rig bench.rig.json --a a.png --b b.png --matches picks.csv --length "P Q 250mm" -o bench-now.rig.json
 
+or a third camera beside those of the rig; b and c are saved as a rig too:
+
+  skewline pose --rig bench.rig.json --a 'a*.png' --b 'b*.png' --c 'c*.png' --camera-c side.rig.json:b \\
+      --baseline "a c 412mm" -o bench.cameras.json --pair-rig "b c side-now.rig.json"
+
+or two cameras of one kind that nobody calibrated; a guess, with a scale that stays unknown:
+
+  skewline pose --guess-focal --same-focal --a a.png --b b.png -o guess.rig.json
+
 More pairs give a better pose: let the scene change between them, with texture at near and far distance all over both
 pictures. Without a length the rig is saved, but it says that its scale is not known, and no depth in metres comes of it.
 
-exit status: 0 when the rig was saved, 2 for bad input or a scene that cannot give the pose
+exit status: 0 when all was saved, 2 for bad input or a scene that cannot give the pose
 """
 
 
@@ -47,12 +59,20 @@ def configure(parser: argparse.ArgumentParser) -> None:
     parser.description = _DESCRIPTION
     parser.epilog = _EXAMPLE
     files = "pictures of camera {}: names or a quoted pattern"
+    parser.add_argument("--rig", type=Path, metavar="RIG", help="take both cameras' intrinsics from this rig")
+    guessed_intrinsics.add_options(parser)
+    parser.add_argument("--a", nargs="+", metavar="FILE", help=files.format("A"))
+    parser.add_argument("--b", nargs="+", metavar="FILE", help=files.format("B"))
+    given_cameras.add_options(parser)
     parser.add_argument(
-        "--rig", required=True, type=Path, metavar="RIG", help="take both cameras' intrinsics from this rig"
+        "-o",
+        "--output",
+        required=True,
+        type=Path,
+        metavar="FILE",
+        help="where to save the rig, or more than two cameras",
     )
-    parser.add_argument("--a", nargs="+", required=True, metavar="FILE", help=files.format("A"))
-    parser.add_argument("--b", nargs="+", required=True, metavar="FILE", help=files.format("B"))
-    parser.add_argument("-o", "--output", required=True, type=Path, metavar="RIG", help="where to save the rig")
+    many_cameras.add_options(parser)
     parser.add_argument(
         "--pair-by", choices=("order", "number"), default="order", help="how A's pictures meet B's (order)"
     )
@@ -67,8 +87,14 @@ def configure(parser: argparse.ArgumentParser) -> None:
         metavar="TEXT",
         help='a length between two labelled points, as "P Q 250mm" or "P Q 250mm 0.5mm" with its deviation; may be repeated',
     )
-    parser.add_argument("--baseline", metavar="LENGTH", help='the measured baseline, as "193mm" or "193mm 0.5mm"')
-    parser.add_argument("--keep-baseline", action="store_true", help="keep the length of the baseline of --rig")
+    parser.add_argument(
+        "--baseline",
+        action="append",
+        default=[],
+        metavar="TEXT",
+        help='the measured baseline, as "193mm" or "193mm 0.5mm"; of more than two cameras as "a c 193mm", may be repeated',
+    )
+    parser.add_argument("--keep-baseline", action="store_true", help="keep the baseline of A and B in --rig")
     parser.add_argument(
         "--target", metavar="TEXT", help="a target of known size, seen in pairs, to take the scale from"
     )
@@ -87,46 +113,91 @@ def configure(parser: argparse.ArgumentParser) -> None:
 
 def run(arguments: argparse.Namespace) -> int:
     """Solve and save; nothing is written unless all went well."""
-    known = Rig.load(arguments.rig)
+    if given_cameras.more_than_two(arguments):
+        return many_cameras.run_many(arguments)
+    _refuse_unfit_options(arguments)
+    known = Rig.load(arguments.rig) if arguments.rig else None
     lengths = _lengths(arguments, known)
     pairs = _read_pairs(arguments.a, arguments.b, arguments.pair_by)
-    picks = _picks(arguments, known)
+    picks = _picks(arguments, known, pairs)
     with Progress() as progress:
-        pose = pose_from_scene(
-            known.a,
-            known.b,
-            pairs,
-            picks=picks,
-            features=not arguments.only_picked,
-            polished=not (arguments.no_polish or arguments.only_picked),
-            progress=progress,
-        )
-    boards = _boards(arguments.target, pose.rig, pairs) if arguments.target else []
-    scaled = scale_pose(pose.rig, pose.picked_noise_px, pose.matches, lengths, boards) if lengths or boards else None
+        pose, guess = _solve(arguments, known, pairs, picks, progress)
+    length_given = bool(lengths or arguments.target)
+    to_scale = length_given and (guess is None or guess.accepted)
+    scaled = _scaled(pose, lengths, arguments.target, pairs) if to_scale else None
+    notes, warnings = pose_notes(pose, scaled, len(pairs)), warnings_of(pose, scaled, known, length_given=length_given)
+    if guess is not None:
+        of_guess = guess.warnings(length_given=length_given)
+        notes |= {**guess.notes(), "warnings": [*of_guess, *pose.remarks]}
+        warnings = (*of_guess, *warnings)
     rig = pose.rig if scaled is None else scaled.rig
-    rig = replace(rig, T_base_a=known.T_base_a, notes=pose_notes(pose, scaled, len(pairs)))
+    rig = replace(rig, T_base_a=None if known is None else known.T_base_a, notes=notes)
     rig.save(arguments.output)
     if arguments.show:
         _show(arguments.show, pairs, pose)
     if arguments.report:
-        _report(arguments.report, rig, pose, pairs, scaled, known)
+        _report(arguments.report, rig, pose, pairs, scaled, known, warnings)
     if arguments.json:
-        print(json.dumps({**pose_figures(rig, pose, scaled, known), "saved": str(arguments.output)}, indent=2))
+        figures = {} if guess is None else {"guess": guess.figures()}
+        figures |= pose_figures(rig, pose, scaled, known, warnings)
+        print(json.dumps({**figures, "saved": str(arguments.output)}, indent=2))
         return 0
-    print_pose(rig, pose, scaled, known, len(pairs))
+    if guess is not None:
+        guess.print()
+    print_pose(rig, pose, scaled, known, len(pairs), warnings)
     print(f"saved {arguments.output}, rig {rig.fingerprint[:12]}")
     if arguments.report:
         print(f"report: {arguments.report}")
     return 0
 
 
-def _lengths(arguments: argparse.Namespace, known: Rig) -> list[KnownLength]:
+def _refuse_unfit_options(arguments: argparse.Namespace) -> None:
+    if not (arguments.a and arguments.b):
+        raise CalibrationError("pictures of one camera or none; expected --a and --b, or --cameras with a file of them")
+    if arguments.pair_rig:
+        raise CalibrationError("--pair-rig with two cameras; expected it with more of them: -o is where their rig goes")
+    guessed_intrinsics.refuse_unfit_options(arguments)
+
+
+def _solve(
+    arguments: argparse.Namespace,
+    known: Rig | None,
+    pairs: Sequence[ImagePair],
+    picks: Matches | None,
+    progress: Told,
+) -> tuple[ScenePose, GuessedIntrinsics | None]:
+    """Solve the pose of the cameras known, or of cameras guessed from the matches that then give the pose too."""
+    features = not arguments.only_picked
+    polished = features and not arguments.no_polish
+    if known is not None:
+        a, b = known.a, known.b
+        return pose_from_scene(a, b, pairs, picks=picks, features=features, polished=polished, progress=progress), None
+    matches = find_all_matches(pairs if features else (), picks, progress)
+    same, accepted = arguments.same_focal, arguments.accept_guessed_intrinsics
+    guess = GuessedIntrinsics.of(matches, *_sizes(known, pairs), same=same, accepted=accepted)
+    a, b = guess.found.cameras
+    pose = pose_from_scene(a, b, pairs, picks=matches, features=False, polished=polished, progress=progress)
+    return pose, guess
+
+
+def _sizes(known: Rig | None, pairs: Sequence[ImagePair]) -> list[tuple[int, int]]:
+    """Give both cameras' width and height; where no rig says them, as the first pair has them."""
+    if known is not None:
+        return [known.a.size, known.b.size]
+    return [(image.shape[1], image.shape[0]) for image in pairs[0]]
+
+
+def _scaled(pose: ScenePose, lengths: Sequence[KnownLength], target: str | None, pairs: Sequence[ImagePair]) -> Scaled:
+    boards = _boards(target, pose.rig, pairs) if target else []
+    return scale_pose(pose.rig, pose.picked_noise_px, pose.matches, lengths, boards)
+
+
+def _lengths(arguments: argparse.Namespace, known: Rig | None) -> list[KnownLength]:
     lengths = [parse_length(text) for text in arguments.length]
     if lengths and not arguments.matches:
         raise CalibrationError(f"--length {arguments.length[0]!r} names points; expected --matches with their labels")
-    if arguments.baseline:
-        lengths.append(parse_baseline(arguments.baseline))
-    if arguments.keep_baseline:
+    lengths += [parse_baseline(text) for text in arguments.baseline]
+    if arguments.keep_baseline and known is not None:
         lengths.append(kept_baseline(known, arguments.rig.name))
     return lengths
 
@@ -158,17 +229,22 @@ def _read_pairs(files_a: Sequence[str], files_b: Sequence[str], by: PairBy) -> l
     return pairs
 
 
-def _picks(arguments: argparse.Namespace, known: Rig) -> Matches | None:
+def _picks(arguments: argparse.Namespace, known: Rig | None, pairs: Sequence[ImagePair]) -> Matches | None:
     if arguments.matches is None:
         if arguments.only_picked:
             raise CalibrationError("--only-picked without picked points; expected --matches with a CSV file of them")
         return None
-    sizes = [(camera.width, camera.height) for camera in (known.a, known.b)]
-    return read_picks(arguments.matches, *sizes)
+    return read_picks(arguments.matches, *_sizes(known, pairs))
 
 
 def _report(
-    path: Path, rig: Rig, pose: ScenePose, pairs: Sequence[ImagePair], scaled: Scaled | None, known: Rig
+    path: Path,
+    rig: Rig,
+    pose: ScenePose,
+    pairs: Sequence[ImagePair],
+    scaled: Scaled | None,
+    known: Rig | None,
+    warnings: Sequence[str],
 ) -> None:
     from ...calib.pose_report import write_pose_report
 
@@ -176,7 +252,6 @@ def _report(
         (length.name, length.length_m * 1e3, length.sigma_m * 1e3, length.residual_sigmas)
         for length in (() if scaled is None else scaled.lengths)
     ]
-    warnings = warnings_of(pose, scaled, known)
     grey = [(grey_8_bit(image_a), grey_8_bit(image_b)) for image_a, image_b in pairs]
     write_pose_report(path, rig, pose, grey, lengths=lengths, known=known, warnings=warnings)
 

@@ -73,6 +73,7 @@ def made_pose() -> ScenePose:
         inliers=np.arange(POINTS) >= 20,
         sightings=groups,
         settled=settled,
+        features=settled,
         other=None,
         remarks=(),
     )

@@ -25,6 +25,7 @@ def true_errors(fit: Refined) -> np.ndarray:
     return np.concatenate([np.concatenate(intrinsics) - fit.values[:18], turn, RIG.t - fit.state.t])
 
 
+@pytest.mark.timeout(400)
 def test_the_95_percent_intervals_of_all_parameters_hold_the_truth_as_often_as_they_say() -> None:
     rng = np.random.default_rng(42)
     seen, state = truth(RIG, placings(RIG, 8, seed=5))

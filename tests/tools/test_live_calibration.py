@@ -171,7 +171,7 @@ def test_a_goal_that_is_none_is_refused_with_an_example(text: str) -> None:
 
 @pytest.mark.timeout(240)
 def test_the_command_takes_views_from_a_source_advises_and_saves_the_rig(tmp_path: Path) -> None:
-    source = 'kind = "virtual"\nshow = "chessboard"\nframes = 11\nhold = 7\nrate_hz = 3.0\nloop = false\n'
+    source = 'kind = "virtual"\nshow = "chessboard"\nframes = 15\nhold = 7\nrate_hz = 3.0\nloop = false\n'
     (tmp_path / "live.toml").write_text(f"[source]\n{source}")
     words = ["calibrate", "--live", str(tmp_path / "live.toml"), "--target", "chessboard 9x6 30mm"]
     words += ["--goal", "20mm at 0.8m", "--keep", str(tmp_path / "kept"), "-o", str(tmp_path / "bench.rig.json")]

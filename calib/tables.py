@@ -5,13 +5,31 @@ from __future__ import annotations
 import difflib
 import math
 import re
+import tomllib
 from collections.abc import Mapping
+from pathlib import Path
 from typing import Any, TypeVar
 
 import msgspec
 from msgspec import Struct, inspect
 
 _Table = TypeVar("_Table", bound=Struct)
+
+
+def read_toml(path: Path, what: str, error: type[Exception]) -> dict[str, Any]:
+    """Read a TOML file; ``what`` it is stands in messages.
+
+    Raises
+    ------
+    error
+        Where the file cannot be read or is no TOML.
+    """
+    try:
+        return tomllib.loads(path.read_text(encoding="utf-8"))
+    except OSError as exc:
+        raise error(f"cannot read {path}: {exc.strerror}; expected {what} in TOML") from exc
+    except ValueError as exc:  # of TOML and of UTF-8 alike
+        raise error(f"{path} is no TOML file: {exc}; mend it there") from exc
 
 
 def checked_table(

@@ -13,7 +13,6 @@ points = "measured.csv"     # optional: the true points, beside this file
 
 from __future__ import annotations
 
-import tomllib
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Any
@@ -26,7 +25,7 @@ from .chessboard import Chessboard
 from .circles import CircleGrid
 from .errors import CalibrationError
 from .measured import load_measured
-from .tables import checked_table
+from .tables import checked_table, read_toml
 
 _Count = Annotated[int, Meta(ge=2, le=1000)]
 _Length = Annotated[float, Meta(gt=0, lt=10_000)]
@@ -94,12 +93,7 @@ def load_boards(path: Path) -> tuple[Board, ...]:
     CalibrationError
         Where the file or one that it names is missing, or a key is missing, unknown or out of range.
     """
-    try:
-        content = tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as exc:
-        raise CalibrationError(f"cannot read {path}: {exc.strerror}; expected a target file in TOML") from exc
-    except ValueError as exc:  # of TOML and of UTF-8 alike
-        raise CalibrationError(f"{path} is no TOML file: {exc}; mend it there") from exc
+    content = read_toml(path, "a target file", CalibrationError)
     try:
         tables = checked_table(content, _File, "", CalibrationError).board
         return tuple(_board(table, f"board[{i}]", path.parent) for i, table in enumerate(tables))

@@ -6,7 +6,6 @@ Every refusal names the key's path, the value given and what is allowed.
 from __future__ import annotations
 
 import math
-import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -14,7 +13,7 @@ from typing import Annotated, Any, TypeVar
 
 from msgspec import Meta, Struct
 
-from ..calib.tables import checked_table
+from ..calib.tables import checked_table, read_toml
 from .errors import ConfigError, NodeError
 from .match import MatcherName, MatchSettings
 from .sources import SourceKind
@@ -126,20 +125,11 @@ def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig
         Where the file is missing or is no TOML, or a key is missing, unknown or out of range.
     """
     path = Path(path)
-    content = _read_toml(path)
+    content = read_toml(path, "the node's configuration", ConfigError)
     try:
         return parse_config(content, kinds, path.parent)
     except ConfigError as exc:
         raise ConfigError(f"{path}: {exc}") from exc
-
-
-def _read_toml(path: Path) -> dict[str, Any]:
-    try:
-        return tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as exc:
-        raise ConfigError(f"cannot read {path}: {exc.strerror}; expected the node's configuration in TOML") from exc
-    except ValueError as exc:  # of TOML and of UTF-8 alike
-        raise ConfigError(f"{path} is no TOML file: {exc}; mend it there") from exc
 
 
 def load_source(path: str | Path, kinds: Mapping[str, SourceKind]) -> tuple[SourceKind, Struct, Path]:
@@ -163,7 +153,7 @@ def load_source(path: str | Path, kinds: Mapping[str, SourceKind]) -> tuple[Sour
         Where the file is missing or is no TOML, or a key of the table is missing, unknown or out of range.
     """
     path = Path(path)
-    content = _read_toml(path)
+    content = read_toml(path, "the node's configuration", ConfigError)
     table = content.get("source")
     try:
         name, settings = _source(table if isinstance(table, dict) else {}, kinds)

@@ -11,7 +11,6 @@ intrinsics = "bench.rig.json:a"     # camera A of that rig; also where no letter
 from __future__ import annotations
 
 import argparse
-import tomllib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -21,7 +20,7 @@ from msgspec import Meta, Struct
 
 from ..calib import CalibrationError, Camera, Rig
 from ..calib.images import find_images
-from ..calib.tables import checked_table
+from ..calib.tables import checked_table, read_toml
 
 MORE_LETTERS = "cdefgh"
 """Letters of the cameras beside A and B."""
@@ -133,12 +132,7 @@ def load_cameras(path: Path) -> list[GivenCamera]:
     CalibrationError
         Where the file or one that it names is missing, or a key is missing, unknown or out of range.
     """
-    try:
-        content = tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as exc:
-        raise CalibrationError(f"cannot read {path}: {exc.strerror}; expected a file of cameras in TOML") from exc
-    except ValueError as exc:  # of TOML and of UTF-8 alike
-        raise CalibrationError(f"{path} is no TOML file: {exc}; mend it there") from exc
+    content = read_toml(path, "a file of cameras", CalibrationError)
     try:
         tables = checked_table(content, _File, "", CalibrationError).camera
         return [_camera(table, f"camera[{i}]", path.parent) for i, table in enumerate(tables)]

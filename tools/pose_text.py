@@ -17,6 +17,7 @@ from ..calib.from_scene import ScenePose, Stage
 from ..calib.pose_points import distances_of, pose_points
 from ..calib.pose_words import DepthSaying, depth_saying
 from ..calib.scale import Scaled
+from ..calib.weakness import weakest_direction
 from .calibration_text import rotation_deg
 
 BASE_FRAME_KEPT = "the place in the robot's base frame is kept as it was: it holds only where camera A has not moved"
@@ -32,6 +33,7 @@ def print_pose(
     if scaled is not None:
         console.print(_lengths(scaled))
     print(str(_saying(rig, pose)))
+    print(f"known worst: {_weakest(pose)}")
     for warning in warnings:
         print(f"warning: {warning}")
 
@@ -62,6 +64,7 @@ def pose_figures(
         "matches": len(pose.matches),
         "inliers": int(pose.inliers.sum()),
         "relatedness": pose.settled.relatedness,
+        "known_worst": _weakest(pose),
         "depth": _depth_figures(_saying(rig, pose)),
         "from_given_rig_deg": None if moved is None else {"rotation": moved[0], "direction_of_t": moved[1]},
         "lengths": [] if scaled is None else [vars(length) for length in scaled.lengths],
@@ -102,6 +105,10 @@ def warnings_of(
     if known is not None and known.T_base_a is not None:
         found.append(BASE_FRAME_KEPT)
     return tuple(found)
+
+
+def _weakest(pose: ScenePose) -> str:
+    return weakest_direction(pose.settled.covariance, pose.rig.R, pose.rig.t)
 
 
 def _saying(rig: Rig, pose: ScenePose) -> DepthSaying | str:

@@ -1,7 +1,8 @@
 """How good a pose from the scene is, and how long it takes, on the virtual cell, where the truth is known exactly.
 
 ``python -m skewline.tools.bench.scene_pose rigs`` solves one pair of each of twenty rigs, the baseline turned all the way
-round; ``pairs`` shows the error falling with the number of pairs of one rig, and the time that each number takes.
+round; ``pairs`` shows the error falling with the number of pairs of one rig, and the time that each number takes;
+``places`` shows it falling with the number of places sought in one pair.
 """
 
 from __future__ import annotations
@@ -11,7 +12,7 @@ import json
 import sys
 import time
 from collections.abc import Iterator, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 
 import numpy as np
 from rich.console import Console
@@ -23,6 +24,8 @@ from ...calib import Rig
 from ...calib.camera import FloatArray
 from ...calib.epipolar import meet_rays
 from ...calib.from_scene import ScenePose, Stage, pose_from_scene
+from ...calib.places import choose_places
+from ...calib.polish import polish
 from ...calib.pose_words import depth_saying
 from ..cell import Cell, make_cell, render_pair, render_pairs
 
@@ -165,6 +168,31 @@ def solve_pairs(counts: Sequence[int], size: tuple[int, int] = SIZE) -> list[Row
     return found
 
 
+def solve_places(counts: Sequence[int], size: tuple[int, int] = SIZE) -> list[Row]:
+    """Polish the pose of one pair of one rig on growing numbers of places."""
+    cell = next(iter(some_cells(1, size)))
+    image_a, image_b = render_pair(cell, np.random.default_rng(0))
+    first = pose_from_scene(cell.rig.a, cell.rig.b, [(image_a, image_b)], polished=False)
+    found = []
+    for count in counts:
+        start = time.perf_counter()
+        sought = [choose_places(image_a, count)]
+        settled, places = polish(
+            cell.rig.a, cell.rig.b, [(image_a, image_b)], first.settled, first.sightings, places=sought
+        )
+        R, t = settled.poses.between(0, 1)
+        kept = int((settled.weights[0] > 0).sum())
+        pose = replace(
+            first,
+            rig=replace(first.rig, R=R, t=t, covariance=settled.covariance),
+            stages=(Stage(name="polished", R=R, t=t, points=kept, noise_px=settled.noise_px["places"]),),
+            settled=settled,
+            sightings=(places,),
+        )
+        found += rows_of(f"{count} places", pose, cell, time.perf_counter() - start)
+    return found
+
+
 def table(rows: Sequence[Row]) -> Table:
     """Lay the rows out, with the medians of each stage."""
     shown = Table(
@@ -192,12 +220,18 @@ def table(rows: Sequence[Row]) -> Table:
 def main(arguments: Sequence[str] | None = None) -> int:
     """Run from the command line."""
     parser = argparse.ArgumentParser(prog="python -m skewline.tools.bench.scene_pose", description=__doc__)
-    parser.add_argument("what", choices=("rigs", "pairs"))
+    parser.add_argument("what", choices=("rigs", "pairs", "places"))
     parser.add_argument("--count", type=int, default=20, help="rigs: how many (20)")
-    parser.add_argument("--counts", type=int, nargs="+", default=[1, 2, 5, 10], help="pairs: how many (1 2 5 10)")
+    parser.add_argument(
+        "--counts", type=int, nargs="+", default=[1, 2, 5, 10], help="pairs or places: how many (1 2 5 10)"
+    )
     parser.add_argument("--json", action="store_true", help="print the rows as JSON")
     chosen = parser.parse_args(arguments)
-    rows = solve_rigs(chosen.count) if chosen.what == "rigs" else solve_pairs(chosen.counts)
+    rows = {
+        "rigs": lambda: solve_rigs(chosen.count),
+        "pairs": lambda: solve_pairs(chosen.counts),
+        "places": lambda: solve_places(chosen.counts),
+    }[chosen.what]()
     if chosen.json:
         print(json.dumps([asdict(row) for row in rows], indent=2))
     else:

@@ -28,6 +28,9 @@ Progress = Callable[[str, int, int], None]
 PICKED = "picked points"
 _WORKERS = 2
 
+_MOST_IN_ALL, _MOST_OF_PAIR, _FEWEST_OF_PAIR = 6000, 2000, 100
+"""Features matched in all pairs together and in one: they start the pose, and what it comes to rests on the places."""
+
 _HAND_PX = 0.5
 """Error of a point picked by hand, at the least, where too few are picked to tell it (common practice, no source)."""
 
@@ -207,8 +210,10 @@ def find_all_matches(
     parts = [] if picks is None else [picks]
     told = progress or _silent
 
+    most = max(_FEWEST_OF_PAIR, min(_MOST_OF_PAIR, _MOST_IN_ALL // max(len(pairs), 1)))
+
     def found(number: int) -> Matches:
-        return find_matches(*pairs[number], pair=number)
+        return find_matches(*pairs[number], pair=number, most=most)
 
     with ThreadPoolExecutor(_WORKERS) as pool:
         for number, part in enumerate(pool.map(found, range(len(pairs)))):
@@ -225,10 +230,7 @@ def _grouped(a: Camera, matches: Matches, inliers: BoolArray) -> tuple[Sightings
     for source, which in (("features", ~matches.picked), (PICKED, matches.picked)):
         chosen = matches.chosen(which & inliers)
         if len(chosen):
-            clusters = np.zeros(len(chosen), dtype=np.intp)
-            for pair in np.unique(chosen.pair):
-                mine = chosen.pair == pair
-                clusters[mine] = picture_part(a, chosen.pixels_a[mine], int(pair))
+            clusters = picture_part(a, chosen.pixels_a, 0)
             pixels = np.stack([chosen.pixels_a, chosen.pixels_b], axis=1)
             groups.append(Sightings(cameras=(0, 1), pixels=pixels, clusters=clusters, source=source))
     return tuple(groups)

@@ -57,13 +57,18 @@ class Tracked:
     pixels_b: FloatArray
 
 
-def choose_places(image: NDArray[Any], most: int = MOST_PLACES) -> FloatArray:
-    """Choose corners of a picture (Shi and Tomasi, CVPR 1994) to match, from all of it, shape (N, 2), in pixels."""
+def choose_places(image: NDArray[Any], most: int = MOST_PLACES, *, draw: int = 0) -> FloatArray:
+    """Choose corners of a picture (Shi and Tomasi, CVPR 1994) to match, from all of it, shape (N, 2), in pixels.
+
+    Where there are more than ``most``, chance chooses, another for each ``draw``: of a scene that stands still the sharpest
+    corners are the same in every picture, and so are their errors.
+    """
     found: Any = cv2.goodFeaturesToTrack(grey_8_bit(image), MOST_PLACES, _QUALITY, _APART_PX, blockSize=_CORNER_BLOCK)
     if found is None:
         return np.zeros((0, 2))
     corners = found.reshape(-1, 2).astype(np.float64)
-    chosen: FloatArray = corners[spread(corners, np.arange(len(corners)), image.shape[:2], most)]
+    doubt = np.random.default_rng(draw).permutation(len(corners))
+    chosen: FloatArray = corners[spread(corners, doubt, image.shape[:2], most)]
     return chosen
 
 

@@ -146,7 +146,8 @@ def polish_all(
     tasks = [(edge, number) for edge in edges for number, images in enumerate(sets) if set(edge) <= set(images)]
     most = min(MOST_PLACES, _MOST_IN_ALL // max(len(tasks), 1))
     sought = places or {
-        (hub, number): choose_places(sets[number][hub], most) for hub, number in {(edge[0], n) for edge, n in tasks}
+        (hub, number): choose_places(sets[number][hub], most, draw=number)
+        for hub, number in {(edge[0], n) for edge, n in tasks}
     }
     settled, known = start, tuple(groups)
     for turn in range(rounds):

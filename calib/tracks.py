@@ -106,15 +106,15 @@ def sightings_of(cameras: Sequence[Camera], tracks: Tracks, source: str, anchor:
             which.sort(key=lambda camera: camera != anchor)
         some = tracks.chosen(index.ravel() == number)
         first = which[0]
-        # Sets are numbered apart for each camera, so that parts of two cameras' pictures are never one cluster.
-        clusters = picture_part(cameras[first], some.pixels[:, first], some.sets * len(cameras) + first)
+        # One part of a camera's picture is one cluster over all sets: what stands still errs alike in every picture.
+        clusters = picture_part(cameras[first], some.pixels[:, first], first)
         groups.append(Sightings(cameras=tuple(which), pixels=some.pixels[:, which], clusters=clusters, source=source))
     return groups
 
 
-def picture_part(camera: Camera, pixels: FloatArray, picture: int | NDArray[np.intp]) -> NDArray[np.intp]:
-    """Give one number, shape (N,), for the picture and the part of it, of 8x6, that each pixel, shape (N, 2), lies in."""
+def picture_part(camera: Camera, pixels: FloatArray, number: int) -> NDArray[np.intp]:
+    """Give one number, shape (N,), for the camera of a number and the part of its picture, of 8x6, that each pixel is in."""
     columns, rows = _CELLS
     column = np.clip(pixels[:, 0] * columns // camera.width, 0, columns - 1)
     row = np.clip(pixels[:, 1] * rows // camera.height, 0, rows - 1)
-    return (np.asarray(picture) * columns * rows + row * columns + column).astype(np.intp)
+    return (number * columns * rows + row * columns + column).astype(np.intp)

@@ -93,8 +93,8 @@ def warnings_of(
     found = list(pose.remarks)
     if scaled is None and not length_given:
         found.append(
-            "the scale is not known, so this rig gives depth in baselines and no metres: give --baseline, --keep-baseline, --target "
-            "or --matches with --length"
+            "the scale is not known, so this rig gives depth in baselines and no metres: give --baseline, --keep-baseline, "
+            "--target or --matches with --length"
         )
     elif scaled is not None:
         found += [

@@ -1,7 +1,7 @@
 """All that happens to a frame, from a pair of images to a robot program. Imports nothing of the tools."""
 
 from .engine import DepthEngine
-from .errors import ConfigError, NodeError, NoFrameError, PairError, VolumeError, WireError
+from .errors import ConfigError, NodeError, NoFrameError, PairError, SourceError, VolumeError, WireError
 from .frame import DepthFrame
 from .match import MatchSettings
 from .status import NodeStatus
@@ -17,6 +17,7 @@ __all__ = [
     "NodeError",
     "NodeStatus",
     "PairError",
+    "SourceError",
     "StatusSubscriber",
     "VolumeError",
     "WireError",

@@ -16,7 +16,11 @@ from msgspec import Meta, Struct
 from ..calib.tables import checked_table, read_toml
 from .errors import ConfigError, NodeError
 from .match import MatcherName, MatchSettings
-from .sources import SourceKind
+from .pairing import PairingSettings
+from .shot import BOTH, CameraName
+from .sources import Source, SourceKind
+from .stream import WatchConfig
+from .trust import TrustConfig
 from .wire import Packing, PixelFormat
 
 _MATCH = MatchSettings()
@@ -80,6 +84,68 @@ class _Tables(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
     source: dict[str, Any]
     match: dict[str, Any] = {}
     publish: dict[str, Any] = {}
+    pairing: dict[str, Any] = {}
+    watch: dict[str, Any] = {}
+    trust: dict[str, Any] = {}
+
+
+class _SourceTables(Struct, frozen=True, kw_only=True):
+    """What of the top level says where images come from."""
+
+    source: dict[str, Any] = {}
+    pairing: dict[str, Any] = {}
+    watch: dict[str, Any] = {}
+
+
+@dataclass(frozen=True, kw_only=True)
+class SourceChoice:
+    """One source, as a configuration names it.
+
+    Attributes
+    ----------
+    cameras : tuple of {"a", "b"}
+        Whose images it gives.
+    kind : str
+        Its name in the table of sources.
+    settings : msgspec.Struct
+        Its own settings.
+    """
+
+    cameras: tuple[CameraName, ...]
+    kind: str
+    settings: Struct
+
+
+@dataclass(frozen=True, kw_only=True)
+class SourcesConfig:
+    """Where pairs come from.
+
+    Attributes
+    ----------
+    base : Path
+        Folder of the configuration file: relative paths in it start there.
+    choices : tuple of SourceChoice
+        One source of both cameras, or one for each.
+    pairing : PairingSettings
+        How partners are found.
+    watch : WatchConfig
+        When a live camera counts as gone.
+    """
+
+    base: Path
+    choices: tuple[SourceChoice, ...]
+    pairing: PairingSettings
+    watch: WatchConfig
+
+    def make(self, kinds: Mapping[str, SourceKind]) -> list[Source]:
+        """Make the sources, without opening them.
+
+        Raises
+        ------
+        ConfigError
+            As the sources say.
+        """
+        return [kinds[choice.kind].open(choice.settings, self.base, choice.cameras) for choice in self.choices]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -88,25 +154,20 @@ class NodeConfig:
 
     Attributes
     ----------
-    base : Path
-        Folder of the configuration file: relative paths in it start there.
     rig : Path
         The rig file.
-    volume, match, publish
+    sources : SourcesConfig
+        Where pairs come from.
+    volume, match, publish, trust
         Their tables.
-    source_kind : str
-        Name of the source in the table of sources.
-    source : msgspec.Struct
-        The source's own settings.
     """
 
-    base: Path
     rig: Path
+    sources: SourcesConfig
     volume: VolumeConfig
-    source_kind: str
-    source: Struct
     match: MatchConfig
     publish: PublishConfig
+    trust: TrustConfig
 
 
 def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig:
@@ -132,34 +193,29 @@ def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig
         raise ConfigError(f"{path}: {exc}") from exc
 
 
-def load_source(path: str | Path, kinds: Mapping[str, SourceKind]) -> tuple[SourceKind, Struct, Path]:
-    """Read the ``[source]`` table alone, for those who need images before there is a rig.
+def load_sources(path: str | Path, kinds: Mapping[str, SourceKind]) -> SourcesConfig:
+    """Read what a configuration says of sources alone, for those who need images before there is a rig.
 
     Parameters
     ----------
     path : path
-        A TOML file; its other tables are not looked at.
+        A TOML file; tables other than ``[source]``, ``[pairing]`` and ``[watch]`` are not looked at.
     kinds : mapping of str to SourceKind
         The sources that ``[source] kind`` may name.
-
-    Returns
-    -------
-    kind, settings, base
-        What opens the source, with which settings, and the folder that relative paths start from.
 
     Raises
     ------
     ConfigError
-        Where the file is missing or is no TOML, or a key of the table is missing, unknown or out of range.
+        Where the file is missing or is no TOML, or a key of these tables is missing, unknown or out of range.
     """
     path = Path(path)
     content = read_toml(path, "the node's configuration", ConfigError)
-    table = content.get("source")
+    wanted = {name: content[name] for name in _SourceTables.__struct_fields__ if name in content}
     try:
-        name, settings = _source(table if isinstance(table, dict) else {}, kinds)
+        tables = _checked(wanted, _SourceTables, "")
+        return _sources(tables.source, tables.pairing, tables.watch, kinds, path.parent)
     except ConfigError as exc:
         raise ConfigError(f"{path}: {exc}") from exc
-    return kinds[name], settings, path.parent
 
 
 def parse_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], base: Path) -> NodeConfig:
@@ -176,29 +232,96 @@ def parse_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], ba
         raise ConfigError(
             f"volume.near_m is {volume.near_m:g} and volume.far_m is {volume.far_m:g}; expected near_m < far_m"
         )
-    kind, settings = _source(top.source, kinds)
     config = NodeConfig(
-        base=base,
         rig=base / top.rig,
+        sources=_sources(top.source, top.pairing, top.watch, kinds, base),
         volume=volume,
-        source_kind=kind,
-        source=settings,
         match=_match(top.match),
         publish=_checked(top.publish, PublishConfig, "publish"),
+        trust=_trust(top.trust),
     )
     _check_publish(config.publish, volume)
     return config
 
 
-def _source(table: Mapping[str, Any], kinds: Mapping[str, SourceKind]) -> tuple[str, Struct]:
-    names = ", ".join(f'"{name}"' for name in sorted(kinds))
+def _sources(
+    source: Mapping[str, Any],
+    pairing: Mapping[str, Any],
+    watch: Mapping[str, Any],
+    kinds: Mapping[str, SourceKind],
+    base: Path,
+) -> SourcesConfig:
+    """Check ``[source]``, or ``[source.a]`` and ``[source.b]``, and what belongs to them."""
+    if "kind" not in source and any(isinstance(source.get(name), dict) for name in BOTH):
+        choices = _one_for_each(source, kinds)
+    else:
+        choices = (_choice(source, "source", BOTH, kinds),)
+    return SourcesConfig(
+        base=base,
+        choices=choices,
+        pairing=_checked(pairing, PairingSettings, "pairing"),
+        watch=_watch(watch),
+    )
+
+
+def _one_for_each(source: Mapping[str, Any], kinds: Mapping[str, SourceKind]) -> tuple[SourceChoice, ...]:
+    for key in source:
+        if key not in BOTH:
+            raise ConfigError(f"source.{key} stands beside source.a and source.b; expected it inside one of them")
+    tables = {name: source.get(name) for name in BOTH}
+    for name, table in tables.items():
+        if not isinstance(table, dict):
+            raise ConfigError(f"source.{name} is {table!r}; expected a table [source.{name}] as for the other camera")
+    return tuple(_choice(table or {}, f"source.{name}", (name,), kinds) for name, table in tables.items())
+
+
+def _choice(
+    table: Mapping[str, Any], path: str, cameras: tuple[CameraName, ...], kinds: Mapping[str, SourceKind]
+) -> SourceChoice:
+    fitting = {name: kind for name, kind in kinds.items() if kind.both == (len(cameras) == len(BOTH))}
+    names = ", ".join(f'"{name}"' for name in sorted(fitting))
     if "kind" not in table:
-        raise ConfigError(f"source.kind is missing; expected one of {names}")
+        raise ConfigError(f"{path}.kind is missing; expected one of {names}{_each_hint(cameras, kinds)}")
     kind = table["kind"]
     if not isinstance(kind, str) or kind not in kinds:
-        raise ConfigError(f"source.kind is {kind!r}; expected one of {names}")
+        raise ConfigError(f"{path}.kind is {kind!r}; expected one of {names}{_each_hint(cameras, kinds)}")
+    if kind not in fitting:
+        given, wanted = (
+            ("both cameras", "[source]") if kinds[kind].both else ("one camera", "[source.a] and [source.b]")
+        )
+        raise ConfigError(f"{path}.kind is {kind!r}, which gives the images of {given}; expected it in {wanted}")
     settings = {key: value for key, value in table.items() if key != "kind"}
-    return kind, _checked(settings, kinds[kind].settings, "source", also=("kind",))
+    return SourceChoice(
+        cameras=cameras, kind=kind, settings=_checked(settings, kinds[kind].settings, path, also=("kind",))
+    )
+
+
+def _each_hint(cameras: tuple[CameraName, ...], kinds: Mapping[str, SourceKind]) -> str:
+    """Say, where a source of both cameras is sought, what each camera could have of its own."""
+    singles = sorted(name for name, kind in kinds.items() if not kind.both)
+    if len(cameras) < len(BOTH) or not singles:
+        return ""
+    return ", or tables [source.a] and [source.b], each with one of " + ", ".join(f'"{name}"' for name in singles)
+
+
+def _watch(table: Mapping[str, Any]) -> WatchConfig:
+    watch = _checked(table, WatchConfig, "watch")
+    if watch.retry_s > watch.retry_most_s:
+        raise ConfigError(
+            f"watch.retry_s is {watch.retry_s:g} and watch.retry_most_s {watch.retry_most_s:g}; "
+            "expected retry_s to be the smaller"
+        )
+    return watch
+
+
+def _trust(table: Mapping[str, Any]) -> TrustConfig:
+    trust = _checked(table, TrustConfig, "trust")
+    if trust.skew_doubtful_m > trust.skew_bad_m:
+        raise ConfigError(
+            f"trust.skew_doubtful_m is {trust.skew_doubtful_m:g} and trust.skew_bad_m {trust.skew_bad_m:g}; "
+            "expected skew_doubtful_m to be the smaller"
+        )
+    return trust
 
 
 def _match(table: Mapping[str, Any]) -> MatchConfig:

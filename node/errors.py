@@ -4,6 +4,7 @@
     anything that keeps a frame from being computed, sent or received
     ├── ``ConfigError``: the configuration is at fault; says the key's path, the value and what is allowed
     ├── ``VolumeError``: the working volume cannot be seen by both cameras of this rig
+    ├── ``SourceError``: a camera is not there, refuses, or fell away; it may come back, and the node tries again
     ├── ``PairError``: this one pair is unusable; the node counts it and goes on
     ├── ``WireError``: bytes that are no message of ours
     └── ``NoFrameError``: nothing arrived in time; the peer or the network, not the caller, is at fault
@@ -27,6 +28,10 @@ class ConfigError(NodeError):
 
 class VolumeError(NodeError):
     """The working volume cannot be covered by this rig."""
+
+
+class SourceError(NodeError):
+    """A camera or stream cannot be used now; the node tries again with growing pauses."""
 
 
 class PairError(NodeError):

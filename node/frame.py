@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .errors import UNKNOWN_SCALE, NodeError
+from .trust import GOOD, Trust
 
 Frame = Literal["view", "a", "base"]
 
@@ -40,6 +41,12 @@ class DepthFrame:
         Middle of camera A's exposure, nanoseconds since the Unix epoch; 0 where it is not known.
     skew_ns : int
         Stamp of B minus stamp of A.
+    skew_depth_error_m : float
+        What the skew makes of depth at the far distance while the scene moves at ``scene_speed_m_s``, in metres.
+    scene_speed_m_s : float
+        How fast the scene may move, as the node was told, in metres a second.
+    trust : Trust
+        What the node says of this frame; good where nothing speaks against it.
     fingerprint : str
         Fingerprint of the rig that made this depth.
     sequence : int
@@ -64,6 +71,9 @@ class DepthFrame:
     metric: bool = True
     stamp_ns: int = 0
     skew_ns: int = 0
+    skew_depth_error_m: float = 0.0
+    scene_speed_m_s: float = 0.0
+    trust: Trust = GOOD
     fingerprint: str = ""
     sequence: int = 0
     session: str = ""

@@ -1,4 +1,4 @@
-"""The running node: a thread that reads pairs, a bounded hand-over, and a loop that computes and publishes.
+"""The running node: a feed of pairs read ahead, and a loop that computes, judges and publishes.
 
 Nothing here knows how depth is computed or how images are got: both are handed in.
 """
@@ -8,28 +8,26 @@ from __future__ import annotations
 import logging
 import threading
 import time
-from collections import deque
-from collections.abc import Callable, Generator, Mapping
+from collections.abc import Callable, Mapping
 from contextlib import closing
+from dataclasses import replace
 from typing import Any, Protocol
 
 from numpy.typing import NDArray
 
 from ..calib import Rig
+from .camera_watch import CameraState
 from .config import NodeConfig
 from .engine import DepthEngine
 from .errors import UNKNOWN_SCALE, NodeError, PairError
+from .feed import Feed
 from .frame import DepthFrame
-from .pairing import LostPair, Pair
+from .hand_over import PairFeed, read_ahead
 from .publisher import Publisher
-from .sources import Source, SourceKind
+from .shot import CameraName, LostShot, Pair
+from .sources import SourceKind
 from .status import NodeStatus, Tally
-
-_QUEUED_PAIRS = 2
-"""Pairs read ahead where the source waits for the node: one is read while one is computed, and memory stays small."""
-
-_TICK_S = 0.1
-"""Longest wait before looking whether to stop."""
+from .trust import TrustConfig, judge, skew_depth_error_m, skew_reasons
 
 _STATUS_EVERY_S = 1.0
 _COMPLAIN_EVERY_S = 5.0
@@ -55,119 +53,13 @@ class Engine(Protocol):
         """Make a depth frame of one pair, or raise :class:`PairError`."""
 
 
-class HandOver:
-    """Takes pairs from the reading thread to the computing one.
-
-    Parameters
-    ----------
-    newest_only : bool
-        True: holds one pair, and a newer pushes it out. False: holds a few, and ``put`` waits for room.
-    on_drop : callable
-        Called for each pair that was pushed out.
-    """
-
-    def __init__(self, *, newest_only: bool, on_drop: Callable[[], None]) -> None:
-        self._newest_only = newest_only
-        self._on_drop = on_drop
-        self._pairs: deque[Pair] = deque()
-        self._changed = threading.Condition()
-        self._ended = False
-
-    def put(self, pair: Pair, stop: threading.Event) -> None:
-        """Hand a pair over; wait for room, unless ``stop`` is set, where the source can wait."""
-        with self._changed:
-            if self._newest_only and self._pairs:
-                self._pairs.clear()
-                self._on_drop()
-            while len(self._pairs) >= _QUEUED_PAIRS and not stop.is_set():
-                self._changed.wait(_TICK_S)
-            self._pairs.append(pair)
-            self._changed.notify_all()
-
-    def get(self, timeout_s: float) -> Pair | None:
-        """Take the oldest pair; None where none came in time."""
-        with self._changed:
-            if not self._pairs and not self._ended:
-                self._changed.wait(timeout_s)
-            pair = self._pairs.popleft() if self._pairs else None
-            self._changed.notify_all()
-            return pair
-
-    def end(self) -> None:
-        """Say that nothing more will come."""
-        with self._changed:
-            self._ended = True
-            self._changed.notify_all()
-
-    @property
-    def exhausted(self) -> bool:
-        """Whether everything was taken and nothing more will come."""
-        with self._changed:
-            return self._ended and not self._pairs
-
-
-def read_ahead(
-    source: Source,
-    stop: threading.Event,
-    on_lost: Callable[[LostPair], None],
-    *,
-    on_pair: Callable[[], None] = lambda: None,
-    on_drop: Callable[[], None] = lambda: None,
-) -> Generator[Pair | None, None, None]:
-    """Read a source in a thread of its own, and give its pairs to a slower loop; the newest where the source is live.
-
-    Parameters
-    ----------
-    source : Source
-        Opened already.
-    stop : threading.Event
-        Ends the reading; it is set when the loop leaves early.
-    on_lost : callable
-        Called from the reading thread with each pair that was lost.
-    on_pair, on_drop : callable
-        Called for each pair that came, and for each that a newer one pushed out.
-
-    Yields
-    ------
-    Pair or None
-        None where none came for a tenth of a second, so that the loop may look at other things.
-    """
-    hand_over = HandOver(newest_only=source.live, on_drop=on_drop)
-    failures: list[Exception] = []
-
-    def read() -> None:
-        try:
-            for item in source.pairs(stop):
-                if isinstance(item, LostPair):
-                    on_lost(item)
-                else:
-                    on_pair()
-                    hand_over.put(item, stop)
-        except Exception as exc:  # noqa: BLE001 - handed to the thread that waits, which raises it
-            failures.append(exc)
-        finally:
-            hand_over.end()
-
-    thread = threading.Thread(target=read, name="skewline-source", daemon=True)
-    thread.start()
-    try:
-        while not stop.is_set() and not hand_over.exhausted:
-            yield hand_over.get(_TICK_S)
-    finally:
-        if not hand_over.exhausted:
-            stop.set()
-        thread.join(timeout=0.5)
-    if failures:
-        raise failures[0]
-
-
 class Node:
-    """One source, one engine, one publisher; ``run`` drives them until the source ends or it is told to stop.
+    """One feed, one engine, one publisher; ``run`` drives them until the feed ends or it is told to stop.
 
     Parameters
     ----------
-    source : Source
-        Where pairs come from, opened already.
+    feed : PairFeed
+        Where pairs come from.
     engine : Engine
         What makes depth of them.
     publisher : Publisher
@@ -180,11 +72,13 @@ class Node:
         Where bad and lost pairs are told, at most every few seconds.
     on_status : callable, optional
         Called with each status, once a second.
+    judge_frame : callable, optional
+        Says of a frame how far it may be trusted.
     """
 
     def __init__(
         self,
-        source: Source,
+        feed: PairFeed,
         engine: Engine,
         publisher: Publisher,
         *,
@@ -192,21 +86,23 @@ class Node:
         picture: bool = False,
         log: logging.Logger,
         on_status: Callable[[NodeStatus], None] | None = None,
+        judge_frame: Callable[[DepthFrame], DepthFrame] = lambda frame: frame,
     ) -> None:
-        self._source = source
+        self._feed = feed
         self._engine = engine
         self._publisher = publisher
         self._picture = picture
         self._on_status = on_status
+        self._judge_frame = judge_frame
         self._tally = Tally(publisher.session, fingerprint)
-        self._lost_log = _RationedLog(log, "lost pair")
+        self._lost_log = _RationedLog(log, "lost")
         self._bad_log = _RationedLog(log, "bad pair")
 
     def run(self, stop: threading.Event) -> NodeStatus:
-        """Publish until the source ends or ``stop`` is set; return the figures of the whole run."""
+        """Publish until the feed ends or ``stop`` is set; return the figures of the whole run."""
         next_status_s = time.monotonic() + _STATUS_EVERY_S
         tally = self._tally
-        ahead = read_ahead(self._source, stop, self._lost, on_pair=tally.add_pair, on_drop=tally.add_dropped)
+        ahead = read_ahead(self._feed, stop, self._lost, on_pair=tally.add_pair, on_drop=tally.add_dropped)
         with closing(ahead) as pairs:  # the reading ends with the loop, however that ends
             for pair in pairs:
                 if pair is not None:
@@ -215,11 +111,12 @@ class Node:
                     next_status_s = max(next_status_s + _STATUS_EVERY_S, time.monotonic())
                     self._tell_status()
         self._tell_status()
-        return self._tally.summary()
+        return self._tally.summary(self._feed.view())
 
-    def _lost(self, lost: LostPair) -> None:
+    def _lost(self, lost: LostShot) -> None:
         self._tally.add_lost(lost.reason)
-        self._lost_log.warn(lost.detail)
+        if lost.detail:  # without one it is the daily bread of cameras that run free
+            self._lost_log.warn(lost.detail)
 
     def _process(self, pair: Pair, stop: threading.Event) -> None:
         try:
@@ -232,13 +129,13 @@ class Node:
             stop.wait(_BAD_PAIR_PAUSE_S)
             return
         start_s = time.perf_counter()
-        self._publisher.send_depth(frame)
+        self._publisher.send_depth(self._judge_frame(frame))
         stages_ms = {**frame.stages_ms, "publish": (time.perf_counter() - start_s) * 1e3}
         latency_ms = (time.time_ns() - frame.stamp_ns) / 1e6 if frame.stamp_ns else None
         self._tally.add_published(latency_ms, stages_ms)
 
     def _tell_status(self) -> None:
-        status = self._tally.status()
+        status = self._tally.status(self._feed.view())
         self._publisher.send_status(status)
         if self._on_status:
             self._on_status(status)
@@ -282,6 +179,39 @@ def depth_engine(rig: Rig, config: NodeConfig) -> Engine:
     )
 
 
+def judged(frame: DepthFrame, baseline_m: float, limits: TrustConfig) -> DepthFrame:
+    """Say of a frame how far it may be trusted."""
+    error_m = skew_depth_error_m(frame.skew_ns, limits.scene_speed_m_s, frame.far_m, baseline_m)
+    return replace(
+        frame,
+        skew_depth_error_m=error_m,
+        scene_speed_m_s=limits.scene_speed_m_s,
+        trust=judge(skew_reasons(error_m, limits)),
+    )
+
+
+def make_feed(config: NodeConfig, kinds: Mapping[str, SourceKind], rig: Rig, log: logging.Logger) -> Feed:
+    """Make the feed that the configuration asks for, of cameras as large as the rig's.
+
+    Raises
+    ------
+    ConfigError
+        As the sources say.
+    """
+
+    def tell(camera: CameraName, state: CameraState, detail: str) -> None:
+        level = logging.INFO if state in ("opening", "delivering", "ended") else logging.WARNING
+        log.log(level, "camera %s: %s%s", camera.upper(), state, f": {detail}" if detail else "")
+
+    return Feed(
+        config.sources.make(kinds),
+        config.sources.pairing,
+        config.sources.watch,
+        sizes={"a": (rig.a.width, rig.a.height), "b": (rig.b.width, rig.b.height)},
+        tell=tell,
+    )
+
+
 def run_node(
     config: NodeConfig,
     kinds: Mapping[str, SourceKind],
@@ -299,7 +229,7 @@ def run_node(
     config : NodeConfig
         From :func:`load_config`.
     kinds : mapping of str to SourceKind
-        The table that ``config.source_kind`` names an entry of.
+        The table of sources that the configuration names entries of.
     stop : threading.Event
         Set it, from a signal handler or another thread, and the node ends within a second.
     log : logging.Logger
@@ -326,19 +256,20 @@ def run_node(
     with Publisher(config.publish.depth, config.publish.status, packing=config.publish.packing) as publisher:
         if on_ready:
             on_ready(rig, publisher)
-        with kinds[config.source_kind].open(config.source, config.base) as source:
-            engine = make_engine(rig, config)
-            _await_subscriber(config.publish.wait_for_subscriber_s, publisher, stop, log)
-            node = Node(
-                source,
-                engine,
-                publisher,
-                fingerprint=rig.fingerprint,
-                picture=config.publish.picture,
-                log=log,
-                on_status=on_status,
-            )
-            summary = node.run(stop)
+        feed = make_feed(config, kinds, rig, log)
+        engine = make_engine(rig, config)
+        _await_subscriber(config.publish.wait_for_subscriber_s, publisher, stop, log)
+        node = Node(
+            feed,
+            engine,
+            publisher,
+            fingerprint=rig.fingerprint,
+            picture=config.publish.picture,
+            log=log,
+            on_status=on_status,
+            judge_frame=lambda frame: judged(frame, rig.baseline_m, config.trust),
+        )
+        summary = node.run(stop)
         publisher.close(linger_s=0.0 if stop.is_set() else _LAST_WORDS_S)
     return summary
 

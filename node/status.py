@@ -13,6 +13,8 @@ from typing import Annotated
 import numpy as np
 from msgspec import Meta, Struct
 
+from .camera_watch import CameraReport, FeedView
+
 Count = Annotated[int, Meta(ge=0, le=2**63 - 1)]
 Amount = Annotated[float, Meta(ge=0, le=1e15)]
 Text = Annotated[str, Meta(max_length=256)]
@@ -39,7 +41,7 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
     dropped_busy : int
         Good pairs dropped because the node was busy with an older one and the source does not wait.
     lost : mapping of str to int
-        Pairs that the source could not give, by reason.
+        Images that came to nothing, by reason: those that a source could not give, and those without a partner.
     bad_pairs : int
         Pairs that the engine refused (another size than the rig's, for one).
     latency_p50_ms, latency_p90_ms, latency_p99_ms : float or None
@@ -49,6 +51,10 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
         Median time of each stage of the work.
     peak_memory_mb : float or None
         Largest resident memory of the process so far, in units of 10^6 bytes; None where the host does not tell.
+    cameras : mapping of str to CameraReport
+        How cameras ``a`` and ``b`` stand.
+    clock_offset_ms, clock_offset_sigma_ms : float or None
+        B's clock minus A's, as given or estimated, and the estimate's standard deviation; None where not known.
     """
 
     session: Text
@@ -67,6 +73,9 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
     latency_p99_ms: Amount | None = None
     stages_ms: Annotated[dict[Text, Amount], Meta(max_length=256)] = {}
     peak_memory_mb: Amount | None = None
+    cameras: Annotated[dict[Text, CameraReport], Meta(max_length=16)] = {}
+    clock_offset_ms: float | None = None
+    clock_offset_sigma_ms: Amount | None = None
 
 
 class _Span:
@@ -115,7 +124,7 @@ class Tally:
                 span.paired += 1
 
     def add_lost(self, reason: str) -> None:
-        """Count a pair that the source could not give."""
+        """Count an image that came to nothing."""
         with self._lock:
             self._lost[reason] += 1
 
@@ -135,22 +144,22 @@ class Tally:
             for span in self._spans():
                 span.add_published(latency_ms, stages_ms)
 
-    def status(self) -> NodeStatus:
-        """Sum up what happened since the last call, and begin anew."""
+    def status(self, feed: FeedView | None = None) -> NodeStatus:
+        """Sum up what happened since the last call, and begin anew; ``feed`` is how the cameras stand."""
         with self._lock:
             now_s = self._clock()
             window, self._window = self._window, _Span(now_s)
-            return self._sum_up(window, now_s)
+            return self._sum_up(window, now_s, feed or FeedView())
 
-    def summary(self) -> NodeStatus:
+    def summary(self, feed: FeedView | None = None) -> NodeStatus:
         """Sum up the whole run; times look back on the last 10 000 frames at most."""
         with self._lock:
-            return self._sum_up(self._run, self._clock())
+            return self._sum_up(self._run, self._clock(), feed or FeedView())
 
     def _spans(self) -> Iterable[_Span]:
         return self._run, self._window
 
-    def _sum_up(self, span: _Span, now_s: float) -> NodeStatus:
+    def _sum_up(self, span: _Span, now_s: float, feed: FeedView) -> NodeStatus:
         length_s = max(now_s - span.since_s, 1e-9)
         p50, p90, p99 = span.percentiles_ms()
         return NodeStatus(
@@ -170,6 +179,9 @@ class Tally:
             latency_p99_ms=p99,
             stages_ms={name: float(np.median(times)) for name, times in span.stages_ms.items()},
             peak_memory_mb=peak_memory_mb(),
+            cameras=feed.cameras,
+            clock_offset_ms=feed.clock_offset_ms,
+            clock_offset_sigma_ms=feed.clock_offset_sigma_ms,
         )
 
 

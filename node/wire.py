@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from .errors import UNKNOWN_SCALE, WireError
 from .frame import DepthFrame
 from .status import NodeStatus
+from .trust import Reason, Trust, Verdict
 
 DEPTH_FORMAT = "skewline depth"
 STATUS_FORMAT = "skewline status"
@@ -64,6 +65,23 @@ class _Envelope(Struct, frozen=True, kw_only=True):
     version: int
 
 
+class _ReasonMap(Struct, frozen=True, kw_only=True):
+    """One of the reasons of ``trust``."""
+
+    name: Name
+    verdict: Verdict
+    figure: float
+    limit: float
+    unit: Name
+
+
+class _TrustMap(Struct, frozen=True, kw_only=True):
+    """The map ``trust``."""
+
+    verdict: Verdict
+    reasons: Annotated[list[_ReasonMap], Meta(max_length=64)]
+
+
 class _DepthMessage(Struct, frozen=True, kw_only=True):
     """The keys of a depth message, in the order in which we write them."""
 
@@ -89,6 +107,9 @@ class _DepthMessage(Struct, frozen=True, kw_only=True):
     depth: memoryview
     sigma: memoryview
     picture: memoryview | None = None
+    trust: _TrustMap | None = None
+    skew_depth_error: Annotated[float, Meta(ge=0, le=1e9)] = 0.0
+    scene_speed: Annotated[float, Meta(ge=0, le=1e9)] = 0.0
 
 
 def to_counts(metres: NDArray[np.float32], unit_m: float) -> NDArray[np.uint16]:
@@ -158,6 +179,9 @@ def encode_depth(frame: DepthFrame, packing: Packing | None = None) -> bytes:
         depth=_bytes_of(depth),
         sigma=_bytes_of(sigma),
         picture=None if frame.picture is None else _bytes_of(frame.picture),
+        trust=_trust_map(frame.trust),
+        skew_depth_error=float(frame.skew_depth_error_m),
+        scene_speed=float(frame.scene_speed_m_s),
     )
     return msgspec.msgpack.encode(message)
 
@@ -188,7 +212,35 @@ def decode_depth(data: bytes) -> DepthFrame:
         session=message.session,
         published_ns=message.published_ns,
         picture=None if message.picture is None else _pixels(message, "picture", np.dtype(np.uint8)).copy(),
+        trust=_trust(message.trust),
+        skew_depth_error_m=message.skew_depth_error,
+        scene_speed_m_s=message.scene_speed,
     )
+
+
+def _trust_map(trust: Trust) -> _TrustMap:
+    reasons = [
+        _ReasonMap(
+            name=reason.name,
+            verdict=reason.verdict,
+            figure=float(reason.figure),
+            limit=float(reason.limit),
+            unit=reason.unit,
+        )
+        for reason in trust.reasons
+    ]
+    return _TrustMap(verdict=trust.verdict, reasons=reasons)
+
+
+def _trust(message: _TrustMap | None) -> Trust:
+    """Read what the node says of the frame; a node that says nothing does not vouch for it."""
+    if message is None:
+        return Trust("doubtful")
+    reasons = (
+        Reason(name=reason.name, verdict=reason.verdict, figure=reason.figure, limit=reason.limit, unit=reason.unit)
+        for reason in message.reasons
+    )
+    return Trust(message.verdict, tuple(reasons))
 
 
 def encode_status(status: NodeStatus) -> bytes:

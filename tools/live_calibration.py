@@ -22,9 +22,8 @@ from ..calib.guidance import Account, StillWatch, next_view, showing_of
 from ..calib.result import CalibrationResult
 from ..calib.targets import Sighting, Target
 from ..calib.views import inspect
-from ..node.pairing import Pair
-from ..node.runner import read_ahead
-from ..node.sources import Source
+from ..node.hand_over import PairFeed, read_ahead
+from ..node.shot import Pair
 
 FEWEST_TO_SOLVE = 6
 """Pairs before the first solution: fewer leave it too loose to say anything with."""
@@ -225,26 +224,26 @@ def _distance_px(before: Sighting | None, now: Sighting) -> float:
 
 def run_live(
     session: LiveSession,
-    source: Source,
+    feed: PairFeed,
     stop: threading.Event,
     *,
     show: Callable[[list[str]], None],
     keep: Callable[[TakenPair], None] | None = None,
 ) -> bool:
-    """Drive a session until it is done, the source ends or ``stop`` is set; tell whether it was done.
+    """Drive a session until it is done, the feed ends or ``stop`` is set; tell whether it was done.
 
     Parameters
     ----------
     session : LiveSession
-    source : Source
-        Opened already.
+    feed : PairFeed
+        Where pairs come from.
     stop : threading.Event
     show : callable
         Called with the account after every pair.
     keep : callable, optional
         Called with every pair taken.
     """
-    with closing(read_ahead(source, stop, on_lost=lambda _lost: None)) as pairs:
+    with closing(read_ahead(feed, stop, on_lost=lambda _lost: None)) as pairs:
         for pair in pairs:
             if pair is not None:
                 taken = session.look(pair)

@@ -16,7 +16,10 @@ from ..calib import CalibrationError
 from ..calib.depth_error import common_view, depth_sigma_from_calibration
 from ..calib.result import CalibrationResult
 from ..calib.rig import write_atomically
-from ..node.config import load_source
+from ..node.camera_watch import CameraState
+from ..node.config import load_sources
+from ..node.feed import Feed
+from ..node.shot import CameraName
 from .live_calibration import LiveSession, TakenPair, run_live
 from .sources import SOURCES
 from .stopping import stop_on_signals
@@ -51,8 +54,9 @@ def drive(session: LiveSession, config: Path, keep: Path | None, taken: list[Tak
     CalibrationError
         Where the folder cannot be written, or the pictures change their size.
     """
-    kind, settings, base = load_source(config, SOURCES)
-    with stop_on_signals() as stop, kind.open(settings, base) as source, _display() as show:
+    sources = load_sources(config, SOURCES)
+    feed = Feed(sources.make(SOURCES), sources.pairing, sources.watch, tell=_tell)
+    with stop_on_signals() as stop, _display() as show:
         write = None if keep is None else _keeper(keep)
 
         def put_by(pair: TakenPair) -> None:
@@ -61,7 +65,7 @@ def drive(session: LiveSession, config: Path, keep: Path | None, taken: list[Tak
             if taken is not None:
                 taken.append(pair)
 
-        return run_live(session, source, stop, show=show, keep=put_by)
+        return run_live(session, feed, stop, show=show, keep=put_by)
 
 
 def _keeper(folder: Path) -> Callable[[TakenPair], None]:
@@ -79,6 +83,11 @@ def _keeper(folder: Path) -> Callable[[TakenPair], None]:
             write_atomically(folder / f"{camera}{pair.number:02d}.png", data.tobytes())
 
     return keep
+
+
+def _tell(camera: CameraName, state: CameraState, detail: str) -> None:
+    if state not in ("opening", "delivering", "ended"):
+        print(f"camera {camera.upper()}: {state}: {detail}", file=sys.stderr, flush=True)
 
 
 @contextmanager

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import itertools
 import threading
-import time
 from collections.abc import Iterator
 from pathlib import Path
 from types import TracebackType
@@ -13,7 +12,7 @@ from typing import TYPE_CHECKING, Annotated, Any, Literal, Self
 import numpy as np
 from msgspec import Meta, Struct
 
-from ..node.pairing import LostPair, Pair, StampedImage
+from ..node.shot import BOTH, CameraName, LostShot, Shot, StampedImage
 from ..node.sources import Pace
 
 if TYPE_CHECKING:
@@ -61,9 +60,20 @@ class VirtualSource:
         How many, how fast, of which cell.
     base : Path
         Not used: a rendered cell reads no files.
+    cameras : tuple of {"a", "b"}
+        Both.
     """
 
-    def __init__(self, settings: VirtualSettings, base: Path) -> None:  # noqa: ARG002 - every opener is given it
+    identity = "the virtual cell"
+    remarks: tuple[str, ...] = ()
+
+    def __init__(
+        self,
+        settings: VirtualSettings,
+        base: Path,  # noqa: ARG002 - every opener is given it
+        cameras: tuple[CameraName, ...] = BOTH,
+    ) -> None:
+        self.cameras = cameras
         self._settings = settings
 
     @property
@@ -79,17 +89,20 @@ class VirtualSource:
     ) -> None:
         pass  # images live as long as the generator that shows them
 
-    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostPair]:
-        """Give the rendered pairs in order, stamped with the moment at which their turn comes."""
+    def shots(self, stop: threading.Event) -> Iterator[Shot | LostShot]:
+        """Give the rendered images, A's and B's by turns, stamped with the moment at which their turn comes."""
         # Rendered here, in the reading thread: the node stays ready to stop meanwhile.
         images = list(_render(self._settings, stop))
+        for image in itertools.chain.from_iterable(images):
+            image.flags.writeable = False  # shown again and again
         pace = Pace(self._settings.rate_hz, stop)
-        for image_a, image_b in itertools.cycle(images) if self._settings.loop else images:
+        for pair in itertools.cycle(images) if self._settings.loop else images:
             for _ in range(self._settings.hold):
                 if not pace.wait():
                     return
-                stamp_ns = time.time_ns()
-                yield Pair(StampedImage(image_a, stamp_ns), StampedImage(image_b, stamp_ns))
+                stamp_ns = pace.now_ns()
+                for camera, image in zip(BOTH, pair, strict=True):
+                    yield Shot(camera, StampedImage(image, stamp_ns), stamp_ns)
 
 
 def _render(settings: VirtualSettings, stop: threading.Event) -> Iterator[Images]:

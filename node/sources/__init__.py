@@ -4,7 +4,7 @@ from .folder import FolderSettings, FolderSource
 from .pace import Pace
 from .protocol import Source, SourceKind
 
-BUILT_IN = {"folder": SourceKind(FolderSettings, FolderSource)}
+BUILT_IN = {"folder": SourceKind(FolderSettings, FolderSource, both=True)}
 """Sources that need nothing but the node; the command line adds its own to a copy of this table."""
 
 __all__ = ["BUILT_IN", "FolderSettings", "FolderSource", "Pace", "Source", "SourceKind"]

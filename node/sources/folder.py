@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import threading
-import time
 from collections.abc import Iterator
 from pathlib import Path
 from types import TracebackType
@@ -14,7 +13,7 @@ from msgspec import Meta, Struct
 from ...calib import CalibrationError, ImageFileError
 from ...calib.images import find_images, read_image
 from ..errors import ConfigError
-from ..pairing import LostPair, Pair, StampedImage
+from ..shot import BOTH, CameraName, LostShot, Shot, StampedImage
 from .pace import Pace
 
 _LOOP_PAUSE_S = 0.5
@@ -52,6 +51,8 @@ class FolderSource:
         Which files, at what rate.
     base : Path
         Folder that relative names start from.
+    cameras : tuple of {"a", "b"}
+        Both: the files of one camera say nothing of when the other's were taken.
 
     Raises
     ------
@@ -59,7 +60,10 @@ class FolderSource:
         Where a pattern matches no file, or A and B have different numbers of them.
     """
 
-    def __init__(self, settings: FolderSettings, base: Path) -> None:
+    remarks: tuple[str, ...] = ()
+
+    def __init__(self, settings: FolderSettings, base: Path, cameras: tuple[CameraName, ...] = BOTH) -> None:
+        self.cameras = cameras
         self._settings = settings
         files_a = _find(settings.a, base, "source.a")
         files_b = _find(settings.b, base, "source.b")
@@ -74,6 +78,7 @@ class FolderSource:
                 "expected those of two cameras: mend the patterns"
             )
         self._files = list(zip(files_a, files_b, strict=True))
+        self.identity = f"the files {files_a[0]}, {files_b[0]} and so on"
 
     @property
     def live(self) -> bool:
@@ -88,17 +93,17 @@ class FolderSource:
     ) -> None:
         pass  # files are open only while they are read
 
-    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostPair]:
-        """Give the pairs in order, once or for ever; a file that is gone or damaged makes a lost pair."""
+    def shots(self, stop: threading.Event) -> Iterator[Shot | LostShot]:
+        """Give A's and B's images by turns, once or for ever; for a file that is gone or damaged, what became of it."""
         pace = Pace(self._settings.rate_hz, stop)
         while True:
             found_any = False
             for files in self._files:
                 if not pace.wait():
                     return
-                pair = _read_pair(*files)
-                found_any = found_any or isinstance(pair, Pair)
-                yield pair
+                shots = _read_pair(*files, pace.now_ns())
+                found_any = found_any or len(shots) == len(BOTH)
+                yield from shots
             if not self._settings.loop or (not found_any and stop.wait(_LOOP_PAUSE_S)):
                 return
 
@@ -110,9 +115,12 @@ def _find(files: str | list[str], base: Path, key: str) -> list[Path]:
         raise ConfigError(f"{key} is {files!r}: {exc}") from exc
 
 
-def _read_pair(file_a: Path, file_b: Path) -> Pair | LostPair:
-    stamp_ns = time.time_ns()
-    try:
-        return Pair(StampedImage(read_image(file_a), stamp_ns), StampedImage(read_image(file_b), stamp_ns))
-    except ImageFileError as exc:
-        return LostPair(exc.reason, str(exc))
+def _read_pair(file_a: Path, file_b: Path, stamp_ns: int) -> list[Shot | LostShot]:
+    """Read both images; where one of them fails, that one's loss alone, since the other has no partner."""
+    shots: list[Shot | LostShot] = []
+    for camera, file in zip(BOTH, (file_a, file_b), strict=True):
+        try:
+            shots.append(Shot(camera, StampedImage(read_image(file), stamp_ns), stamp_ns))
+        except ImageFileError as exc:
+            return [LostShot(camera, exc.reason, str(exc))]
+    return shots

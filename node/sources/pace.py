@@ -21,9 +21,16 @@ class Pace:
         self._period_s = 0.0 if rate_hz is None else 1 / rate_hz
         self._due_s = time.monotonic()
         self._stop = stop
+        self._began_ns = time.time_ns() - time.monotonic_ns()
+        self._last_ns = 0
 
     def wait(self) -> bool:
         """Wait for the next turn; tell whether to go on."""
         stopped = self._stop.wait(max(0.0, self._due_s - time.monotonic()))
         self._due_s = max(self._due_s + self._period_s, time.monotonic())
         return not stopped
+
+    def now_ns(self) -> int:
+        """Give the time of this turn, in nanoseconds since the Unix epoch; it rises, whoever sets the clock meanwhile."""
+        self._last_ns = max(self._began_ns + time.monotonic_ns(), self._last_ns + 1)
+        return self._last_ns

@@ -1,9 +1,14 @@
-"""What a source is, and what the runner needs in order to make one by name.
+"""What a source is, and what the node needs in order to make one by name.
 
-A source owns its devices or files from ``__enter__`` to ``__exit__``; what can be told wrong before is refused when it
-is made, with :class:`ConfigError`. ``pairs`` runs in a thread of its own, checks ``stop`` at least ten times a second
-while it waits for anything, and ends when ``stop`` is set or nothing more will come. A pair that should have been there
-and is not comes as :class:`LostPair`: the node counts it and goes on.
+A source gives the images of one camera, or of both. What can be told wrong before anything is opened is refused when
+the source is made, with :class:`ConfigError`. It owns its devices or files from ``__enter__`` to ``__exit__``, and may be
+entered again after it was left: that is how the node comes back to a camera that went away. ``shots`` runs in a
+thread of its own, checks ``stop`` at least ten times a second while it waits for anything, and ends when ``stop`` is
+set or nothing more will come.
+
+A camera that is not there, cannot be used as asked, or falls away raises :class:`SourceError`, from ``__enter__`` or
+from ``shots``: the node says so, leaves the source and tries again later. An image that should have been there and is
+damaged comes as :class:`LostShot`: the node counts it and goes on.
 """
 
 from __future__ import annotations
@@ -17,15 +22,27 @@ from typing import Any, Protocol, Self
 
 from msgspec import Struct
 
-from ..pairing import LostPair, Pair
+from ..shot import CameraName, LostShot, Shot
 
 
 class Source(Protocol):
-    """Pairs of images, in the order in which they were taken."""
+    """Stamped images, each camera's in the order in which they were taken."""
+
+    @property
+    def cameras(self) -> tuple[CameraName, ...]:
+        """Whose images it gives: one camera's or both."""
 
     @property
     def live(self) -> bool:
-        """Whether pairs come at their own pace, so that the newest counts; else the source waits for the node."""
+        """Whether images come at their own pace, so that the newest counts; else the source waits for the node."""
+
+    @property
+    def identity(self) -> str:
+        """What it reads from, in words that no other camera or file shares: two sources of one identity are one camera."""
+
+    @property
+    def remarks(self) -> tuple[str, ...]:
+        """What a person should know of it once it is open: a setting that the camera did not take, for one."""
 
     def __enter__(self) -> Self:
         """Open what the source needs."""
@@ -33,10 +50,10 @@ class Source(Protocol):
     def __exit__(
         self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None
     ) -> None:
-        """Close it."""
+        """Close it; never raises."""
 
-    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostPair]:
-        """Give pairs until ``stop`` is set or nothing more will come."""
+    def shots(self, stop: threading.Event) -> Iterator[Shot | LostShot]:
+        """Give images until ``stop`` is set or nothing more will come."""
 
 
 @dataclass(frozen=True)
@@ -46,10 +63,15 @@ class SourceKind:
     Attributes
     ----------
     settings : type of msgspec.Struct
-        The keys of the ``[source]`` table besides ``kind``: frozen, keyword-only, unknown keys forbidden.
+        The keys of the source's table besides ``kind``: frozen, keyword-only, unknown keys forbidden.
     open : callable
-        Makes the source from its settings and the folder that relative paths start from.
+        ``open(settings, base, cameras)`` makes the source from its settings, the folder that relative paths start from,
+        and whose images it shall give.
+    both : bool
+        Whether one source of this kind gives both cameras' images (``[source]``); else each camera has its own
+        (``[source.a]`` and ``[source.b]``).
     """
 
     settings: type[Struct]
-    open: Callable[[Any, Path], Source]
+    open: Callable[[Any, Path, tuple[CameraName, ...]], Source]
+    both: bool

@@ -42,10 +42,11 @@ def test_a_minimal_file_gives_values_defaults_and_paths_from_its_own_folder(tmp_
     config = load(tmp_path, MINIMAL)
 
     assert config.rig == tmp_path / "bench.rig.json"
-    assert config.base == tmp_path
+    assert config.sources.base == tmp_path
     assert (config.volume.near_m, config.volume.far_m) == (0.45, 1.0)
-    assert config.source_kind == "folder"
-    assert config.source == FolderSettings(a="a*.png", b=["b1.png", "b2.png"], rate_hz=None, loop=False)
+    (choice,) = config.sources.choices
+    assert (choice.kind, choice.cameras) == ("folder", ("a", "b"))
+    assert choice.settings == FolderSettings(a="a*.png", b=["b1.png", "b2.png"], rate_hz=None, loop=False)
     assert config.match == MatchConfig(matcher="block", resolution=1.0)
     assert config.publish == PublishConfig(depth="tcp://127.0.0.1:7601", status="tcp://127.0.0.1:7602")
 

@@ -5,17 +5,19 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
-from types import MappingProxyType, TracebackType
-from typing import Any, Self
+from types import MappingProxyType
+from typing import Any
 
 import numpy as np
 import pytest
 from numpy.typing import NDArray
 from skewline.node import DepthFrame, DepthSubscriber, NodeError, NodeStatus, PairError, StatusSubscriber
+from skewline.node.camera_watch import FeedView
 from skewline.node.config import load_config
-from skewline.node.pairing import LostPair, Pair, StampedImage
+from skewline.node.hand_over import HandOver
 from skewline.node.publisher import Publisher
-from skewline.node.runner import HandOver, Node, run_node
+from skewline.node.runner import Node, run_node
+from skewline.node.shot import LostShot, Pair, StampedImage
 from skewline.node.sources import BUILT_IN
 from skewline.node.status import Tally
 
@@ -63,21 +65,16 @@ class Engine:
 
 
 class Listed:
-    """A source that gives what it was given; a callable among it is called when its turn comes."""
+    """A feed that gives what it was given; a callable among it is called when its turn comes."""
 
-    def __init__(self, items: list[Pair | LostPair | Callable[[], object]], *, live: bool = False) -> None:
+    def __init__(self, items: list[Pair | LostShot | Callable[[], object]], *, live: bool = False) -> None:
         self._items = items
         self.live = live
 
-    def __enter__(self) -> Self:
-        return self
+    def view(self) -> FeedView:
+        return FeedView()
 
-    def __exit__(
-        self, kind: type[BaseException] | None, value: BaseException | None, trace: TracebackType | None
-    ) -> None:
-        pass
-
-    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostPair]:  # noqa: ARG002 - part of the interface
+    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostShot]:  # noqa: ARG002 - part of the interface
         for item in self._items:
             if callable(item):
                 item()
@@ -111,7 +108,7 @@ def test_every_pair_of_a_source_that_waits_becomes_a_frame() -> None:
 
 def test_bad_and_lost_pairs_are_counted_and_told_and_the_node_goes_on(caplog: pytest.LogCaptureFixture) -> None:
     log = logging.getLogger("skewline-test")
-    lost = LostPair("file missing", "a7.png is gone")
+    lost = LostShot("a", "file missing", "a7.png is gone")
 
     summary = run(Listed([pair(), pair(255), lost, pair(255), lost, lost, pair()]), log=log)
 
@@ -120,7 +117,7 @@ def test_bad_and_lost_pairs_are_counted_and_told_and_the_node_goes_on(caplog: py
     # One line of each kind; the others within the next seconds would flood a log.
     assert sorted(record.getMessage() for record in caplog.records) == [
         "bad pair: this image is too white",
-        "lost pair: a7.png is gone",
+        "lost: a7.png is gone",
     ]
 
 
@@ -131,7 +128,7 @@ def test_a_live_source_s_newest_pair_pushes_out_the_older_which_are_counted() ->
         computing.set()
         assert go_on.wait(10)
 
-    items: list[Pair | LostPair | Callable[[], object]] = [pair(1), lambda: computing.wait(10)]
+    items: list[Pair | LostShot | Callable[[], object]] = [pair(1), lambda: computing.wait(10)]
     items += [pair(2), pair(3), pair(4), go_on.set]
     summary = run(Listed(items, live=True), Engine(wait))
 
@@ -166,7 +163,7 @@ def test_stop_ends_an_endless_source_within_a_second() -> None:
     stop = threading.Event()
 
     class Endless(Listed):
-        def pairs(self, stop: threading.Event) -> Iterator[Pair | LostPair]:
+        def pairs(self, stop: threading.Event) -> Iterator[Pair | LostShot]:
             while not stop.wait(0.01):
                 yield pair()
 

@@ -2,13 +2,17 @@
 
 import math
 import re
+from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import msgpack
 import numpy as np
 import pytest
 from skewline.node import DepthFrame, NodeStatus, WireError
+from skewline.node.camera_watch import CameraReport
+from skewline.node.trust import Reason, Trust
 from skewline.node.wire import Packing, decode_depth, decode_status, encode_depth, encode_status, to_counts
 
 ROOT = Path(__file__).parents[2]
@@ -32,6 +36,9 @@ def golden_frame() -> DepthFrame:
         far_m=1.2,
         stamp_ns=1_700_000_000_000_000_000,
         skew_ns=-250_000,
+        skew_depth_error_m=0.0015,
+        scene_speed_m_s=0.75,
+        trust=Trust("doubtful", (Reason(name="skew", verdict="doubtful", figure=0.0015, limit=0.001, unit="m"),)),
         fingerprint="e3b0c44298fc1c149afbf4c8996fb92427ae41e4649b934ca495991b7852b855",
         sequence=300,
         session="5d41402abc4b2a76",
@@ -69,6 +76,13 @@ def status() -> NodeStatus:
         bad_pairs=1,
         latency_p50_ms=31.0,
         stages_ms={"match": 20.5},
+        cameras={
+            "a": CameraReport(
+                state="absent", state_s=3.5, detail="no camera at 0", images=9, rate_hz=0.0, lost={"no partner": 2}
+            )
+        },
+        clock_offset_ms=-1.5,
+        clock_offset_sigma_ms=0.2,
     )
 
 
@@ -87,7 +101,7 @@ def test_the_msgpack_library_finds_plain_values_of_the_specified_types_in_the_go
     # Reference: the msgpack specification's types, as read by the msgpack library that its authors publish.
     message = msgpack.unpackb(GOLDEN.read_bytes())
 
-    numbers = {"near", "far", "depth_unit", "sigma_unit"}
+    numbers = {"near", "far", "depth_unit", "sigma_unit", "skew_depth_error", "scene_speed"}
     wholes = {"version", "sequence", "stamp_ns", "skew_ns", "published_ns", "width", "height", "out_of_range"}
     texts = {"format", "session", "rig", "pixels"}
     assert {key for key, value in message.items() if type(value) is float} == numbers
@@ -98,6 +112,10 @@ def test_the_msgpack_library_finds_plain_values_of_the_specified_types_in_the_go
         "K": 9,
         "T_a_view": 16,
         "T_base_a": 16,
+    }
+    assert message["trust"] == {
+        "verdict": "doubtful",
+        "reasons": [{"name": "skew", "verdict": "doubtful", "figure": 0.0015, "limit": 0.001, "unit": "m"}],
     }
 
 
@@ -114,11 +132,21 @@ def test_the_golden_message_says_what_the_document_says() -> None:
     assert message["T_a_view"][:4] == [0.0, -1.0, 0.0, 0.0]  # row-major
 
 
+def keys_of(message: dict[str, Any]) -> Iterator[str]:
+    """Give all keys, those inside ``cameras`` and ``trust`` among them; ``lost`` and ``stages_ms`` have the node's words."""
+    for key, value in message.items():
+        yield key
+        if key == "cameras":
+            yield from keys_of(value["a"])
+        elif key == "trust":
+            yield from keys_of(value | value["reasons"][0])
+
+
 def test_the_document_names_every_key_of_both_messages() -> None:
     text = WIRE_MD.read_text(encoding="utf-8")
 
     for message in (encode_depth(golden_frame()), encode_status(status())):
-        for key in msgpack.unpackb(message):
+        for key in keys_of(msgpack.unpackb(message)):
             assert f"| `{key}` |" in text
 
 
@@ -198,16 +226,20 @@ def test_depths_that_counts_cannot_say_become_none_and_are_counted() -> None:
 
 
 def test_unknown_keys_are_passed_over() -> None:
-    back = decode_depth(fields(trust={"word": "good", "reasons": []}, counter=3))
+    trust = {"verdict": "bad", "reasons": [], "word": "no"}
+    back = decode_depth(fields(trust=trust, counter=3))
 
     assert back.sequence == 300
+    assert back.trust == Trust("bad")
 
 
 def test_optional_keys_may_be_left_out() -> None:
     message = msgpack.unpackb(encode_depth(golden_frame()))
-    del message["picture"], message["T_base_a"]
+    del message["picture"], message["T_base_a"], message["trust"], message["skew_depth_error"], message["scene_speed"]
 
-    assert decode_depth(msgpack.packb(message)).T_base_a is None
+    back = decode_depth(msgpack.packb(message))
+    assert back.T_base_a is None
+    assert back.trust == Trust("doubtful")  # a node that says nothing of trust does not vouch for the frame
 
 
 @pytest.mark.parametrize("decode", [decode_depth, decode_status])

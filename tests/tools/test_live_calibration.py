@@ -12,7 +12,8 @@ import pytest
 from skewline.calib import CalibrationError, Rig
 from skewline.calib.from_target import CalibrationResult, View, calibrate_pair
 from skewline.calib.targets import parse_target
-from skewline.node.pairing import LostPair, Pair, StampedImage
+from skewline.node.camera_watch import FeedView
+from skewline.node.shot import LostShot, Pair, StampedImage
 from skewline.tools.cell import Cell, make_cell, render_target_views
 from skewline.tools.cli import main
 from skewline.tools.live_calibration import (
@@ -49,14 +50,11 @@ class Shown:
     def __init__(self, pictures: Sequence[tuple[Any, Any]], hold: int = HOLD) -> None:
         self._pictures = [pair for pair in pictures for _ in range(hold)]
 
-    def __enter__(self) -> "Shown":
-        return self
+    def view(self) -> FeedView:
+        return FeedView()
 
-    def __exit__(self, *_: object) -> None:
-        pass
-
-    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostPair]:
-        yield LostPair("file missing", "one that was lost on the way")
+    def pairs(self, stop: threading.Event) -> Iterator[Pair | LostShot]:
+        yield LostShot("a", "file missing", "one that was lost on the way")
         for number, (a, b) in enumerate(self._pictures):
             if stop.is_set():
                 return

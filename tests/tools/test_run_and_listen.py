@@ -176,7 +176,7 @@ def test_listen_shows_a_line_for_each_frame_and_saves_what_was_asked_for(plane_b
     assert len(lines) == 3
     shown = re.fullmatch(
         r"frame (\d+), age (\d+) ms, (\d+)x(\d+), coverage ([\d.]+)%, median depth ([\d.]+) mm, "
-        r"median sigma ([\d.]+) mm, missed (\d+)",
+        r"median sigma ([\d.]+) mm, good, missed (\d+)",
         lines[0],
     )
     assert shown is not None, lines[0]

@@ -7,17 +7,27 @@ import numpy as np
 import pytest
 from skewline.node import ConfigError
 from skewline.node.config import parse_config
-from skewline.node.pairing import Pair
+from skewline.node.feed import Feed
+from skewline.node.shot import BOTH, Pair
 from skewline.tools.cell import make_cell
 from skewline.tools.sources import SOURCES
 from skewline.tools.virtual_source import VirtualSettings, VirtualSource
+from source_suite import SourceSuite
 
 
 def images(**settings: object) -> list[Pair]:
-    with VirtualSource(VirtualSettings(frames=2, loop=False, **settings), Path()) as source:
-        pairs = list(source.pairs(threading.Event()))
-    assert all(isinstance(pair, Pair) for pair in pairs)
+    source = VirtualSource(VirtualSettings(frames=2, loop=False, **settings), Path())
+    pairs = list(Feed([source]).pairs(threading.Event()))
+    assert len(pairs) == 2
     return [pair for pair in pairs if isinstance(pair, Pair)]
+
+
+class TestVirtual(SourceSuite):
+    cameras = BOTH
+
+    @pytest.fixture
+    def source(self) -> VirtualSource:
+        return VirtualSource(VirtualSettings(frames=1, rate_hz=100), Path())
 
 
 def test_pairs_are_of_the_cell_s_cameras_differ_and_are_the_same_for_the_same_seed() -> None:
@@ -37,7 +47,7 @@ def test_a_stop_before_the_start_renders_nothing() -> None:
     stop = threading.Event()
     stop.set()
 
-    assert list(VirtualSource(VirtualSettings(frames=200), Path()).pairs(stop)) == []
+    assert list(VirtualSource(VirtualSettings(frames=200), Path()).shots(stop)) == []
 
 
 def test_the_command_line_offers_it_by_name() -> None:
@@ -49,7 +59,8 @@ def test_the_command_line_offers_it_by_name() -> None:
 
     config = parse_config(content, SOURCES, Path())
 
-    assert config.source == VirtualSettings(frames=3, rate_hz=5.0)
+    (choice,) = config.sources.choices
+    assert (choice.cameras, choice.settings) == (BOTH, VirtualSettings(frames=3, rate_hz=5.0))
     assert VirtualSource(VirtualSettings(rate_hz=5.0), Path()).live
     content["source"] = {"kind": "virtual", "frames": 0}
     with pytest.raises(ConfigError, match=r"source\.frames is 0; expected a whole number at least 1 and at most 200"):

@@ -7,6 +7,7 @@ import json
 import math
 import sys
 from collections.abc import Iterator
+from dataclasses import asdict
 from pathlib import Path
 from typing import Any
 
@@ -82,6 +83,9 @@ def figures(frame: DepthFrame, missed: int) -> dict[str, Any]:
         "coverage": frame.coverage,
         "median_depth_m": _median(frame.depth),
         "median_sigma_m": _median(frame.sigma),
+        "skew_ms": frame.skew_ns / 1e6,
+        "trust": frame.trust.verdict,
+        "reasons": [asdict(reason) for reason in frame.trust.reasons],
         "missed": missed,
     }
 
@@ -110,9 +114,19 @@ def _sentence(values: dict[str, Any]) -> str:
             f"coverage {values['coverage']:.1%}",
             "no depth" if depth is None else f"median depth {depth * 1e3:.1f} mm",
             "no sigma" if sigma is None else f"median sigma {sigma * 1e3:.2f} mm",
+            _trust(values),
             f"missed {values['missed']}",
         ]
     )
+
+
+def _trust(values: dict[str, Any]) -> str:
+    """Say the verdict, with what speaks against the frame."""
+    reasons = [
+        f"{reason['name']} {reason['figure']:.3g} {reason['unit']}, limit {reason['limit']:.3g}".replace(" ,", ",")
+        for reason in values["reasons"]
+    ]
+    return str(values["trust"]) + (f" ({'; '.join(reasons)})" if reasons else "")
 
 
 def _first(node: DepthSubscriber, count: int | None) -> Iterator[DepthFrame]:

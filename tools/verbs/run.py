@@ -48,6 +48,28 @@ example: this node.toml reads image files ten times a second and publishes on th
 
   skewline run node.toml
 
+Two cameras that run free have a source each, and the pictures are paired by their stamps:
+
+  [source.a]
+  kind = "device"                  # or "url", "gige", "socket"
+  device = "/dev/video0"
+  width = 1280
+  height = 720
+
+  [source.b]
+  kind = "url"
+  url = "http://127.0.0.1:8080/stream.mjpg"
+
+  [pairing]                        # may be left out
+  tolerance_ms = 15
+  offset_ms = "estimate"           # camera B's clock minus A's; 0 by default
+
+  [watch]                          # may be left out
+  stall_s = 2                      # a camera that gives nothing for so long is opened anew
+
+  [trust]                          # may be left out
+  scene_speed_m_s = 0.2            # with a pair's skew it says what error of depth the skew causes
+
 In another terminal: skewline listen tcp://127.0.0.1:7601
 Ctrl-C, SIGINT or SIGTERM ends it within a second, with status 0.
 """
@@ -115,6 +137,8 @@ def status_line(status: NodeStatus) -> str:
     if status.latency_p50_ms is not None:
         percentiles = (status.latency_p50_ms, status.latency_p90_ms or 0.0, status.latency_p99_ms or 0.0)
         parts.append("latency p50 p90 p99 " + " ".join(f"{value:.0f}" for value in percentiles) + " ms")
+    away = [f"camera {name.upper()} {camera.state}" for name, camera in sorted(status.cameras.items())]
+    parts += [words for words in away if not words.endswith((" delivering", " ended"))]
     lost = ", ".join(f"{reason} {count}" for reason, count in sorted(status.lost.items()))
     parts += [f"dropped {status.dropped_busy}", f"bad {status.bad_pairs}", f"lost {lost or 0}"]
     if status.peak_memory_mb is not None:

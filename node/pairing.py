@@ -128,14 +128,15 @@ class Pairer:
         jump_ns = self._jump_ns(stream, shot)
         if jump_ns:
             out += self._restart(stream, jump_ns)
-        stream.see(shot.stamp_ns, shot.arrived_ns)
         if self._live:
             self._clocks.add(shot.camera, shot.stamp_ns, shot.arrived_ns)
         offset_ns = self._offset_ns
+        # Images that nobody stamped are of one time, and pair in the order in which they come.
+        stamp_ns = shot.stamp_ns or (offset_ns or 0) * (shot.camera == "b")
+        stream.see(stamp_ns, shot.arrived_ns)
         if offset_ns is None:
             return [*out, LostShot(shot.camera, NO_OFFSET)]
-        # Images that nobody stamped are of one time, and pair in the order in which they come.
-        behind_ns = stream.insert(shot, shot.stamp_ns or (offset_ns if shot.camera == "b" else 0))
+        behind_ns = stream.insert(shot, stamp_ns)
         if behind_ns:
             return [*out, LostShot(shot.camera, LATE, f"{behind_ns / 1e6:.1f} ms older than an image already decided")]
         out += self._decide(offset_ns, lambda _: len(stream.shots) > MOST_WAITING)
@@ -237,15 +238,12 @@ class Pairer:
     def _jump_ns(self, stream: StampStream, shot: Shot) -> int:
         """By how much the camera's clock was set before this image; 0 where it was not."""
         floor_ns = self._clocks.floor_ns(shot.camera)
-        if floor_ns is not None:
-            departed_ns = stream.departed_ns(shot.arrived_ns - shot.stamp_ns, floor_ns, shot.arrived_ns)
-            if departed_ns > 0:
-                return departed_ns
-        else:
-            departed_ns = 0
+        ahead_ns = 0 if floor_ns is None else floor_ns - (shot.arrived_ns - shot.stamp_ns)
+        if floor_ns is not None and stream.has_departed(ahead_ns, shot.arrived_ns):
+            return ahead_ns
         # Stamps that fall without departing from arrival: this host's own clock was set.
         fallen_ns = stream.fallen_back_ns(shot.stamp_ns)
-        return departed_ns or -fallen_ns
+        return ahead_ns if fallen_ns and ahead_ns < -STEP_NS else -fallen_ns
 
     def _restart(self, stream: StampStream, jump_ns: int) -> list[Decision]:
         detail = f"camera {stream.camera.upper()}'s stamps jumped by {jump_ns / 1e9:+.3f} s"

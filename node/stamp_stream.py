@@ -93,21 +93,15 @@ class StampStream:
         behind = 0 if self.newest_ns is None else self.newest_ns - stamp_ns
         return behind if behind > STEP_NS else 0
 
-    def departed_ns(self, delay_ns: int, floor_ns: int, arrived_ns: int) -> int:
-        """By how much the clock was set, judged by arrival minus stamp of an image and the smallest of those before it.
+    def has_departed(self, ahead_ns: int, arrived_ns: int) -> bool:
+        """Say whether the clock was set, judged by how far a stamp is ahead of what its arrival predicts.
 
         A delay can grow (a network that stalls) but not shrink below the smallest: a stamp too far ahead is a clock set
         forward at once, one too far behind a clock set back only when that lasts.
-
-        Returns
-        -------
-        int
-            Nanoseconds, negative where the clock was set back; 0 where it was not set.
         """
-        ahead = floor_ns - delay_ns
-        if ahead >= -STEP_NS:
+        if ahead_ns >= -STEP_NS:
             self._astray_ns = None
-            return ahead if ahead > STEP_NS else 0
+            return ahead_ns > STEP_NS
         if self._astray_ns is None:
             self._astray_ns = arrived_ns
-        return ahead if arrived_ns - self._astray_ns >= STEP_NS else 0
+        return arrived_ns - self._astray_ns >= STEP_NS

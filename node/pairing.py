@@ -78,6 +78,12 @@ class Pairer:
         together, for which recent spacings of the stamps count as well. False: everything will come, each partner is
         chosen with all that could be closer in hand, and arrival times are not looked at.
 
+    Notes
+    -----
+    A camera whose clock is set starts anew: what waits of it is counted as :data:`CLOCK_JUMP`, and its later images may
+    be older than those already paired. Live, that is seen in how stamps and arrivals go together; without live images
+    only where stamps fall back by more than a second.
+
     Raises
     ------
     ConfigError
@@ -125,14 +131,14 @@ class Pairer:
             if not shot.stamp_ns:
                 return [LostShot(shot.camera, NO_STAMP, 'a live image without a stamp; take stamps = "arrival"')]
             self._tell_time(shot.arrived_ns)
-        jump_ns = self._jump_ns(stream, shot)
+        # Images that nobody stamped are of one time, and pair in the order in which they come.
+        stamp_ns = shot.stamp_ns or (self._given_ns or 0) * (shot.camera == "b")
+        jump_ns = self._jump_ns(stream, stamp_ns, shot.arrived_ns)
         if jump_ns:
             out += self._restart(stream, jump_ns)
         if self._live:
-            self._clocks.add(shot.camera, shot.stamp_ns, shot.arrived_ns)
+            self._clocks.add(shot.camera, stamp_ns, shot.arrived_ns)
         offset_ns = self._offset_ns
-        # Images that nobody stamped are of one time, and pair in the order in which they come.
-        stamp_ns = shot.stamp_ns or (offset_ns or 0) * (shot.camera == "b")
         stream.see(stamp_ns, shot.arrived_ns)
         if offset_ns is None:
             return [*out, LostShot(shot.camera, NO_OFFSET)]
@@ -235,14 +241,14 @@ class Pairer:
         if self._paired_ns is None or self._paired_ns > now_ns:
             self._paired_ns = now_ns
 
-    def _jump_ns(self, stream: StampStream, shot: Shot) -> int:
+    def _jump_ns(self, stream: StampStream, stamp_ns: int, arrived_ns: int) -> int:
         """By how much the camera's clock was set before this image; 0 where it was not."""
-        floor_ns = self._clocks.floor_ns(shot.camera)
-        ahead_ns = 0 if floor_ns is None else floor_ns - (shot.arrived_ns - shot.stamp_ns)
-        if floor_ns is not None and stream.has_departed(ahead_ns, shot.arrived_ns):
+        floor_ns = self._clocks.floor_ns(stream.camera)
+        ahead_ns = 0 if floor_ns is None else floor_ns - (arrived_ns - stamp_ns)
+        if floor_ns is not None and stream.has_departed(ahead_ns, arrived_ns):
             return ahead_ns
         # Stamps that fall without departing from arrival: this host's own clock was set.
-        fallen_ns = stream.fallen_back_ns(shot.stamp_ns)
+        fallen_ns = stream.fallen_back_ns(stamp_ns)
         return ahead_ns if fallen_ns and ahead_ns < -STEP_NS else -fallen_ns
 
     def _restart(self, stream: StampStream, jump_ns: int) -> list[Decision]:
@@ -265,9 +271,12 @@ class Pairer:
         """Put in words that images of both cameras arrive and find no partners since their clocks differ; else empty."""
         if self._paired_ns is None or self._now_ns - self._paired_ns <= STEP_NS or self._given_ns is None:
             return ""
+        long_ns = max(STEP_NS, _PATIENCE_INTERVALS * max(self._a.interval_ns(), self._b.interval_ns()))
         seen = [stream.arrived_ns for stream in self._streams.values()]
         offset_ns = self._clocks.offset_ns
-        if offset_ns is None or any(at is None or self._now_ns - at > 2 * STEP_NS for at in seen):
+        if offset_ns is None or any(at is None or self._now_ns - at > long_ns for at in seen):
+            return ""
+        if self._now_ns - self._paired_ns <= long_ns:
             return ""
         if abs(offset_ns - self._given_ns) <= self._tolerance_ns:
             return ""

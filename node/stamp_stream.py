@@ -44,7 +44,7 @@ class StampStream:
         self.newest_ns: int | None = None
         self._decided_ns: int | None = None
         self._spacings: deque[int] = deque(maxlen=_RECENT)
-        self._astray_ns: int | None = None
+        self._astray: tuple[int, int] | None = None
 
     def see(self, stamp_ns: int, arrived_ns: int) -> None:
         """Learn from a stamp, whether or not its image will wait."""
@@ -97,11 +97,12 @@ class StampStream:
         """Say whether the clock was set, judged by how far a stamp is ahead of what its arrival predicts.
 
         A delay can grow (a network that stalls) but not shrink below the smallest: a stamp too far ahead is a clock set
-        forward at once, one too far behind a clock set back only when that lasts.
+        forward at once, one too far behind a clock set back only when that lasts, and does not shrink as where a network
+        catches up.
         """
         if ahead_ns >= -STEP_NS:
-            self._astray_ns = None
+            self._astray = None
             return ahead_ns > STEP_NS
-        if self._astray_ns is None:
-            self._astray_ns = arrived_ns
-        return arrived_ns - self._astray_ns >= STEP_NS
+        if self._astray is None or ahead_ns > self._astray[1] + STEP_NS // 4:
+            self._astray = (arrived_ns, ahead_ns)
+        return arrived_ns - self._astray[0] >= STEP_NS

@@ -305,6 +305,8 @@ def test_images_that_nobody_stamped_pair_in_order_in_a_replay_and_are_refused_li
     decided = add_all(replay, [unstamped(camera) for camera in "aabbab"])  # type: ignore[arg-type]
 
     assert [isinstance(item, Pair) and item.skew_ns == 0 for item in decided] == [True] * 3
+    assert in_ms(add_all(replay, [unstamped("b"), unstamped("b")])) == []
+    assert replay.waiting == {"a": 0, "b": 2}
     assert in_ms(pairer().add(unstamped("a"))) == [("a", NO_STAMP)]
 
 
@@ -389,15 +391,17 @@ def test_stamps_of_both_cameras_that_run_backwards_for_good_pair_again(live: boo
     assert sum(isinstance(item, Pair) for item in decided) >= 58
 
 
-def test_a_network_that_stalls_for_three_seconds_is_no_clock_jump() -> None:
-    shots = steady("a", 33.3, 300)
+@pytest.mark.parametrize("catching_up_ms", [0, 16], ids=["at-once", "two-images-at-a-time"])
+def test_a_network_that_stalls_for_three_seconds_is_no_clock_jump(catching_up_ms: float) -> None:
     stalled = [
-        replace(each, arrived_ns=max(each.arrived_ns, EPOCH_NS + 6000 * MS)) if number > 90 else each
-        for number, each in enumerate(shots)
+        replace(each, arrived_ns=max(each.arrived_ns, EPOCH_NS + round((6000 + (number - 90) * catching_up_ms) * MS)))
+        if number > 90
+        else each
+        for number, each in enumerate(steady("a", 33.3, 330))
     ]
     machine = pairer(offset_ms="estimate")
 
-    decided = add_all(machine, by_arrival(stalled, steady("b", 33.3, 300))) + machine.flush()
+    decided = add_all(machine, by_arrival(stalled, steady("b", 33.3, 330))) + machine.flush()
 
     assert {item.reason for item in decided if isinstance(item, LostShot)} == {NO_OFFSET, NO_PARTNER}
     assert isinstance(decided[-1], Pair)

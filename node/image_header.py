@@ -28,7 +28,7 @@ _JPEG_LENGTHLESS = {0x01, *range(0xD0, 0xDA)}
 _JPEG_SCAN = 0xDA
 _JPEG_PIXELS = {(8, 1): "grey8", (8, 3): "bgr8"}
 _MOST_JPEG_SEGMENTS = 1000
-_MOST_JPEG_SCANS = 100
+_MOST_JPEG_SCANS = 30
 """Encoders write about ten; each scan of a progressive image costs as much as decoding all of it, and a few bytes."""
 
 

@@ -124,8 +124,8 @@ def encode_image(
     Parameters
     ----------
     image : StampedImage
-        Grey uint8 or uint16 of shape (H, W), or uint8 of shape (H, W, 3) in the order blue, green, red; and the middle of
-        its exposure in nanoseconds since the Unix epoch, 0 where that is not known.
+        Grey uint8 or uint16 of shape (H, W), or uint8 of shape (H, W, 3) in the order blue, green, red; and the middle
+        of its exposure in nanoseconds since the Unix epoch, 0 where that is not known.
     camera : {"a", "b"}, optional
         Which of the rig's cameras took it: a node that expects the other one then refuses it.
     sequence : int, optional
@@ -284,8 +284,8 @@ def _kind_of(array: NDArray[Any], encoding: Encoding) -> PixelKind:
     sides_fit = all(1 <= side <= MAX_SIDE_PX for side in array.shape[:2])
     if kind is None or not sides_fit or (kind == "bgr8" and array.shape[2] != 3):
         raise WireError(
-            f"image has shape {array.shape} and dtype {array.dtype.name}; expected (H, W) of uint8 or uint16, or (H, W, 3) "
-            f"of uint8, with sides of 1 to {MAX_SIDE_PX}: convert it"
+            f"image has shape {array.shape} and dtype {array.dtype.name}; expected (H, W) of uint8 or uint16, or "
+            f"(H, W, 3) of uint8, with sides of 1 to {MAX_SIDE_PX}: convert it"
         )
     if kind == "grey16" and encoding == "jpeg":
         raise WireError("image has 16 bits and encoding is 'jpeg'; expected 8 bits for JPEG: send PNG or raw")

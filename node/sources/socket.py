@@ -1,8 +1,8 @@
 """Images that another process pushes over ZeroMQ: any driver that a site has, in any language.
 
-``WIRE.md`` specifies the message and shows a sender. The node binds a PULL socket and senders connect, so that either may
-start first and start anew. Where images come faster than the node takes them, all but the newest are passed over without
-being decoded, so that a busy node is never behind by more than the one image it works on.
+``WIRE.md`` specifies the message and shows a sender. The node binds a PULL socket and senders connect, so that either
+may start first and start anew. Where images come faster than the node takes them, all but the newest are passed over
+without being decoded: a queue that is read one by one keeps the old ones, and the node would lag by all it holds.
 """
 
 from __future__ import annotations
@@ -31,7 +31,10 @@ GAP = "gap"
 OTHER_CAMERA = "other camera"
 
 _QUEUED_IMAGES = 4
-"""Messages held for each sender while the node is busy; as many again may wait in the operating system's buffers."""
+"""Messages held for each sender while the node is busy; more may wait in the operating system's buffers."""
+
+_FULL = 3
+"""So many in a queue of four may mean that it is full: ZeroMQ makes room anew for every second message that is read."""
 
 _WAIT_MS = 50
 _REFILL_MS = 10
@@ -201,13 +204,13 @@ def _decode(parts: list[bytes], largest_px: int, camera: CameraName) -> ImageMes
 
 
 def _newest(socket: zmq.Socket[bytes]) -> tuple[list[bytes], int]:
-    """Wait a moment for messages; give the parts of the newest (none: nothing came), and how many older were dropped."""
+    """Wait a moment for messages; give the parts of the newest (none came: none), and how many older were dropped."""
     if not socket.poll(_WAIT_MS):
         return [], 0
     until_s = time.monotonic() + _REFILL_MS / 1000
     for dropped in range(_MOST_IN_A_ROW):
         parts = socket.recv_multipart(zmq.NOBLOCK)
-        was_full = dropped + 1 >= _QUEUED_IMAGES
+        was_full = dropped + 1 >= _FULL
         if not socket.poll(max(0, round((until_s - time.monotonic()) * 1000)) if was_full else 0):
             break
     return parts, dropped

@@ -1,4 +1,4 @@
-"""Image messages: against the msgpack library, PNG files put together by hand, OpenCV's own files, and bytes that mean harm."""
+"""Image messages: against the msgpack library, PNG files made by hand, OpenCV's own files, and bytes that mean harm."""
 
 import re
 import struct
@@ -13,6 +13,7 @@ import pytest
 from numpy.typing import NDArray
 from skewline.node import WireError
 from skewline.node.image_message import (
+    Encoding,
     ImageMessageError,
     decode_image,
     encode_image,
@@ -22,6 +23,7 @@ from skewline.node.shot import StampedImage
 
 WIRE_MD = Path(__file__).parents[2] / "node" / "WIRE.md"
 STAMP_NS = 1_700_000_000_000_000_000
+LOSSLESS: tuple[Encoding, ...] = ("raw", "png")
 COLOURS = {"grey8": 0, "grey16": 0, "bgr8": 2}
 
 
@@ -88,7 +90,7 @@ def test_the_document_names_every_key_and_every_reason() -> None:
 
 
 @pytest.mark.parametrize("kind", ["grey8", "grey16", "bgr8"])
-@pytest.mark.parametrize("encoding", ["raw", "png"])
+@pytest.mark.parametrize("encoding", LOSSLESS)
 def test_raw_and_png_come_back_bit_for_bit(kind: str, encoding: Any) -> None:
     sent = picture(kind)
 
@@ -149,16 +151,16 @@ def test_a_cut_out_of_a_larger_image_is_sent_without_what_lies_between_its_rows(
 def test_pixels_with_the_most_significant_byte_first_are_sent_as_the_same_numbers() -> None:
     sent = picture("grey16")
 
-    for encoding in ("raw", "png"):
-        back = decode_image(encode_image(StampedImage(sent.astype(">u2"), 0), encoding=encoding))  # type: ignore[arg-type]
+    for encoding in LOSSLESS:
+        back = decode_image(encode_image(StampedImage(sent.astype(">u2"), 0), encoding=encoding))
         np.testing.assert_array_equal(back.image.pixels, sent)
 
 
 def test_the_largest_image_fits_the_largest_message_even_as_png_of_noise() -> None:
     noise = np.random.default_rng(2).integers(0, 256, (300, 400, 3), np.uint8)
 
-    for encoding in ("raw", "png"):
-        assert len(encode_image(StampedImage(noise, 0), encoding=encoding)) <= largest_message_bytes(300 * 400)  # type: ignore[arg-type]
+    for encoding in LOSSLESS:
+        assert len(encode_image(StampedImage(noise, 0), encoding=encoding)) <= largest_message_bytes(300 * 400)
 
 
 def test_unknown_keys_are_passed_over_and_optional_ones_may_be_missing() -> None:
@@ -273,7 +275,7 @@ JPEG = jpeg(GREY)
         ("jpeg", b"\xff\xd8" + b"\xff" * 5000 + b"\xff\xd9", "no frame header"),
         ("jpeg", JPEG.replace(b"\xff\xc0", b"\xff\xc9", 1), "JPEG is of kind SOF9; expected baseline"),
         ("jpeg", JPEG[:2] + JPEG[JPEG.index(b"\xff\xda") :], "marker ff da at byte 2 stands before any frame header"),
-        ("jpeg", JPEG[:-2] + b"\xff\xda\0\x06\x01\x01\0\0\0\0" * 200 + b"\xff\xd9", "more than 100 scans"),
+        ("jpeg", JPEG[:-2] + b"\xff\xda\0\x06\x01\x01\0\0\0\0" * 200 + b"\xff\xd9", "more than 30 scans"),
     ],
 )
 def test_damaged_png_and_jpeg_are_refused_with_what_is_wrong(encoding: str, image: bytes, complaint: str) -> None:

@@ -1,7 +1,8 @@
 """A camera driver outside the node: push images to a source of kind ``socket``.
 
 Start from this where the node has no source for a camera: put the camera in the place of ``pictures``, and call
-``Sender.send`` with each image and the middle of its exposure. ``node/WIRE.md`` specifies the message for other languages.
+``Sender.send`` with each image and the middle of its exposure. For other languages, ``node/WIRE.md`` specifies the
+message.
 """
 
 from __future__ import annotations
@@ -129,7 +130,7 @@ def pictures(pattern: str | None) -> Iterator[NDArray[Any]]:
 def push(
     sender: Sender, images: Iterator[NDArray[Any]], rate_hz: float, count: int | None, stop: threading.Event
 ) -> None:
-    """Send an image at each turn, until ``count`` were taken or ``stop`` is set; turns that were missed are left out."""
+    """Send an image at each turn, until ``count`` were taken or ``stop`` is set; turns that were missed are skipped."""
     due_s = time.monotonic()
     for pixels in itertools.islice(images, count):
         if stop.wait(max(0.0, due_s - time.monotonic())):

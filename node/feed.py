@@ -13,7 +13,8 @@ from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import ExitStack
 from functools import partial
 
-from .camera_watch import SAME_PICTURE, CameraReport, CameraState, CameraWatch, FeedView, same_pixels
+from .camera_report import CameraReport, CameraState, FeedView
+from .camera_watch import SAME_PICTURE, CameraWatch, same_pixels
 from .errors import ConfigError
 from .pairing import Pairer, PairingSettings
 from .shot import BOTH, CameraName, LostShot, Pair, Shot

@@ -7,7 +7,7 @@ from collections import deque
 from collections.abc import Callable, Generator, Iterator
 from typing import Protocol
 
-from .camera_watch import FeedView
+from .camera_report import FeedView
 from .shot import LostShot, Pair
 
 _QUEUED_PAIRS = 2

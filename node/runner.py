@@ -16,7 +16,7 @@ from typing import Any, Protocol
 from numpy.typing import NDArray
 
 from ..calib import Rig
-from .camera_watch import CameraState
+from .camera_report import CameraState
 from .config import NodeConfig
 from .engine import DepthEngine
 from .errors import UNKNOWN_SCALE, NodeError, PairError

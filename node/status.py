@@ -13,7 +13,7 @@ from typing import Annotated
 import numpy as np
 from msgspec import Meta, Struct
 
-from .camera_watch import CameraReport, FeedView
+from .camera_report import CameraReport, FeedView
 
 Count = Annotated[int, Meta(ge=0, le=2**63 - 1)]
 Amount = Annotated[float, Meta(ge=0, le=1e15)]

@@ -16,7 +16,7 @@ from ..calib import CalibrationError
 from ..calib.depth_error import common_view, depth_sigma_from_calibration
 from ..calib.result import CalibrationResult
 from ..calib.rig import write_atomically
-from ..node.camera_watch import CameraState
+from ..node.camera_report import CameraState
 from ..node.config import load_sources
 from ..node.feed import Feed
 from ..node.shot import CameraName

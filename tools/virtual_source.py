@@ -75,6 +75,7 @@ class VirtualSource:
     ) -> None:
         self.cameras = cameras
         self._settings = settings
+        self._images: list[Images] = []
 
     @property
     def live(self) -> bool:
@@ -92,11 +93,12 @@ class VirtualSource:
     def shots(self, stop: threading.Event) -> Iterator[Shot | LostShot]:
         """Give the rendered images, A's and B's by turns, stamped with the moment at which their turn comes."""
         # Rendered here, in the reading thread: the node stays ready to stop meanwhile.
-        images = list(_render(self._settings, stop))
-        for image in itertools.chain.from_iterable(images):
+        if not self._images:
+            self._images = list(_render(self._settings, stop))
+        for image in itertools.chain.from_iterable(self._images):
             image.flags.writeable = False  # shown again and again
         pace = Pace(self._settings.rate_hz, stop)
-        for pair in itertools.cycle(images) if self._settings.loop else images:
+        for pair in itertools.cycle(self._images) if self._settings.loop else self._images:
             for _ in range(self._settings.hold):
                 if not pace.wait():
                     return

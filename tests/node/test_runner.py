@@ -12,7 +12,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 from skewline.node import DepthFrame, DepthSubscriber, NodeError, NodeStatus, PairError, StatusSubscriber
-from skewline.node.camera_watch import FeedView
+from skewline.node.camera_report import FeedView
 from skewline.node.config import load_config
 from skewline.node.hand_over import HandOver
 from skewline.node.publisher import Publisher

@@ -11,7 +11,7 @@ import msgpack
 import numpy as np
 import pytest
 from skewline.node import DepthFrame, NodeStatus, WireError
-from skewline.node.camera_watch import CameraReport
+from skewline.node.camera_report import CameraReport
 from skewline.node.trust import Reason, Trust
 from skewline.node.wire import Packing, decode_depth, decode_status, encode_depth, encode_status, to_counts
 

@@ -12,7 +12,7 @@ import pytest
 from skewline.calib import CalibrationError, Rig
 from skewline.calib.from_target import CalibrationResult, View, calibrate_pair
 from skewline.calib.targets import parse_target
-from skewline.node.camera_watch import FeedView
+from skewline.node.camera_report import FeedView
 from skewline.node.shot import LostShot, Pair, StampedImage
 from skewline.tools.cell import Cell, make_cell, render_target_views
 from skewline.tools.cli import main

@@ -22,12 +22,17 @@ def images(**settings: object) -> list[Pair]:
     return [pair for pair in pairs if isinstance(pair, Pair)]
 
 
+@pytest.fixture(scope="module")
+def rendered() -> VirtualSource:
+    return VirtualSource(VirtualSettings(frames=1, rate_hz=100), Path())
+
+
 class TestVirtual(SourceSuite):
     cameras = BOTH
 
     @pytest.fixture
-    def source(self) -> VirtualSource:
-        return VirtualSource(VirtualSettings(frames=1, rate_hz=100), Path())
+    def source(self, rendered: VirtualSource) -> VirtualSource:
+        return rendered
 
 
 def test_pairs_are_of_the_cell_s_cameras_differ_and_are_the_same_for_the_same_seed() -> None:

@@ -64,7 +64,7 @@ def serve(images: NDArray[Any], rate_hz: float, port: int) -> None:
     class Handler(BaseHTTPRequestHandler):
         protocol_version = "HTTP/1.0"
 
-        def do_GET(self) -> None:  # noqa: N802 - the base class's name
+        def do_GET(self) -> None:
             self.send_response(200)
             self.send_header("Content-Type", f"multipart/x-mixed-replace; boundary={_BOUNDARY.decode()}")
             self.end_headers()
@@ -76,7 +76,7 @@ def serve(images: NDArray[Any], rate_hz: float, port: int) -> None:
             except ConnectionError:
                 return  # the reader went away
 
-        def log_message(self, format: str, *args: Any) -> None:  # noqa: A002, ARG002 - the base class's names
+        def log_message(self, format: str, *args: Any) -> None:  # noqa: A002 - the base class's names
             """Say nothing."""
 
     server = ThreadingHTTPServer(("127.0.0.1", port), Handler)

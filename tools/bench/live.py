@@ -114,7 +114,15 @@ def make_cameras(kind: str, folder: Path) -> dict[str, tuple[Camera, str]]:
     for name, port, interface in zip("ab", ports, ("lo", "eth0"), strict=True):
         images = str(folder / f"{name}.npy")
         if kind == "gige":
-            command = ["skewline.tools.bench.fake_gige", "--serial", name, "--rate", str(RATE_HZ), "--interface", interface]
+            command = [
+                "skewline.tools.bench.fake_gige",
+                "--serial",
+                name,
+                "--rate",
+                str(RATE_HZ),
+                "--interface",
+                interface,
+            ]
             table = f'kind = "gige"\ncamera = "Aravis-Fake-{name}"\n'
         elif kind == "push":
             address = f"tcp://127.0.0.1:{port}"
@@ -264,9 +272,7 @@ class _Moment:
         self.status = status
 
 
-def _sum_up(
-    kind: str, before: _Moment, after: _Moment, reader: Reader, noticed_s: float, back_s: float
-) -> Figures:
+def _sum_up(kind: str, before: _Moment, after: _Moment, reader: Reader, noticed_s: float, back_s: float) -> Figures:
     took_s = after.at_s - before.at_s
     status_s = after.status.uptime_s - before.status.uptime_s
     latencies = [age_ms for _, age_ms in reader.came[before.frames : after.frames]]

@@ -93,12 +93,14 @@ class VirtualSource:
     def shots(self, stop: threading.Event) -> Iterator[Shot | LostShot]:
         """Give the rendered images, A's and B's by turns, stamped with the moment at which their turn comes."""
         # Rendered here, in the reading thread: the node stays ready to stop meanwhile.
-        if not self._images:
-            self._images = list(_render(self._settings, stop))
-        for image in itertools.chain.from_iterable(self._images):
+        images = self._images or list(_render(self._settings, stop))
+        if stop.is_set():
+            return
+        self._images = images
+        for image in itertools.chain.from_iterable(images):
             image.flags.writeable = False  # shown again and again
         pace = Pace(self._settings.rate_hz, stop)
-        for pair in itertools.cycle(self._images) if self._settings.loop else self._images:
+        for pair in itertools.cycle(images) if self._settings.loop else images:
             for _ in range(self._settings.hold):
                 if not pace.wait():
                     return

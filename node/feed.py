@@ -47,6 +47,8 @@ class Feed:
         Width and height that the rig expects of each live camera, in pixels.
     tell : callable, optional
         ``tell(camera, state, detail)``, called whenever a camera's state changes.
+    tap : callable, optional
+        ``tap(shot)``, called with every image as it came, whatever becomes of it; it must not wait.
 
     Raises
     ------
@@ -62,6 +64,7 @@ class Feed:
         *,
         sizes: Mapping[CameraName, tuple[int, int]] | None = None,
         tell: Tell = lambda *_: None,
+        tap: Callable[[Shot], None] = lambda _: None,
     ) -> None:
         _check(sources)
         self._sources = tuple(sources)
@@ -73,6 +76,8 @@ class Feed:
         self._cameras = {name: CameraWatch(name, sizes.get(name), self._watch, watched=watched) for name in BOTH}
         self._told: dict[CameraName, CameraState] = dict.fromkeys(BOTH, "opening")
         self._tell = tell
+        self._tap = tap
+        self._offset = self._pairer.offset
         self._lock = threading.Lock()
 
     @property
@@ -84,7 +89,11 @@ class Feed:
         """Say how each camera and the pairing stand; rates are since the last call. May be called from any thread."""
         with self._lock:
             cameras: dict[str, CameraReport] = {name: camera.report() for name, camera in self._cameras.items()}
+            offset = self._offset
+        if offset is None:
             return FeedView(cameras=cameras)
+        sigma_ms = None if offset.sigma_ns is None else offset.sigma_ns / 1e6
+        return FeedView(cameras=cameras, clock_offset_ms=offset.offset_ns / 1e6, clock_offset_sigma_ms=sigma_ms)
 
     def pairs(self, stop: threading.Event) -> Iterator[Pair | LostShot]:
         """Give pairs until ``stop`` is set or the sources end.
@@ -150,6 +159,7 @@ class Feed:
         if isinstance(item, LostShot):
             yield from self._count([item])
             return
+        self._tap(item)
         with self._lock:
             refused = self._cameras[item.camera].accept(item)
         yield from self._count(self._pairer.add(item) if refused is None else [refused])
@@ -165,6 +175,8 @@ class Feed:
                 yield from self._count(self._pairer.forget())
         self._tell_changes()
         yield from self._count(self._pairer.expire(time.time_ns()))
+        with self._lock:
+            self._offset = self._pairer.offset
 
     def _count(self, decided: Sequence[Pair | LostShot]) -> Iterator[Pair | LostShot]:
         """Pass on what was decided, a pair only where its images are two cameras'."""

@@ -6,6 +6,7 @@
     ├── ``VolumeError``: the working volume cannot be seen by both cameras of this rig
     ├── ``SourceError``: a camera is not there, refuses, or fell away; it may come back, and the node tries again
     ├── ``PairError``: this one pair is unusable; the node counts it and goes on
+    ├── ``AccessError``: a key is missing, wrong or not allowed; waiting does not help
     ├── ``WireError``: bytes that are no message of ours
     └── ``NoFrameError``: nothing arrived in time; the peer or the network, not the caller, is at fault
 """
@@ -36,6 +37,10 @@ class SourceError(NodeError):
 
 class PairError(NodeError):
     """One pair of images cannot be used; the next one may."""
+
+
+class AccessError(NodeError):
+    """A key is missing, unfit or wrong, or the node does not let it in; waiting does not help."""
 
 
 class WireError(NodeError):

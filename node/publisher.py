@@ -15,6 +15,7 @@ import zmq
 
 from .errors import NodeError
 from .frame import DepthFrame
+from .gatekeeper import Gatekeeper, rebind, secure_server
 from .status import NodeStatus
 from .wire import Packing, encode_depth, encode_status
 
@@ -23,6 +24,9 @@ _QUEUED_FRAMES = 4
 stalled subscriber costs is these few frames of memory, and what it reads afterwards is not long out of date."""
 
 _QUEUED_STATUS = 10
+
+_LARGEST_SUBSCRIPTION = 4096
+"""Bytes of a message from a subscriber, handshake and all; a larger one is an attempt on the node's memory."""
 
 
 class Publisher:
@@ -34,11 +38,15 @@ class Publisher:
         Where to bind, ``tcp://HOST:PORT``; port 0 takes any free one, and the properties tell which.
     packing : Packing, optional
         How pixels travel.
+    keeper : Gatekeeper, optional
+        Who may connect and where may be bound, entered already; without, anybody and anywhere.
     context : zmq.Context, optional
-        A context of the caller's; by default the publisher owns one.
+        A context of the caller's; by default the keeper's, or else one that the publisher owns.
 
     Raises
     ------
+    ConfigError
+        Where the keeper's policy does not allow to bind an address.
     NodeError
         Where an address cannot be bound: the port in use, a host that is not this one, no address at all.
     """
@@ -49,20 +57,25 @@ class Publisher:
         status_address: str,
         *,
         packing: Packing | None = None,
+        keeper: Gatekeeper | None = None,
         context: zmq.Context[Any] | None = None,
     ) -> None:
         self.session = secrets.token_hex(8)
         self._packing = packing or Packing()
         self._sequence = 0
         self._closed = False
+        if context is None and keeper is not None:
+            context = keeper.context
+        self._keeper = keeper
+        self._revocations = 0 if keeper is None else keeper.revocations
         self._own_context = context is None
         self._context = zmq.Context() if context is None else context
         # An XPUB socket is a PUB that also tells when the first subscriber has come.
         self._depth = _socket(self._context, zmq.XPUB, _QUEUED_FRAMES)
         self._status = _socket(self._context, zmq.PUB, _QUEUED_STATUS)
         try:
-            self.depth_address = _bind(self._depth, depth_address, "publish.depth")
-            self.status_address = _bind(self._status, status_address, "publish.status")
+            self.depth_address = _bind(self._depth, depth_address, "publish.depth", keeper)
+            self.status_address = _bind(self._status, status_address, "publish.status", keeper)
         except NodeError:
             self.close()
             raise
@@ -84,6 +97,7 @@ class Publisher:
     def send_depth(self, frame: DepthFrame) -> DepthFrame:
         """Send one frame under the next sequence number and this session's name; give it back as it was sent."""
         sent = replace(frame, sequence=self._sequence, session=self.session, published_ns=time.time_ns())
+        self._turn_out_revoked()
         self._hear_subscribers()
         self._depth.send(encode_depth(sent, self._packing), zmq.NOBLOCK)
         self._sequence += 1
@@ -91,6 +105,7 @@ class Publisher:
 
     def send_status(self, status: NodeStatus) -> None:
         """Send one status message."""
+        self._turn_out_revoked()
         self._status.send(encode_status(status), zmq.NOBLOCK)
 
     def wait_for_subscriber(self, timeout_s: float, stop: threading.Event | None = None) -> bool:
@@ -113,6 +128,14 @@ class Publisher:
         if self._own_context:
             self._context.term()
 
+    def _turn_out_revoked(self) -> None:
+        """End all connections where a key that had come in is no longer allowed; the others come back."""
+        if self._keeper is None or self._keeper.revocations == self._revocations:
+            return
+        self._revocations = self._keeper.revocations
+        rebind(self._depth, self.depth_address)
+        rebind(self._status, self.status_address)
+
     def _hear_subscribers(self) -> None:
         """Take what subscribers said from the socket, where it would pile up otherwise."""
         while True:
@@ -126,6 +149,7 @@ class Publisher:
 def _socket(context: zmq.Context[Any], kind: int, queued: int) -> zmq.Socket[bytes]:
     socket: zmq.Socket[bytes] = context.socket(kind)
     socket.setsockopt(zmq.SNDHWM, queued)
+    socket.setsockopt(zmq.MAXMSGSIZE, _LARGEST_SUBSCRIPTION)
     socket.setsockopt(zmq.LINGER, 0)
     return socket
 
@@ -138,8 +162,12 @@ _REFUSALS = {
 }
 
 
-def _bind(socket: zmq.Socket[bytes], address: str, key: str) -> str:
+def _bind(socket: zmq.Socket[bytes], address: str, key: str, keeper: Gatekeeper | None) -> str:
     """Bind and give the address that it became; the one place where zmq's refusals become ours."""
+    if keeper is not None:
+        address = keeper.policy.address_to_bind(address, key)
+        secure_server(socket, keeper)
+    socket.setsockopt(zmq.IPV6, "[" in address)
     try:
         socket.bind(address)
     except zmq.ZMQError as exc:

@@ -23,6 +23,7 @@ VERBS = {
     "pose": "R and t between two cameras from any scene, without a target",
     "run": "run the node: frame pairs in, metric depth out over ZeroMQ",
     "listen": "show the depth frames that a node publishes, and save them",
+    "keys": "make keys, and decide which programs a node lets in",
 }
 
 CAUTION = (

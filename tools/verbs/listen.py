@@ -15,6 +15,7 @@ import numpy as np
 
 from ...node import DepthFrame, DepthSubscriber, NodeError, NoFrameError
 from ..frame_files import FORMATS, save_frame
+from ..key_options import add_key_options, given_keys
 from ..live_line import LiveLine
 
 _LONGEST_WAIT_S = 86_400.0
@@ -47,17 +48,19 @@ def configure(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--timeout", metavar="S", type=_seconds, default=5.0, help="give up after so long a silence (5 s)"
     )
+    add_key_options(parser)
     parser.add_argument("--json", action="store_true", help="print each frame's figures as one line of JSON")
 
 
 def run(arguments: argparse.Namespace) -> int:
     """Listen until enough has come, the node falls silent or the person interrupts."""
     formats = _formats(arguments.formats)
+    keys = given_keys(arguments)
     if arguments.save:
         _make_folder(arguments.save)
     line = LiveLine(sys.stdout)
     try:
-        with DepthSubscriber(arguments.address, timeout=arguments.timeout) as node:
+        with DepthSubscriber(arguments.address, timeout=arguments.timeout, keys=keys) as node:
             for frame in _first(node, arguments.count):
                 if arguments.save:
                     _save(frame, arguments.save, formats)

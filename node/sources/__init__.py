@@ -2,6 +2,8 @@
 
 from .device import DeviceSettings, DeviceSource
 from .folder import FolderSettings, FolderSource
+from .gige import GigeSource
+from .gige_settings import GigeSettings
 from .pace import Pace
 from .protocol import Source, SourceKind
 from .socket import SocketSettings, SocketSource
@@ -10,6 +12,7 @@ from .url import UrlSettings, UrlSource
 BUILT_IN = {
     "device": SourceKind(DeviceSettings, DeviceSource, both=False),
     "folder": SourceKind(FolderSettings, FolderSource, both=True),
+    "gige": SourceKind(GigeSettings, GigeSource, both=False),
     "socket": SourceKind(SocketSettings, SocketSource, both=False),
     "url": SourceKind(UrlSettings, UrlSource, both=False),
 }
@@ -21,6 +24,8 @@ __all__ = [
     "DeviceSource",
     "FolderSettings",
     "FolderSource",
+    "GigeSettings",
+    "GigeSource",
     "Pace",
     "SocketSettings",
     "SocketSource",

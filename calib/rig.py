@@ -129,13 +129,27 @@ class Rig:
         RigFileError
             Where the file is missing, cut short, of another format or version, or holds impossible geometry.
         """
-        content = read_object(path, "rig file", FORMAT, VERSION)
+        return cls._from_object(read_object(path, "rig file", FORMAT, VERSION), str(path))
+
+    @classmethod
+    def from_text(cls, text: str, name: str) -> Rig:
+        """Read what a rig file holds; ``name`` stands in messages.
+
+        Raises
+        ------
+        RigFileError
+            Where the text is cut short, of another format or version, or holds impossible geometry.
+        """
+        return cls._from_object(parse_object(text, name, "rig file", FORMAT, VERSION), name)
+
+    @classmethod
+    def _from_object(cls, content: Mapping[str, Any], name: str) -> Rig:
         try:
             return cls(**_geometry_from(content), notes=content.get("notes", {}))
         except KeyError as exc:
-            raise RigFileError(f"rig file {path} lacks the key {exc}; {FILE_REMEDY}") from exc
+            raise RigFileError(f"rig file {name} lacks the key {exc}; {FILE_REMEDY}") from exc
         except CalibrationError as exc:
-            raise RigFileError(f"rig file {path}: {exc}; {FILE_REMEDY}") from exc
+            raise RigFileError(f"rig file {name}: {exc}; {FILE_REMEDY}") from exc
 
     @classmethod
     def from_opencv(
@@ -303,16 +317,25 @@ def read_object(path: str | os.PathLike[str], kind: str, form: str, version: int
         Where the file is missing, cut short, or of another format or version; ``kind`` is what the message calls it.
     """
     try:
-        content = json.loads(Path(path).read_text(encoding="utf-8"))
+        text = Path(path).read_text(encoding="utf-8")
     except OSError as exc:
         raise RigFileError(f"cannot read {kind} {path}: {exc.strerror}; expected a file that calibrate wrote") from exc
-    except (ValueError, RecursionError) as exc:
+    except ValueError as exc:
         raise RigFileError(f"{kind} {path} is not whole JSON ({exc}); {FILE_REMEDY}") from exc
+    return parse_object(text, str(path), kind, form, version)
+
+
+def parse_object(text: str, name: str, kind: str, form: str, version: int) -> dict[str, Any]:
+    """Do as :func:`read_object` with a text at hand, which messages call ``name``."""
+    try:
+        content = json.loads(text)
+    except (ValueError, RecursionError) as exc:
+        raise RigFileError(f"{kind} {name} is not whole JSON ({exc}); {FILE_REMEDY}") from exc
     if not isinstance(content, dict) or content.get("format") != form:
-        raise RigFileError(f'{path} is no {kind}; expected a JSON object with "format": "{form}"')
+        raise RigFileError(f'{name} is no {kind}; expected a JSON object with "format": "{form}"')
     if content.get("version") != version:
         raise RigFileError(
-            f"{kind} {path} has version {content.get('version')!r}; this program reads version {version}: "
+            f"{kind} {name} has version {content.get('version')!r}; this program reads version {version}: "
             "read it with the program that wrote it, or calibrate again"
         )
     return content

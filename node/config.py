@@ -5,15 +5,17 @@ Every refusal names the key's path, the value given and what is allowed.
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Annotated, Any, TypeVar
+from typing import Annotated, Any, Literal, TypeVar
 
 from msgspec import Meta, Struct
 
 from ..calib.tables import checked_table, read_toml
+from .access import AccessConfig
 from .errors import ConfigError, NodeError
 from .match import MatcherName, MatchSettings
 from .pairing import PairingSettings
@@ -76,6 +78,12 @@ class PublishConfig(Struct, frozen=True, kw_only=True, forbid_unknown_fields=Tru
         return Packing(pixels=self.pixels, depth_unit_m=self.depth_unit_m)
 
 
+class ControlConfig(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
+    """``[control]``: where requests come in; an ``address`` of "none" takes none."""
+
+    address: Address | Literal["none"] = "tcp://127.0.0.1:7603"
+
+
 class _Tables(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
     """The file's top level."""
 
@@ -87,6 +95,8 @@ class _Tables(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
     pairing: dict[str, Any] = {}
     watch: dict[str, Any] = {}
     trust: dict[str, Any] = {}
+    access: dict[str, Any] = {}
+    control: dict[str, Any] = {}
 
 
 class _SourceTables(Struct, frozen=True, kw_only=True):
@@ -158,7 +168,7 @@ class NodeConfig:
         The rig file.
     sources : SourcesConfig
         Where pairs come from.
-    volume, match, publish, trust
+    volume, match, publish, trust, access, control
         Their tables.
     """
 
@@ -168,6 +178,13 @@ class NodeConfig:
     match: MatchConfig
     publish: PublishConfig
     trust: TrustConfig
+    access: AccessConfig
+    control: ControlConfig
+
+    @property
+    def base(self) -> Path:
+        """Folder of the configuration file."""
+        return self.sources.base
 
 
 def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig:
@@ -239,8 +256,10 @@ def parse_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], ba
         match=_match(top.match),
         publish=_checked(top.publish, PublishConfig, "publish"),
         trust=_trust(top.trust),
+        access=_checked(top.access, AccessConfig, "access"),
+        control=_checked(top.control, ControlConfig, "control"),
     )
-    _check_publish(config.publish, volume)
+    _check_publish(config.publish, config.control, volume)
     return config
 
 
@@ -333,9 +352,11 @@ def _match(table: Mapping[str, Any]) -> MatchConfig:
     return match
 
 
-def _check_publish(publish: PublishConfig, volume: VolumeConfig) -> None:
-    if publish.depth == publish.status and not publish.depth.endswith((":0", ":*")):
-        raise ConfigError(f"publish.depth and publish.status are both {publish.depth}; expected two addresses")
+def _check_publish(publish: PublishConfig, control: ControlConfig, volume: VolumeConfig) -> None:
+    addresses = {"publish.depth": publish.depth, "publish.status": publish.status, "control.address": control.address}
+    for (first, one), (second, other) in itertools.combinations(addresses.items(), 2):
+        if one == other and not one.endswith((":0", ":*")):
+            raise ConfigError(f"{first} and {second} are both {one}; expected two addresses")
     if volume.far_m > publish.packing.range_m:
         raise ConfigError(
             f"volume.far_m is {volume.far_m:g}, beyond the {publish.packing.range_m:g} m that uint16 counts of "

@@ -8,6 +8,9 @@
     ├── ``PairError``: this one pair is unusable; the node counts it and goes on
     ├── ``AccessError``: a key is missing, wrong or not allowed; waiting does not help
     ├── ``WireError``: bytes that are no message of ours
+    ├── ``NotNowError``: a request that makes no sense in the node's present state
+    ├── ``RefusedError``: a node will not do what it was asked; ``kind`` says why, for programs
+    ├── ``NoReplyError``: a node does not answer in time
     └── ``NoFrameError``: nothing arrived in time; the peer or the network, not the caller, is at fault
 """
 
@@ -49,3 +52,25 @@ class WireError(NodeError):
 
 class NoFrameError(NodeError, TimeoutError):
     """No frame arrived within the time allowed."""
+
+
+class NotNowError(NodeError):
+    """A request makes no sense in the node's present state."""
+
+
+class RefusedError(NodeError):
+    """A node will not do what it was asked.
+
+    Attributes
+    ----------
+    kind : str
+        Why, in one or two words for programs; ``WIRE.md`` lists them.
+    """
+
+    def __init__(self, kind: str, message: str) -> None:
+        super().__init__(message)
+        self.kind = kind
+
+
+class NoReplyError(NodeError, TimeoutError):
+    """A node did not answer within the time allowed."""

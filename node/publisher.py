@@ -74,8 +74,8 @@ class Publisher:
         self._depth = _socket(self._context, zmq.XPUB, _QUEUED_FRAMES)
         self._status = _socket(self._context, zmq.PUB, _QUEUED_STATUS)
         try:
-            self.depth_address = _bind(self._depth, depth_address, "publish.depth", keeper)
-            self.status_address = _bind(self._status, status_address, "publish.status", keeper)
+            self.depth_address = bind(self._depth, depth_address, "publish.depth", keeper)
+            self.status_address = bind(self._status, status_address, "publish.status", keeper)
         except NodeError:
             self.close()
             raise
@@ -162,7 +162,7 @@ _REFUSALS = {
 }
 
 
-def _bind(socket: zmq.Socket[bytes], address: str, key: str, keeper: Gatekeeper | None) -> str:
+def bind(socket: zmq.Socket[bytes], address: str, key: str, keeper: Gatekeeper | None) -> str:
     """Bind and give the address that it became; the one place where zmq's refusals become ours."""
     if keeper is not None:
         address = keeper.policy.address_to_bind(address, key)

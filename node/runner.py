@@ -9,24 +9,27 @@ import logging
 import threading
 import time
 from collections.abc import Callable, Mapping
-from contextlib import closing
-from dataclasses import replace
-from typing import Any, Protocol
-
-from numpy.typing import NDArray
+from contextlib import ExitStack, closing
+from dataclasses import dataclass, replace
+from typing import Any
 
 from ..calib import Rig
+from .access import AccessPolicy
 from .camera_report import CameraState
+from .commands import node_commands
 from .config import NodeConfig
+from .control import ControlServer
 from .engine import DepthEngine
-from .errors import UNKNOWN_SCALE, NodeError, PairError
+from .errors import UNKNOWN_SCALE, NodeError, NotNowError, PairError
 from .feed import Feed
 from .frame import DepthFrame
+from .gatekeeper import Gatekeeper
 from .hand_over import PairFeed, read_ahead
 from .publisher import Publisher
 from .shot import CameraName, LostShot, Pair
 from .sources import SourceKind
 from .status import NodeStatus, Tally
+from .steering import Engine, Equipment, Steering
 from .trust import TrustConfig, judge, skew_depth_error_m, skew_reasons
 
 _STATUS_EVERY_S = 1.0
@@ -34,23 +37,10 @@ _COMPLAIN_EVERY_S = 5.0
 _BAD_PAIR_PAUSE_S = 0.02
 """Rest after a refused pair, which took no time to compute: a folder full of them costs no core."""
 
+_PAUSE_TICK_S = 0.05
+
 _LAST_WORDS_S = 0.2
 """How long the last frames of a source that ended may take to leave."""
-
-
-class Engine(Protocol):
-    """What the node needs of a depth engine."""
-
-    def compute(
-        self,
-        image_a: NDArray[Any],
-        image_b: NDArray[Any],
-        *,
-        stamp_ns: int = 0,
-        skew_ns: int = 0,
-        picture: bool = False,
-    ) -> DepthFrame:
-        """Make a depth frame of one pair, or raise :class:`PairError`."""
 
 
 class Node:
@@ -74,6 +64,8 @@ class Node:
         Called with each status, once a second.
     judge_frame : callable, optional
         Says of a frame how far it may be trusted.
+    steering : Steering, optional
+        What other threads tell the node.
     """
 
     def __init__(
@@ -87,13 +79,14 @@ class Node:
         log: logging.Logger,
         on_status: Callable[[NodeStatus], None] | None = None,
         judge_frame: Callable[[DepthFrame], DepthFrame] = lambda frame: frame,
+        steering: Steering | None = None,
     ) -> None:
         self._feed = feed
-        self._engine = engine
+        self._equipment = Equipment(engine, fingerprint, judge_frame)
+        self._steering = steering
         self._publisher = publisher
         self._picture = picture
         self._on_status = on_status
-        self._judge_frame = judge_frame
         self._tally = Tally(publisher.session, fingerprint)
         self._lost_log = _RationedLog(log, "lost")
         self._bad_log = _RationedLog(log, "bad pair")
@@ -107,11 +100,15 @@ class Node:
             for pair in pairs:
                 if pair is not None:
                     self._process(pair, stop)
-                if time.monotonic() >= next_status_s:
-                    next_status_s = max(next_status_s + _STATUS_EVERY_S, time.monotonic())
-                    self._tell_status()
+                next_status_s = self._tell_status_at(next_status_s)
+                while self._paused and not stop.wait(_PAUSE_TICK_S):
+                    next_status_s = self._tell_status_at(next_status_s)
         self._tell_status()
         return self._tally.summary(self._feed.view())
+
+    @property
+    def _paused(self) -> bool:
+        return self._steering is not None and self._steering.paused
 
     def _lost(self, lost: LostShot) -> None:
         self._tally.add_lost(lost.reason)
@@ -119,8 +116,12 @@ class Node:
             self._lost_log.warn(lost.detail)
 
     def _process(self, pair: Pair, stop: threading.Event) -> None:
+        waiting = None if self._steering is None else self._steering.take_equipment()
+        if waiting is not None:
+            self._equipment = waiting
+            self._tally.rig = waiting.fingerprint
         try:
-            frame = self._engine.compute(
+            frame = self._equipment.engine.compute(
                 pair.a.pixels, pair.b.pixels, stamp_ns=pair.a.stamp_ns, skew_ns=pair.skew_ns, picture=self._picture
             )
         except PairError as exc:
@@ -129,10 +130,17 @@ class Node:
             stop.wait(_BAD_PAIR_PAUSE_S)
             return
         start_s = time.perf_counter()
-        self._publisher.send_depth(self._judge_frame(frame))
+        self._publisher.send_depth(self._equipment.judge_frame(frame))
         stages_ms = {**frame.stages_ms, "publish": (time.perf_counter() - start_s) * 1e3}
         latency_ms = (time.time_ns() - frame.stamp_ns) / 1e6 if frame.stamp_ns else None
         self._tally.add_published(latency_ms, stages_ms)
+
+    def _tell_status_at(self, due_s: float) -> float:
+        """Tell the status if it is due; give when the next one is."""
+        if time.monotonic() < due_s:
+            return due_s
+        self._tell_status()
+        return max(due_s + _STATUS_EVERY_S, time.monotonic())
 
     def _tell_status(self) -> None:
         status = self._tally.status(self._feed.view())
@@ -212,13 +220,23 @@ def make_feed(config: NodeConfig, kinds: Mapping[str, SourceKind], rig: Rig, log
     )
 
 
+@dataclass(frozen=True, eq=False)
+class NodeAddresses:
+    """Where a node that is ready can be reached, and by whom."""
+
+    rig: Rig
+    publisher: Publisher
+    control: ControlServer | None
+    policy: AccessPolicy
+
+
 def run_node(
     config: NodeConfig,
     kinds: Mapping[str, SourceKind],
     stop: threading.Event,
     *,
     log: logging.Logger,
-    on_ready: Callable[[Rig, Publisher], None] | None = None,
+    on_ready: Callable[[NodeAddresses], None] | None = None,
     on_status: Callable[[NodeStatus], None] | None = None,
     make_engine: Callable[[Rig, NodeConfig], Engine] = depth_engine,
 ) -> NodeStatus:
@@ -252,26 +270,87 @@ def run_node(
         Where the rig file cannot be used.
     """
     rig = Rig.load(config.rig)
-    # The sockets come first: a port in use must show at once, not after seconds of preparation.
-    with Publisher(config.publish.depth, config.publish.status, packing=config.publish.packing) as publisher:
+    policy = AccessPolicy.from_config(config.access, config.base)
+    steering = Steering(stop)
+    last: list[NodeStatus] = []
+
+    def note(status: NodeStatus) -> None:
+        last[:] = [status]
+        if on_status:
+            on_status(status)
+
+    def equip(other: Rig) -> Equipment:
+        check_same_cameras(other, rig)
+        log.info("rig %s is taken in place of %s", other.fingerprint, rig.fingerprint)
+        return equipment(other, config, make_engine)
+
+    commands = node_commands(steering, status=lambda: last[0] if last else None, equip=equip, record=no_recording)
+    with ExitStack() as stack:
+        # The sockets come first: a port in use must show at once, not after seconds of preparation.
+        keeper = stack.enter_context(Gatekeeper(policy, log=log))
+        publisher = stack.enter_context(
+            Publisher(config.publish.depth, config.publish.status, packing=config.publish.packing, keeper=keeper)
+        )
+        control = None
+        if config.control.address != "none":
+            control = ControlServer(config.control.address, keeper, commands, log=log)
+            stack.callback(control.close)
         if on_ready:
-            on_ready(rig, publisher)
+            on_ready(NodeAddresses(rig, publisher, control, policy))
         feed = make_feed(config, kinds, rig, log)
-        engine = make_engine(rig, config)
+        first = equipment(rig, config, make_engine)
+        if control is not None:
+            control.start()
         _await_subscriber(config.publish.wait_for_subscriber_s, publisher, stop, log)
         node = Node(
             feed,
-            engine,
+            first.engine,
             publisher,
-            fingerprint=rig.fingerprint,
+            fingerprint=first.fingerprint,
             picture=config.publish.picture,
             log=log,
-            on_status=on_status,
-            judge_frame=lambda frame: judged(frame, rig.baseline_m, config.trust),
+            on_status=note,
+            judge_frame=first.judge_frame,
+            steering=steering,
         )
         summary = node.run(stop)
         publisher.close(linger_s=0.0 if stop.is_set() else _LAST_WORDS_S)
     return summary
+
+
+def equipment(rig: Rig, config: NodeConfig, make_engine: Callable[[Rig, NodeConfig], Engine]) -> Equipment:
+    """Make what a rig comes to in a node of this configuration.
+
+    Raises
+    ------
+    NodeError
+        Where the rig's scale is not known, or it does not see the volume.
+    """
+    return Equipment(
+        make_engine(rig, config), rig.fingerprint, lambda frame: judged(frame, rig.baseline_m, config.trust)
+    )
+
+
+def check_same_cameras(rig: Rig, running: Rig) -> None:
+    """Refuse a rig of other image sizes than those that the cameras were found to give.
+
+    Raises
+    ------
+    NodeError
+        Where a size differs.
+    """
+    for name, camera, expected in (("A", rig.a, running.a), ("B", rig.b, running.b)):
+        given, wanted = (camera.width, camera.height), (expected.width, expected.height)
+        if given != wanted:
+            raise NodeError(
+                f"the rig's camera {name} gives {given[0]} x {given[1]} pixels; expected {wanted[0]} x {wanted[1]} as the "
+                "running node's: solve a rig for these cameras at this size, or start the node anew"
+            )
+
+
+def no_recording(on: bool) -> Mapping[str, Any]:  # noqa: FBT001 - the value of a request
+    """Refuse to record, where nothing says where to."""
+    raise NotNowError(f"record is asked to be {'on' if on else 'off'}, but this node has no [record]; give it one")
 
 
 def _await_subscriber(timeout_s: float, publisher: Publisher, stop: threading.Event, log: logging.Logger) -> None:

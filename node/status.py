@@ -108,7 +108,7 @@ class Tally:
 
     def __init__(self, session: str, rig: str, *, clock: Callable[[], float] = time.monotonic) -> None:
         self._session = session
-        self._rig = rig
+        self.rig = rig
         self._clock = clock
         self._lock = threading.Lock()
         self._run = _Span(clock())
@@ -164,7 +164,7 @@ class Tally:
         p50, p90, p99 = span.percentiles_ms()
         return NodeStatus(
             session=self._session,
-            rig=self._rig,
+            rig=self.rig,
             stamp_ns=time.time_ns(),
             uptime_s=now_s - self._run.since_s,
             rate_in_hz=span.paired / length_s,

@@ -29,7 +29,7 @@ class PlaneBench:
         path.write_text(
             f'rig = "bench.rig.json"\n[volume]\n{volume}\n'
             f'[source]\nkind = "folder"\na = "a*.png"\nb = "b*.png"\n{source}\n'
-            f'[publish]\ndepth = "tcp://127.0.0.1:0"\nstatus = "tcp://127.0.0.1:0"\n{publish}\n'
+            f'[publish]\ndepth = "tcp://127.0.0.1:0"\nstatus = "tcp://127.0.0.1:0"\n{publish}\n[control]\naddress = "tcp://127.0.0.1:0"\n'
         )
         return path
 

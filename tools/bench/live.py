@@ -16,6 +16,7 @@ import sys
 import tempfile
 import threading
 import time
+from collections import deque
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
 from dataclasses import asdict, dataclass
@@ -148,7 +149,7 @@ def prepare_folder(folder: Path, tables: dict[str, str]) -> Path:
         f"[volume]\nnear_m = {bench.cell.near_m}\nfar_m = {bench.cell.far_m}\n"
         + "".join(f"[source.{name}]\n{table}" for name, table in tables.items())
         + "[pairing]\ntolerance_ms = 17\n"
-        '[publish]\ndepth = "tcp://127.0.0.1:0"\nstatus = "tcp://127.0.0.1:0"\n',
+        '[publish]\ndepth = "tcp://127.0.0.1:0"\nstatus = "tcp://127.0.0.1:0"\n[control]\naddress = "tcp://127.0.0.1:0"\n',
         encoding="utf-8",
     )
     return path
@@ -164,10 +165,13 @@ def running_node(config: Path) -> Iterator[tuple[int, str, str]]:
             depth = next(line.split()[-1] for line in lines if "depth on" in line)
             status = next(line.split()[-1] for line in lines if "status on" in line)
             # Somebody has to read on, or a talkative node would wait for room in the pipe.
-            threading.Thread(target=lambda: [None for _ in lines], daemon=True).start()
+            drain = threading.Thread(target=lambda: deque(lines, maxlen=0), daemon=True)
+            drain.start()
             yield process.pid, depth, status
         finally:
             process.terminate()
+            process.wait()
+            drain.join()
 
 
 class Reader(threading.Thread):

@@ -28,7 +28,7 @@ from skewline.tools.bench.pairing_watch import Watcher, best_pairing
 EPOCH_NS = 1_700_000_000_000_000_000
 MS = 1_000_000
 PIXELS = np.zeros((1, 1), np.uint8)
-quick = settings(derandomize=True, database=None, deadline=None, max_examples=100)
+quick = settings(derandomize=True, database=None, deadline=None, max_examples=70)
 few = settings(quick, max_examples=15)
 
 
@@ -75,7 +75,7 @@ def clock_set(shots: Sequence[Shot], by_ms: float, start: int) -> list[Shot]:
 
 # ------------------------------------------------------------------------------------------------ against the definition
 
-rising = st.lists(st.integers(0, 25), max_size=14).map(lambda gaps: [int(at) for at in np.cumsum(gaps)])
+rising = st.lists(st.integers(0, 25), max_size=30).map(lambda gaps: [int(at) for at in np.cumsum(gaps)])
 tolerances = st.integers(0, 30)
 seeds = st.integers(0, 10**6).map(random.Random)
 
@@ -264,6 +264,23 @@ def test_pairs_within_one_another_are_not_given_for_order_is_kept() -> None:
     assert in_ms(decided) == [("b", NO_PARTNER), (2, 1), (3, 6)]
 
 
+def test_of_two_partners_as_near_the_earlier_is_taken() -> None:
+    machine = pairer(live=False)
+
+    assert in_ms(add_all(machine, [shot("b", 0), shot("a", 5), shot("b", 10), shot("a", 40)])) == [
+        (5, 0),
+        ("b", NO_PARTNER),
+    ]
+
+
+def test_a_replay_does_not_count_on_regular_spacings() -> None:
+    machine = pairer(live=False)
+    add_all(machine, by_arrival(steady("a", 40, 12), steady("b", 40, 12)))
+
+    assert in_ms(add_all(machine, [shot("a", 480), shot("b", 488), shot("a", 490)])) == []
+    assert in_ms(machine.flush()) == [("a", NO_PARTNER), (490, 488)]
+
+
 def test_an_image_out_of_order_is_sorted_into_place_and_one_older_than_what_was_decided_is_late() -> None:
     machine = pairer(live=False)
 
@@ -403,7 +420,9 @@ def test_a_network_that_stalls_for_three_seconds_is_no_clock_jump(catching_up_ms
 
     decided = add_all(machine, by_arrival(stalled, steady("b", 33.3, 330))) + machine.flush()
 
-    assert {item.reason for item in decided if isinstance(item, LostShot)} == {NO_OFFSET, NO_PARTNER}
+    lost = Counter(item.reason for item in decided if isinstance(item, LostShot))
+    assert lost.keys() == {NO_OFFSET, NO_PARTNER}
+    assert lost[NO_OFFSET] == 39, "the offset was looked for again"
     assert isinstance(decided[-1], Pair)
 
 

@@ -75,6 +75,8 @@ def checked_table(
         given: Any = table
         for member, index in keys:
             given = given[member] if member else given[int(index)]
+        if not keys:  # what the value class itself finds wrong with the whole
+            raise error(f"{name + ': ' if name else ''}{str(exc).partition(' - at')[0]}") from exc
         first = keys[0][0]
         place = first + "".join(f"[{index}]" for _, index in keys[1:])
         raise error(f"{_path(name, place)} is {given!r}; expected {_describe(allowed[first])}") from exc

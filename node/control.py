@@ -165,8 +165,8 @@ class ControlServer:
             self._socket.close(100)
 
     def _handle(self, parts: list[bytes], received_ns: int) -> None:
-        # REQ puts an empty part before the body, DEALER none.
-        if len(parts) not in (2, 3) or (len(parts) == 3 and parts[1]):
+        # REQ puts an empty part before the body, and a number of its own before that where it is told to; DEALER nothing.
+        if len(parts) not in (2, 3, 4) or (len(parts) > 2 and parts[-2]):
             self.refused += 1
             return
         peer, body = parts[0], parts[-1]
@@ -201,7 +201,9 @@ class ControlServer:
             values = msgspec.msgpack.decode(request.values, type=command.values)
         except (msgspec.DecodeError, RecursionError) as exc:
             raise _Refusal(
-                request.number, "bad values", f"the values of {request.ask} do not fit ({exc}); expected as WIRE.md says"
+                request.number,
+                "bad values",
+                f"the values of {request.ask} do not fit ({exc}); expected as WIRE.md says",
             ) from exc
         try:
             given = dict(command.act(values))

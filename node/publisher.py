@@ -94,14 +94,15 @@ class Publisher:
             warnings.warn("a Publisher was dropped unclosed; use it in a with statement", ResourceWarning, stacklevel=2)
             self.close()
 
-    def send_depth(self, frame: DepthFrame) -> DepthFrame:
-        """Send one frame under the next sequence number and this session's name; give it back as it was sent."""
+    def send_depth(self, frame: DepthFrame) -> tuple[DepthFrame, bytes]:
+        """Send one frame under the next sequence number and this session's name; give it back as it was sent, and its bytes."""
         sent = replace(frame, sequence=self._sequence, session=self.session, published_ns=time.time_ns())
         self._turn_out_revoked()
         self._hear_subscribers()
-        self._depth.send(encode_depth(sent, self._packing), zmq.NOBLOCK)
+        message = encode_depth(sent, self._packing)
+        self._depth.send(message, zmq.NOBLOCK)
         self._sequence += 1
-        return sent
+        return sent, message
 
     def send_status(self, status: NodeStatus) -> None:
         """Send one status message."""

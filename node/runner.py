@@ -11,7 +11,8 @@ import time
 from collections.abc import Callable, Mapping
 from contextlib import ExitStack, closing
 from dataclasses import dataclass, replace
-from typing import Any
+
+from msgspec import structs
 
 from ..calib import Rig
 from .access import AccessPolicy
@@ -20,13 +21,14 @@ from .commands import node_commands
 from .config import NodeConfig
 from .control import ControlServer
 from .engine import DepthEngine
-from .errors import UNKNOWN_SCALE, NodeError, NotNowError, PairError
+from .errors import UNKNOWN_SCALE, NodeError, PairError
 from .feed import Feed
 from .frame import DepthFrame
 from .gatekeeper import Gatekeeper
 from .hand_over import PairFeed, read_ahead
 from .publisher import Publisher
-from .shot import CameraName, LostShot, Pair
+from .record_switch import RecordSwitch
+from .shot import CameraName, LostShot, Pair, Shot
 from .sources import SourceKind
 from .status import NodeStatus, Tally
 from .steering import Engine, Equipment, Steering
@@ -66,6 +68,10 @@ class Node:
         Says of a frame how far it may be trusted.
     steering : Steering, optional
         What other threads tell the node.
+    access : str
+        Who may connect, in words.
+    recorder : RecordSwitch, optional
+        Keeps what is published, when it is on.
     """
 
     def __init__(
@@ -80,8 +86,12 @@ class Node:
         on_status: Callable[[NodeStatus], None] | None = None,
         judge_frame: Callable[[DepthFrame], DepthFrame] = lambda frame: frame,
         steering: Steering | None = None,
+        access: str = "",
+        recorder: RecordSwitch | None = None,
     ) -> None:
         self._feed = feed
+        self._access = access
+        self._recorder = recorder or RecordSwitch()
         self._equipment = Equipment(engine, fingerprint, judge_frame)
         self._steering = steering
         self._publisher = publisher
@@ -104,7 +114,10 @@ class Node:
                 while self._paused and not stop.wait(_PAUSE_TICK_S):
                     next_status_s = self._tell_status_at(next_status_s)
         self._tell_status()
-        return self._tally.summary(self._feed.view())
+        return self._complete(self._tally.summary(self._feed.view()))
+
+    def _complete(self, status: NodeStatus) -> NodeStatus:
+        return structs.replace(status, paused=self._paused, access=self._access, recording=self._recorder.report())
 
     @property
     def _paused(self) -> bool:
@@ -130,7 +143,8 @@ class Node:
             stop.wait(_BAD_PAIR_PAUSE_S)
             return
         start_s = time.perf_counter()
-        self._publisher.send_depth(self._equipment.judge_frame(frame))
+        sent, message = self._publisher.send_depth(self._equipment.judge_frame(frame))
+        self._recorder.keep_depth(message, sent.stamp_ns)
         stages_ms = {**frame.stages_ms, "publish": (time.perf_counter() - start_s) * 1e3}
         latency_ms = (time.time_ns() - frame.stamp_ns) / 1e6 if frame.stamp_ns else None
         self._tally.add_published(latency_ms, stages_ms)
@@ -143,7 +157,7 @@ class Node:
         return max(due_s + _STATUS_EVERY_S, time.monotonic())
 
     def _tell_status(self) -> None:
-        status = self._tally.status(self._feed.view())
+        status = self._complete(self._tally.status(self._feed.view()))
         self._publisher.send_status(status)
         if self._on_status:
             self._on_status(status)
@@ -198,8 +212,14 @@ def judged(frame: DepthFrame, baseline_m: float, limits: TrustConfig) -> DepthFr
     )
 
 
-def make_feed(config: NodeConfig, kinds: Mapping[str, SourceKind], rig: Rig, log: logging.Logger) -> Feed:
-    """Make the feed that the configuration asks for, of cameras as large as the rig's.
+def make_feed(
+    config: NodeConfig,
+    kinds: Mapping[str, SourceKind],
+    rig: Rig,
+    log: logging.Logger,
+    tap: Callable[[Shot], None] = lambda _: None,
+) -> Feed:
+    """Make the feed that the configuration asks for, of cameras as large as the rig's; ``tap`` sees every image.
 
     Raises
     ------
@@ -217,6 +237,7 @@ def make_feed(config: NodeConfig, kinds: Mapping[str, SourceKind], rig: Rig, log
         config.sources.watch,
         sizes={"a": (rig.a.width, rig.a.height), "b": (rig.b.width, rig.b.height)},
         tell=tell,
+        tap=tap,
     )
 
 
@@ -272,6 +293,7 @@ def run_node(
     rig = Rig.load(config.rig)
     policy = AccessPolicy.from_config(config.access, config.base)
     steering = Steering(stop)
+    recorder = RecordSwitch()
     last: list[NodeStatus] = []
 
     def note(status: NodeStatus) -> None:
@@ -284,7 +306,7 @@ def run_node(
         log.info("rig %s is taken in place of %s", other.fingerprint, rig.fingerprint)
         return equipment(other, config, make_engine)
 
-    commands = node_commands(steering, status=lambda: last[0] if last else None, equip=equip, record=no_recording)
+    commands = node_commands(steering, status=lambda: last[0] if last else None, equip=equip, record=recorder.turn)
     with ExitStack() as stack:
         # The sockets come first: a port in use must show at once, not after seconds of preparation.
         keeper = stack.enter_context(Gatekeeper(policy, log=log))
@@ -297,7 +319,8 @@ def run_node(
             stack.callback(control.close)
         if on_ready:
             on_ready(NodeAddresses(rig, publisher, control, policy))
-        feed = make_feed(config, kinds, rig, log)
+        stack.callback(recorder.close)
+        feed = make_feed(config, kinds, rig, log, recorder.keep)
         first = equipment(rig, config, make_engine)
         if control is not None:
             control.start()
@@ -312,6 +335,8 @@ def run_node(
             on_status=note,
             judge_frame=first.judge_frame,
             steering=steering,
+            access=policy.describe(),
+            recorder=recorder,
         )
         summary = node.run(stop)
         publisher.close(linger_s=0.0 if stop.is_set() else _LAST_WORDS_S)
@@ -346,11 +371,6 @@ def check_same_cameras(rig: Rig, running: Rig) -> None:
                 f"the rig's camera {name} gives {given[0]} x {given[1]} pixels; expected {wanted[0]} x {wanted[1]} as the "
                 "running node's: solve a rig for these cameras at this size, or start the node anew"
             )
-
-
-def no_recording(on: bool) -> Mapping[str, Any]:  # noqa: FBT001 - the value of a request
-    """Refuse to record, where nothing says where to."""
-    raise NotNowError(f"record is asked to be {'on' if on else 'off'}, but this node has no [record]; give it one")
 
 
 def _await_subscriber(timeout_s: float, publisher: Publisher, stop: threading.Event, log: logging.Logger) -> None:

@@ -23,6 +23,31 @@ _REMEMBERED = 10_000
 """Frames that the figures of a whole run look back on: enough for a p99, and bounded for a run of months."""
 
 
+class RecorderReport(Struct, frozen=True, kw_only=True):
+    """How a recording stands.
+
+    Attributes
+    ----------
+    on : bool
+        Whether what comes is still kept.
+    file : str
+        The segment that is or was written last.
+    messages, bytes : int
+        Written so far, in all segments.
+    dropped : int
+        Images and depth frames that were to be kept and were not.
+    reason : str
+        Why it stopped; empty while it is on.
+    """
+
+    on: bool
+    file: Annotated[str, Meta(max_length=4096)]
+    messages: Count
+    bytes: Count
+    dropped: Count
+    reason: Annotated[str, Meta(max_length=1000)]
+
+
 class NodeStatus(Struct, frozen=True, kw_only=True):
     """Figures of a node: counts since its start, rates and times over the last second or so (or over the whole run).
 
@@ -39,7 +64,7 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
     paired, published : int
         Pairs that came from the source, and frames published.
     dropped_busy : int
-        Good pairs dropped because the node was busy with an older one and the source does not wait.
+        Good pairs dropped because the node was busy with an older one, or paused, and the source does not wait.
     lost : mapping of str to int
         Images that came to nothing, by reason: those that a source could not give, and those without a partner.
     bad_pairs : int
@@ -55,6 +80,12 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
         How cameras ``a`` and ``b`` stand.
     clock_offset_ms, clock_offset_sigma_ms : float or None
         B's clock minus A's, as given or estimated, and the estimate's standard deviation; None where not known.
+    paused : bool
+        Whether the node was told to publish nothing until it is told to go on.
+    recording : RecorderReport or None
+        How the recorder stands; None where the node was told to record nothing since it began.
+    access : str
+        Who may connect, in words.
     """
 
     session: Text
@@ -76,6 +107,9 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
     cameras: Annotated[dict[Text, CameraReport], Meta(max_length=16)] = {}
     clock_offset_ms: float | None = None
     clock_offset_sigma_ms: Amount | None = None
+    paused: bool = False
+    recording: RecorderReport | None = None
+    access: Text = ""
 
 
 class _Span:

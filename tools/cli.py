@@ -22,6 +22,7 @@ VERBS = {
     "calibrate": "intrinsics of both cameras and R, t between them from views of a target",
     "pose": "R and t between two cameras from any scene, without a target",
     "run": "run the node: frame pairs in, metric depth out over ZeroMQ",
+    "control": "ask a running node: status, pause, resume, record, another rig, stop",
     "listen": "show the depth frames that a node publishes, and save them",
     "keys": "make keys, and decide which programs a node lets in",
 }

@@ -14,8 +14,7 @@ from scripted_source import SIZE, ScriptedCamera
 from skewline.calib import Camera, Rig
 from skewline.node import DepthFrame, DepthSubscriber, NodeStatus, NoFrameError
 from skewline.node.config import load_config
-from skewline.node.publisher import Publisher
-from skewline.node.runner import run_node
+from skewline.node.runner import NodeAddresses, run_node
 from skewline.node.sources import SourceKind
 
 LOG = logging.Logger("quiet")
@@ -25,6 +24,7 @@ volume = { near_m = 0.4, far_m = 1.2 }
 source = { a = { kind = "scripted" }, b = { kind = "scripted" } }
 watch = { stall_s = 0.3, retry_s = 0.05, retry_most_s = 0.2 }
 publish = { depth = "tcp://127.0.0.1:0", status = "tcp://127.0.0.1:0" }
+control = { address = "tcp://127.0.0.1:0" }
 trust = { scene_speed_m_s = 1.0 }
 pairing = { offset_ms = 4.0 }
 """
@@ -71,13 +71,15 @@ class LiveNode:
         self.cameras = {"a": ScriptedCamera("a"), "b": ScriptedCamera("b")}
         kinds = {"scripted": SourceKind(Nothing, lambda _settings, _base, names: self.cameras[names[0]], both=False)}
         self.statuses: list[NodeStatus] = []
-        self.address = ""
+        self.address = self.control_address = ""
         self.ready = threading.Event()
         self.stop = threading.Event()
         config = load_config(folder / "node.toml", kinds)
 
-        def on_ready(_rig: Rig, publisher: Publisher) -> None:
-            self.address = publisher.depth_address
+        def on_ready(addresses: NodeAddresses) -> None:
+            self.address = addresses.publisher.depth_address
+            assert addresses.control is not None
+            self.control_address = addresses.control.address
             self.ready.set()
 
         self.thread = threading.Thread(

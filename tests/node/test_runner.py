@@ -16,7 +16,7 @@ from skewline.node.camera_report import FeedView
 from skewline.node.config import load_config
 from skewline.node.hand_over import HandOver
 from skewline.node.publisher import Publisher
-from skewline.node.runner import Node, run_node
+from skewline.node.runner import Node, NodeAddresses, run_node
 from skewline.node.shot import LostShot, Pair, StampedImage
 from skewline.node.sources import BUILT_IN
 from skewline.node.status import Tally
@@ -204,9 +204,9 @@ def test_status_comes_once_a_second_with_counts_rates_and_the_session(plane_benc
             received.extend(node.latest(timeout=30) for _ in range(2))
         stop.set()
 
-    def ready(_rig: object, publisher: Publisher) -> None:
-        addresses.append(publisher.depth_address)
-        threads.append(threading.Thread(target=listen, args=(publisher.status_address,)))
+    def ready(node: NodeAddresses) -> None:
+        addresses.append(node.publisher.depth_address)
+        threads.append(threading.Thread(target=listen, args=(node.publisher.status_address,)))
         threads[0].start()
 
     threads: list[threading.Thread] = []
@@ -249,8 +249,8 @@ def test_a_subscriber_that_is_waited_for_gets_every_frame_of_a_source_that_runs_
                     missed.append(node.missed)
                     return
 
-    def ready(_rig: object, publisher: Publisher) -> None:
-        threads.append(threading.Thread(target=listen, args=(publisher.depth_address,)))
+    def ready(node: NodeAddresses) -> None:
+        threads.append(threading.Thread(target=listen, args=(node.publisher.depth_address,)))
         threads[0].start()
 
     threads: list[threading.Thread] = []

@@ -7,11 +7,9 @@ import logging
 
 import msgspec
 
-from ...calib import Rig
 from ...node import NodeStatus
 from ...node.config import load_config
-from ...node.publisher import Publisher
-from ...node.runner import run_node
+from ...node.runner import NodeAddresses, run_node
 from ..cli import CAUTION
 from ..live_line import LiveLine, make_log, standard_error
 from ..sources import SOURCES
@@ -70,7 +68,11 @@ Two cameras that run free have a source each, and the pictures are paired by the
   [trust]                          # may be left out
   scene_speed_m_s = 0.2            # with a pair's skew it says what error of depth the skew causes
 
-In another terminal: skewline listen tcp://127.0.0.1:7601
+  [access]                         # needed where other hosts shall connect; skewline keys --help
+  key = "keys/bench-node.secret.key"
+  allowed = "keys/allowed"
+
+In another terminal: skewline listen tcp://127.0.0.1:7601, or skewline control tcp://127.0.0.1:7603 pause
 Ctrl-C, SIGINT or SIGTERM ends it within a second, with status 0.
 """
 
@@ -95,7 +97,7 @@ def run(arguments: argparse.Namespace) -> int:
                 SOURCES,
                 stop,
                 log=log,
-                on_ready=lambda rig, publisher: _greet(log, rig, publisher),
+                on_ready=lambda addresses: _greet(log, addresses),
                 on_status=_Display(line, log),
             )
         finally:
@@ -106,11 +108,15 @@ def run(arguments: argparse.Namespace) -> int:
     return 0
 
 
-def _greet(log: logging.Logger, rig: Rig, publisher: Publisher) -> None:
+def _greet(log: logging.Logger, addresses: NodeAddresses) -> None:
     log.info("%s", CAUTION)
-    log.info("rig %s, baseline %.1f mm", rig.fingerprint, rig.baseline_m * 1e3)
-    log.info("depth on %s", publisher.depth_address)
-    log.info("status on %s", publisher.status_address)
+    log.info("rig %s, baseline %.1f mm", addresses.rig.fingerprint, addresses.rig.baseline_m * 1e3)
+    log.info("depth on %s", addresses.publisher.depth_address)
+    log.info("status on %s", addresses.publisher.status_address)
+    if addresses.control is not None:
+        log.info("control on %s", addresses.control.address)
+    level = logging.WARNING if addresses.policy.open_to_all else logging.INFO
+    log.log(level, "may connect: %s", addresses.policy.describe())
 
 
 class _Display:

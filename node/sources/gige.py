@@ -3,7 +3,7 @@
 Stamps. A camera's clock counts from wherever it was switched on; :class:`CameraClock` maps it to Unix time by what
 comes soonest. What comes is an image's first packet, which leaves when the exposure is over and reading out begins. So
 a mapped stamp is taken for the end of the exposure, whether the camera stamps its start (the FrameStart event of the
-GenICam Standard Features Naming Convention) or its end: with a constant exposure, the two differ by a constant, and that
+GenICam Standard Features Naming Convention) or its end: with a constant exposure, the two differ by a constant, which
 is in the offset. The middle is half an exposure earlier. A camera that sends only after the whole image has been read
 out is later by a constant: ``delay_ms`` takes it off.
 """
@@ -117,7 +117,7 @@ class GigeSource:
             self._session = None
 
     def shots(self, stop: threading.Event) -> Iterator[Shot | LostShot]:
-        """Give images as they come; damaged and missing ones are counted as ``missing packets`` and ``missing image``."""
+        """Give images as they come; damaged and missing ones as ``missing packets`` and ``missing image``."""
         session = self._session
         if session is None:
             raise SourceError(f"{self.identity} is not open; expected its images to be read inside its with block")
@@ -162,7 +162,8 @@ class GigeSource:
         while not stop.is_set():
             if session.link.lost.is_set():
                 raise SourceError(
-                    f"{self.identity} fell away: it no longer answers, or another took control; check its power and cable"
+                    f"{self.identity} fell away: it no longer answers, or another program took control of it; "
+                    "expected it to stay: check its power and cable"
                 )
             buffer = session.link.next_buffer(_POP_US)
             if buffer is not None:
@@ -174,8 +175,8 @@ class GigeSource:
                 yield shot
             elif time.monotonic() > silent_until:
                 raise SourceError(
-                    f"{self.identity} was started and no image came for {session.first_image_s:.1f} s; expected some: let "
-                    "the firewall pass UDP from it, try packet_size = 1400, and see that no trigger is waited for"
+                    f"{self.identity} was started and no image came for {session.first_image_s:.1f} s; expected some: "
+                    "let the firewall pass UDP from it, try packet_size = 1400, and see that no trigger is waited for"
                 )
 
     def _shot_of(self, session: _Session, buffer: Any) -> Shot | LostShot:

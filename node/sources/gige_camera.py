@@ -101,8 +101,8 @@ def open_camera(library: Library, name: str) -> Any:
     except library.error as exc:
         there = ", ".join(map(str, found or discover(library))) or "none"
         raise SourceError(
-            f"GigE camera {name!r} cannot be opened ({exc.message}); cameras that answer: {there}; expected one of these: "
-            "check its name, power and cable, and that its address lies in a network of this host"
+            f"GigE camera {name!r} cannot be opened ({exc.message}); cameras that answer: {there}; "
+            "expected one of these: check its name, power and cable, and that its address is in a network of this host"
         ) from exc
     if not controls:
         raise SourceError(
@@ -192,10 +192,11 @@ def _is_address(name: str) -> bool:
 
 
 def _address_among(found: tuple[Found, ...], name: str) -> str:
-    """Give the address of the one camera of this name; the name itself where none has it, for the library may know it."""
+    """Give the address of the one camera of this name; where none has it, the name itself: the library may know it."""
     named = [each for each in found if name in (each.device_id, each.serial, each.mac)]
     if len(named) > 1:
         raise SourceError(
-            f"GigE camera {name!r} is {len(named)} cameras: {', '.join(map(str, named))}; expected one: give its address"
+            f"GigE camera {name!r} is {len(named)} cameras: {', '.join(map(str, named))}; "
+            "expected one: give its address"
         )
     return named[0].address if named else name

@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 
 Layout = Literal["whole", "packed", "p"]
 
-# OpenCV's short names take the pattern's second row, the convention its first: its long names agree with the convention.
+# OpenCV's short names take the pattern's second row, the convention its first; its long names take the first too.
 _MOSAICS = {
     "RG": cv2.COLOR_BayerRGGB2BGR,
     "GR": cv2.COLOR_BayerGRBG2BGR,
@@ -135,8 +135,8 @@ def _cut_rows(data: bytes, width: int, height: int, form: PixelFormat, padding: 
     needed = count * (used + padding)
     if len(data) < needed:
         raise ValueError(
-            f"{len(data)} bytes came; expected {needed} for {width}x{height} pixels of {form.name} and {padding} bytes of "
-            "padding a row"
+            f"{len(data)} bytes came; expected {needed} for {width}x{height} pixels of {form.name} "
+            f"and {padding} bytes of padding a row"
         )
     return np.frombuffer(data, np.uint8, needed).reshape(count, used + padding)[:, :used]
 

@@ -12,12 +12,13 @@ import time
 from collections.abc import Iterator
 from contextlib import closing
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
 from fake_gige import FakeCamera, need_library, other_interface, port_of_our_own
 from skewline.node.errors import ConfigError, SourceError
-from skewline.node.shot import LostShot, Shot
+from skewline.node.shot import CameraName, LostShot, Shot
 from skewline.node.sources import Source
 from skewline.node.sources import gige as gige_module
 from skewline.node.sources.gige import GigeSettings, GigeSource, missing_between
@@ -38,9 +39,10 @@ AS_IT_STARTED = {
 }
 
 
-def source_of(camera: str = HERE, name: str = "a", **settings: object) -> GigeSource:
+def source_of(camera: str = HERE, name: CameraName = "a", **settings: object) -> GigeSource:
     """Make a source that sets all there is, since the camera keeps what another test has set."""
-    return GigeSource(GigeSettings(camera=camera, **{**AS_IT_STARTED, **settings}), Path(), (name,))  # type: ignore[arg-type]
+    every: Any = {**AS_IT_STARTED, **settings}
+    return GigeSource(GigeSettings(camera=camera, **every), Path(), (name,))
 
 
 @pytest.fixture(scope="module")

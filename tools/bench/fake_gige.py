@@ -2,7 +2,8 @@
 
 ``python -m skewline.tools.bench.fake_gige --serial ONE --width 1280 --height 720 --rate 30`` runs one on the loopback
 interface until it is interrupted or the program that started it ends. Port 3956 of an address holds one camera, so a
-second one needs an interface of its own: ``--interface eth0``. It prints ``ready`` and its serial number once it answers.
+second one needs an interface of its own: ``--interface eth0``. It prints ``ready`` and its serial number once it
+answers.
 """
 
 from __future__ import annotations
@@ -33,7 +34,8 @@ def start(library: Library, arguments: argparse.Namespace) -> Any:
     server = aravis.GvFakeCamera.new(arguments.interface, arguments.serial)
     if not server.is_running():
         raise ConfigError(
-            f"no camera can run on interface {arguments.interface!r}; expected one of this host whose UDP port 3956 is free"
+            f"no camera can run on interface {arguments.interface!r}; "
+            "expected one of this host whose UDP port 3956 is free"
         )
     server.set_property("gvsp-lost-ratio", arguments.lost)
     camera = server.get_fake_camera()

@@ -21,7 +21,8 @@ from skewline.node.errors import ConfigError, SourceError
 from skewline.node.shot import CameraName, LostShot, Shot
 from skewline.node.sources import Source
 from skewline.node.sources import gige as gige_module
-from skewline.node.sources.gige import GigeSettings, GigeSource, missing_between
+from skewline.node.sources.gige import GigeSource, missing_between
+from skewline.node.sources.gige_settings import GigeSettings
 from source_suite import SourceSuite, take
 
 HERE = "127.0.0.1"
@@ -132,7 +133,8 @@ def test_a_camera_of_another_program_is_told_as_such(fake: FakeCamera) -> None:
     with source_of() as source:
         assert take(source, 1)
         code = (
-            "from pathlib import Path\nfrom skewline.node.sources.gige import GigeSettings, GigeSource\n"
+            "from pathlib import Path\nfrom skewline.node.sources.gige import GigeSource\n"
+            "from skewline.node.sources.gige_settings import GigeSettings\n"
             f"with GigeSource(GigeSettings(camera={HERE!r}), Path(), ('a',)): pass"
         )
         other = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, timeout=60)

@@ -103,7 +103,7 @@ class Node:
 
     def run(self, stop: threading.Event) -> NodeStatus:
         """Publish until the feed ends or ``stop`` is set; return the figures of the whole run."""
-        next_status_s = time.monotonic() + _STATUS_EVERY_S
+        next_status_s = time.monotonic()  # the first one at once: whoever asks finds a node that answers
         tally = self._tally
         ahead = read_ahead(self._feed, stop, self._lost, on_pair=tally.add_pair, on_drop=tally.add_dropped)
         with closing(ahead) as pairs:  # the reading ends with the loop, however that ends

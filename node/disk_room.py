@@ -93,6 +93,8 @@ class DiskRoom:
         total = self._closed_bytes + open_bytes + more_bytes
         if self._limit_bytes is not None and total > self._limit_bytes:
             return f"the recording has reached its limit, record.limit_gb = {self._limit_bytes / 1e9:g}"
-        if self._free(self._folder) - more_bytes < self._keep_free_bytes:
-            return f"the disk of {self._folder} has no more than record.keep_free_gb = {self._keep_free_bytes / 1e9:g} free"
-        return ""
+        if self._free(self._folder) - more_bytes >= self._keep_free_bytes:
+            return ""
+        if not self._keep_free_bytes:
+            return f"the disk of {self._folder} is full"
+        return f"the disk of {self._folder} has no more than record.keep_free_gb = {self._keep_free_bytes / 1e9:g} free"

@@ -9,18 +9,18 @@ import threading
 import time
 from collections import Counter, deque
 from collections.abc import Callable
-from dataclasses import dataclass
-from datetime import UTC, datetime
+from dataclasses import dataclass, replace
 from pathlib import Path
 from types import TracebackType
 from typing import Self
 
-from .disk_room import DiskRoom, free_bytes
+from .disk_room import free_bytes
 from .errors import NodeError
 from .image_message import encode_image
-from .record_config import RecordConfig, check_record
-from .recording_format import DEPTH_TOPIC, IMAGE_TOPICS, Heading, segment_path, segments_in
-from .segment_writer import OpenFile, RecordedMessage, SegmentWriter, open_new
+from .record_config import RecordConfig
+from .recording_format import DEPTH_TOPIC, IMAGE_TOPICS, Heading
+from .segment_row import SegmentRow
+from .segment_writer import OpenFile, RecordedMessage, open_new
 from .shot import Shot
 
 QUEUE_BYTES = 64_000_000
@@ -96,31 +96,17 @@ class Recorder:
         open_file: OpenFile = open_new,
         free: Callable[[Path], int] = free_bytes,
     ) -> None:
-        check_record(config)
         self._config = config
-        self._heading = heading
         self._on_stop = on_stop
-        self._open_file = open_file
-        self._folder = base / config.folder
-        self._name = config.name_at(datetime.now(UTC))
-        self._room = DiskRoom(
-            self._folder,
-            limit_bytes=config.limit_bytes,
-            keep_free_bytes=round(config.keep_free_gb * 1e9),
-            when_full=config.when_full,
-            free=free,
-        )
+        self._row = SegmentRow(config, base, heading, open_file=open_file, free=free)
         self._changed = threading.Condition()
         self._queue: deque[tuple[int, Callable[[], RecordedMessage]]] = deque()
         self._queued_bytes = 0
         self._sequences: Counter[str] = Counter()
         self._closing = False
-        self._reason = ""
-        self._messages = 0
-        self._bytes_before = 0
-        self._dropped = 0
-        self._number = 1
-        self._segment = self._first_segment()
+        self._status = RecorderStatus(
+            on=True, file=str(self._row.path), messages=0, bytes=self._row.size_bytes, dropped=0, reason=""
+        )
         self._thread = threading.Thread(target=self._work, name="skewline-recorder", daemon=True)
         self._thread.start()
 
@@ -141,14 +127,7 @@ class Recorder:
     def status(self) -> RecorderStatus:
         """How the recording stands now; may be asked from any thread."""
         with self._changed:
-            return RecorderStatus(
-                on=not self._reason,
-                file=str(self._path),
-                messages=self._messages,
-                bytes=self._bytes_before + self._segment.size_bytes,
-                dropped=self._dropped,
-                reason=self._reason,
-            )
+            return self._status
 
     def record(self, shot: Shot) -> None:
         """Keep an image. Never waits: where the queue is full, the image is dropped and counted."""
@@ -175,12 +154,12 @@ class Recorder:
 
     def _put(self, topic: str, size: int, make: Callable[[int], RecordedMessage]) -> None:
         with self._changed:
-            if self._reason or self._closing:
+            if self._closing or not self._status.on:
                 return
             sequence = self._sequences[topic]
             self._sequences[topic] += 1
             if len(self._queue) >= _LEAST_QUEUED and self._queued_bytes + size > QUEUE_BYTES:
-                self._dropped += 1
+                self._status = replace(self._status, dropped=self._status.dropped + 1)
                 return
             self._queue.append((size, lambda: make(sequence)))
             self._queued_bytes += size
@@ -200,48 +179,15 @@ class Recorder:
         )
         return RecordedMessage(topic, sequence, shot.arrived_ns, shot.stamp_ns, data)
 
-    def _first_segment(self) -> SegmentWriter:
-        try:
-            self._folder.mkdir(parents=True, exist_ok=True)
-            taken = self._name in segments_in(self._folder)
-            lack = self._room.make(0, 0)
-            if not taken and not lack:
-                return self._open(1)
-        except FileExistsError:
-            taken = True  # another recorder was quicker
-        except OSError as exc:
-            raise NodeError(
-                f"{self._path} cannot be made ({exc.strerror or exc}); expected a record.folder that may be written to"
-            ) from exc
-        if taken:
-            raise NodeError(
-                f'a recording named "{self._name}" is in {self._folder} already; expected a new name: put the time in '
-                'record.name, as "%Y%m%dT%H%M%SZ" does, and give each node that records a folder of its own'
-            )
-        raise NodeError(f"recording cannot begin: {lack}; free room there or lower record.keep_free_gb")
-
-    @property
-    def _path(self) -> Path:
-        return segment_path(self._folder, self._name, self._number)
-
-    def _open(self, number: int) -> SegmentWriter:
-        path = segment_path(self._folder, self._name, number)
-        file = self._open_file(path)
-        try:
-            return SegmentWriter(file, self._heading, number, self._config.images)
-        except OSError:
-            path.unlink(missing_ok=True)
-            raise
-
     def _work(self) -> None:
         try:
             reason = self._write_all()
-            self._segment.finish()
+            self._row.finish()
         except OSError as exc:
-            reason = f"{self._path} cannot be written on ({exc.strerror or exc}); free room there and record anew"
+            reason = f"{self._row.path} cannot be written on ({exc.strerror or exc}); free room there and record anew"
         except Exception as exc:  # noqa: BLE001 - the status must not say "on" where nothing is written any more
             reason = f"recording failed: {exc!r}"
-        self._segment.abandon()
+        self._row.abandon()
         self._stop(reason)
 
     def _write_all(self) -> str:
@@ -251,16 +197,19 @@ class Recorder:
                 message = make()
             except NodeError as exc:
                 return f"an image cannot be recorded: {exc}"
-            if self._segment.size_bytes >= self._config.segment_mb * 1e6:
-                self._next_segment()
-            if lack := self._room.make(self._segment.finished_bytes(), self._segment.bytes_of(message)):
+            if lack := self._row.write(message):
                 return lack
-            self._segment.write(message)
             with self._changed:
-                self._messages += 1
+                self._status = replace(
+                    self._status,
+                    file=str(self._row.path),
+                    messages=self._status.messages + 1,
+                    bytes=self._row.size_bytes,
+                )
         return ""
 
     def _take(self) -> Callable[[], RecordedMessage] | None:
+        """Wait for the next message to make; None where nothing more comes."""
         with self._changed:
             while not self._queue and not self._closing:
                 self._changed.wait()
@@ -270,21 +219,17 @@ class Recorder:
             self._queued_bytes -= size
             return make
 
-    def _next_segment(self) -> None:
-        self._segment.finish()
-        self._room.add_closed(self._path, self._segment.size_bytes)
-        segment = self._open(self._number + 1)
-        with self._changed:
-            self._bytes_before += self._segment.size_bytes
-            self._number += 1
-            self._segment = segment
-
     def _stop(self, reason: str) -> None:
         """Note the end, and count what was taken on and not written."""
         with self._changed:
-            self._reason = reason or TOLD_TO_STOP
             self._queue.clear()
             self._queued_bytes = 0
-            self._dropped = sum(self._sequences.values()) - self._messages
+            self._status = replace(
+                self._status,
+                on=False,
+                bytes=self._row.size_bytes,
+                dropped=sum(self._sequences.values()) - self._status.messages,
+                reason=reason or TOLD_TO_STOP,
+            )
         if reason and self._on_stop:
             self._on_stop(reason)

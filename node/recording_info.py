@@ -27,7 +27,7 @@ class TopicInfo:
     count : int
         Messages that are whole.
     dropped : int
-        Numbers missing between the first and the last: the recorder's queue was full.
+        Numbers missing between the first and the last: the recorder's queue was full, or a segment is not there.
     """
 
     count: int
@@ -102,7 +102,9 @@ class RecordingInfo:
             said.append(f"{self.damaged} records are damaged")
         for topic, info in self.topics.items():
             if info.dropped:
-                said.append(f"{info.dropped} messages of {topic} were dropped while recording, or are damaged")
+                said.append(
+                    f"{info.dropped} of {topic} are missing: dropped since the disk was slow, or in files not there"
+                )
         return said
 
     def _lacks(self) -> list[str]:

@@ -194,11 +194,15 @@ class Segment:
             start, end, file = 0, len(inside), io.BytesIO(inside)
         else:
             start, end, intact = head.start, record.end, True
+        met = False
         for inner in _records(file, start, end):
             if inner.opcode == Opcode.CHANNEL:
                 self._note(inner.opcode, _body(file, inner))
             elif inner.opcode == Opcode.MESSAGE:
+                met = True
                 yield from self._message(file, inner, window, with_data, intact=intact)
+        if not met:
+            yield _DAMAGED  # no chunk is written without a message
 
     def _message(
         self, file: BinaryIO, record: _Record, window: Window, with_data: bool, *, intact: bool

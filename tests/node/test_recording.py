@@ -375,12 +375,13 @@ def test_of_recorders_that_begin_at_one_moment_a_single_one_begins(tmp_path: Pat
     assert (len(begun), len(refused)) == (1, 3)
 
 
-def test_a_folder_that_cannot_be_made_is_refused_at_once(tmp_path: Path) -> None:
+@pytest.mark.parametrize("folder", ["file", "file/in"])
+def test_a_folder_that_cannot_be_made_is_refused_at_once(tmp_path: Path, folder: str) -> None:
     (tmp_path / "file").write_text("no folder")
     with pytest.raises(
-        NodeError, match=r"shift\.0001\.mcap cannot be made \(.*\); expected a record.folder that may be"
+        NodeError, match=r"shift\.0001\.mcap cannot be made \(.*\); expected a record\.folder that may be"
     ):
-        Recorder(config_of(folder="file/in"), tmp_path, HEADING)
+        Recorder(config_of(folder=folder), tmp_path, HEADING)
 
 
 @pytest.mark.parametrize(

@@ -13,6 +13,7 @@ from skewline.node.recording_format import HEADING as METADATA
 from skewline.node.recording_format import Heading
 from skewline.node.recording_info import find_recording, read_recording
 from skewline.node.recording_reader import Segment, Window
+from skewline.node.segment_writer import RecordedMessage, SegmentWriter, open_new
 
 
 @pytest.fixture
@@ -109,6 +110,23 @@ def test_a_flipped_byte_in_an_image_is_told_by_its_checksum_and_costs_that_image
     assert intact == [True] * 6 + [False] + [True] * 9
 
 
+def test_a_message_whose_length_is_damaged_is_told_too_and_the_next_is_there(whole: Path) -> None:
+    content = bytearray(whole.read_bytes())
+    end = ends_of_messages(whole)[6]
+    (message,) = [found for found in Segment.of(whole).messages() if (found.topic, found.sequence) == ("image/a", 3)]
+    length_at = end - len(message.data) - 22 - 8
+    assert int.from_bytes(content[length_at : length_at + 8], "little") == len(message.data) + 22
+    content[length_at + 2] = 7
+    whole.write_bytes(content)
+
+    found = list(Segment.of(whole).messages())
+
+    assert [message.intact for message in found] == [True] * 6 + [False] + [True] * 9
+    assert found[6].topic == ""
+    assert read_recording([whole]).damaged == 1
+    assert any("1 records are damaged" in remark for remark in read_recording([whole]).remarks)
+
+
 def test_bytes_of_chance_anywhere_never_raise_anything_but_our_own_error(whole: Path, tmp_path: Path) -> None:
     content = whole.read_bytes()
     rng = np.random.default_rng(11)
@@ -140,17 +158,17 @@ def test_a_missing_rig_is_said_and_the_rest_is_there(tmp_path: Path) -> None:
 
 
 def test_missing_images_of_one_camera_and_dropped_ones_are_said(tmp_path: Path) -> None:
-    with recorder(tmp_path) as writing:
-        for number in range(5):
-            if number == 2:
-                writing._sequences["image/b"] += 3  # as if three found the queue full
-            writing.record(make_shot("b", number))
+    path = tmp_path / "shift.0001.mcap"
+    segment = SegmentWriter(open_new(path), HEADING, 1, "raw")
+    for number in (0, 1, 5, 6):
+        segment.write(RecordedMessage("image/b", number, 10 + number, 10 + number, b"\x80"))
+    segment.finish()
 
-    info = read_recording([tmp_path / "shift.0001.mcap"])
+    info = read_recording([path])
 
-    assert info.topics["image/b"].dropped == 3
+    assert (info.topics["image/b"].count, info.topics["image/b"].dropped) == (4, 3)
     assert "it has no image of camera A" in info.remarks
-    assert any(remark.startswith("3 messages of image/b were dropped") for remark in info.remarks)
+    assert any(remark.startswith("3 of image/b are missing: dropped") for remark in info.remarks)
 
 
 def rewrite(path: Path, to: Path, compression: CompressionType, **changed: str) -> None:

@@ -150,7 +150,8 @@ class Recorder:
         with self._changed:
             self._closing = True
             self._changed.notify_all()
-        self._thread.join(_LONGEST_CLOSE_S)
+        if threading.current_thread() is not self._thread:  # as where on_stop calls it
+            self._thread.join(_LONGEST_CLOSE_S)
 
     def _put(self, topic: str, size: int, make: Callable[[int], RecordedMessage]) -> None:
         with self._changed:

@@ -12,7 +12,7 @@ from typing import Annotated, Literal, Self
 
 from msgspec import Meta, Struct
 
-from ..errors import ConfigError, NodeError, SourceError, WireError
+from ..errors import ConfigError, NodeError, SourceError
 from ..image_message import decode_image
 from ..recording_format import IMAGE_TOPICS
 from ..recording_info import RecordingInfo, find_recording, read_recording
@@ -126,11 +126,14 @@ class RecordingSource:
         pace = _Gaps(self._settings.pace, stop)
         rise = _Rise()
         while True:
-            pace.begin()
             for item in self._round():
-                if not (pace.wait(item.arrived_ns) if isinstance(item, Shot) else not stop.is_set()):
+                if isinstance(item, Shot):
+                    item = rise.lift(item)  # its turn is by the times with which it is given
+                    if not pace.wait(item.arrived_ns):
+                        return
+                elif stop.is_set():
                     return
-                yield rise.lift(item) if isinstance(item, Shot) else item
+                yield item
             if not self._settings.loop or not rise.next_round():
                 return
 
@@ -161,7 +164,7 @@ class RecordingSource:
             return LostShot(camera, "damaged record", f"{where} is damaged: its checksum is wrong")
         try:
             image = decode_image(message.data, MAX_PIXELS)
-        except WireError as exc:
+        except NodeError as exc:
             return LostShot(camera, "damaged image", f"{message.topic} {message.sequence} in {path.name}: {exc}")
         return Shot(camera, StampedImage(image.pixels, image.stamp_ns), message.log_ns)
 
@@ -174,10 +177,6 @@ class _Gaps:
         self._stop = stop
         self._last_ns: int | None = None
         self._due_s = 0.0
-
-    def begin(self) -> None:
-        """Begin a round: its first image comes at once."""
-        self._last_ns = None
 
     def wait(self, arrived_ns: int) -> bool:
         """Wait for an image's turn; tell whether to go on."""

@@ -99,6 +99,16 @@ def test_the_recorded_pace_keeps_the_gaps_and_a_factor_divides_them(tmp_path: Pa
         assert length_s <= time.monotonic() - began_s < length_s + 5
 
 
+def test_rounds_of_a_loop_follow_one_another_at_the_recorded_pace(tmp_path: Path) -> None:
+    record(tmp_path, [make_shot("a", 0), make_shot("a", 5)])  # 50 ms, and as much until the next round
+
+    with source_of(tmp_path, pace="recorded", loop=True) as source:
+        began_s = time.monotonic()
+        take(source, 5)
+
+    assert 0.2 <= time.monotonic() - began_s < 5.0
+
+
 def test_a_node_that_is_late_is_not_rushed_afterwards(tmp_path: Path) -> None:
     record(tmp_path, [make_shot("a", number) for number in range(0, 40, 5)])  # every 50 ms
     moments: list[float] = []

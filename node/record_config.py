@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Mapping
 from datetime import UTC, datetime
-from typing import Annotated
+from typing import Annotated, Any
 
 from msgspec import Meta, Struct
 
+from ..calib.tables import checked_table
 from .disk_room import WhenFull
 from .errors import ConfigError
 from .image_message import Encoding
@@ -59,6 +61,27 @@ class RecordConfig(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True
     def limit_bytes(self) -> int | None:
         """``limit_gb`` in bytes."""
         return None if self.limit_gb is None else round(self.limit_gb * 1e9)
+
+
+def record_settings(content: Mapping[str, Any]) -> RecordConfig:
+    """Read what a configuration says of recording; the defaults where it says nothing.
+
+    Parameters
+    ----------
+    content : mapping
+        What the whole TOML file held.
+
+    Raises
+    ------
+    ConfigError
+        Where a key of ``[record]`` is unknown or out of range, or its keys contradict one another.
+    """
+    table = content.get("record", {})
+    if not isinstance(table, Mapping):
+        raise ConfigError(f"record is {table!r}; expected a table [record]")
+    config = checked_table(table, RecordConfig, "record", ConfigError)
+    check_record(config)
+    return config
 
 
 def check_record(config: RecordConfig) -> None:

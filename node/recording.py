@@ -129,10 +129,17 @@ class Recorder:
         with self._changed:
             return self._status
 
-    def record(self, shot: Shot) -> None:
-        """Keep an image. Never waits: where the queue is full, the image is dropped and counted."""
+    def record(self, shot: Shot, *, wait: bool = False) -> None:
+        """Keep an image. Where the queue is full, the image is dropped and counted.
+
+        Parameters
+        ----------
+        shot : Shot
+        wait : bool
+            Wait for room instead, where the image comes from a source that waits too; else this never waits.
+        """
         topic = IMAGE_TOPICS[shot.camera]
-        self._put(topic, shot.image.pixels.nbytes, lambda sequence: self._image(shot, topic, sequence))
+        self._put(topic, shot.image.pixels.nbytes, lambda sequence: self._image(shot, topic, sequence), wait=wait)
 
     def record_depth(self, message: bytes, stamp_ns: int = 0) -> None:
         """Keep a depth message as it was published, where the configuration asks for it; never waits."""
@@ -153,27 +160,31 @@ class Recorder:
         if threading.current_thread() is not self._thread:  # as where on_stop calls it
             self._thread.join(_LONGEST_CLOSE_S)
 
-    def _put(self, topic: str, size: int, make: Callable[[int], RecordedMessage]) -> None:
+    def _put(self, topic: str, size: int, make: Callable[[int], RecordedMessage], *, wait: bool = False) -> None:
         with self._changed:
+            while wait and self._full(size) and self._status.on and not self._closing:
+                self._changed.wait()
             if self._closing or not self._status.on:
                 return
             sequence = self._sequences[topic]
             self._sequences[topic] += 1
-            if len(self._queue) >= _LEAST_QUEUED and self._queued_bytes + size > QUEUE_BYTES:
+            if self._full(size):
                 self._status = replace(self._status, dropped=self._status.dropped + 1)
                 return
             self._queue.append((size, lambda: make(sequence)))
             self._queued_bytes += size
             self._changed.notify_all()
 
+    def _full(self, size: int) -> bool:
+        return len(self._queue) >= _LEAST_QUEUED and self._queued_bytes + size > QUEUE_BYTES
+
     def _image(self, shot: Shot, topic: str, sequence: int) -> RecordedMessage:
         pixels = shot.image.pixels
         # JPEG has 8 bits: deeper images are kept without loss instead.
         encoding = "png" if self._config.images == "jpeg" and pixels.dtype != "u1" else self._config.images
         data = encode_image(
-            shot.camera,
-            pixels,
-            shot.stamp_ns,
+            shot.image,
+            camera=shot.camera,
             sequence=sequence,
             encoding=encoding,
             jpeg_quality=self._config.jpeg_quality,
@@ -218,6 +229,7 @@ class Recorder:
                 return None
             size, make = self._queue.popleft()
             self._queued_bytes -= size
+            self._changed.notify_all()
             return make
 
     def _stop(self, reason: str) -> None:
@@ -232,5 +244,6 @@ class Recorder:
                 dropped=sum(self._sequences.values()) - self._status.messages,
                 reason=reason or TOLD_TO_STOP,
             )
+            self._changed.notify_all()
         if reason and self._on_stop:
             self._on_stop(reason)

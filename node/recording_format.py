@@ -26,7 +26,7 @@ DEPTH_TOPIC = "depth"
 MESSAGE_ENCODING = "msgpack"
 
 SCHEMAS = {
-    "skewline image": "One msgpack map, an image of one camera: RECORDING.md in the package skewline.node says each key.",
+    "skewline image": "One msgpack map, an image of one camera: WIRE.md in the package skewline.node.",
     "skewline depth": "One msgpack map, a depth frame as it was published: WIRE.md in the package skewline.node.",
 }
 SCHEMA_OF_TOPIC = {**dict.fromkeys(IMAGE_TOPICS.values(), "skewline image"), DEPTH_TOPIC: "skewline depth"}

@@ -6,6 +6,7 @@ from .gige import GigeSource
 from .gige_settings import GigeSettings
 from .pace import Pace
 from .protocol import Source, SourceKind
+from .recording import RecordingSettings, RecordingSource
 from .socket import SocketSettings, SocketSource
 from .url import UrlSettings, UrlSource
 
@@ -13,6 +14,7 @@ BUILT_IN = {
     "device": SourceKind(DeviceSettings, DeviceSource, both=False),
     "folder": SourceKind(FolderSettings, FolderSource, both=True),
     "gige": SourceKind(GigeSettings, GigeSource, both=False),
+    "recording": SourceKind(RecordingSettings, RecordingSource, both=True),
     "socket": SourceKind(SocketSettings, SocketSource, both=False),
     "url": SourceKind(UrlSettings, UrlSource, both=False),
 }
@@ -27,6 +29,8 @@ __all__ = [
     "GigeSettings",
     "GigeSource",
     "Pace",
+    "RecordingSettings",
+    "RecordingSource",
     "SocketSettings",
     "SocketSource",
     "Source",

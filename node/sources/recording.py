@@ -19,7 +19,9 @@ from ..recording_info import RecordingInfo, find_recording, read_recording
 from ..recording_reader import FoundMessage, Segment, Window
 from ..shot import BOTH, CameraName, LostShot, Shot, StampedImage
 
-MAX_PIXELS = 200_000_000
+MOST_PIXELS = 250_000_000
+"""As many as a socket may be set to let through: what could be recorded can be read again."""
+
 _CAMERA_OF: dict[str, CameraName] = {topic: camera for camera, topic in IMAGE_TOPICS.items()}
 
 
@@ -163,10 +165,10 @@ class RecordingSource:
             where = f"{message.topic or 'record'} {message.sequence} in {path.name}"
             return LostShot(camera, "damaged record", f"{where} is damaged: its checksum is wrong")
         try:
-            image = decode_image(message.data, MAX_PIXELS)
+            image = decode_image(message.data, MOST_PIXELS).image
         except NodeError as exc:
             return LostShot(camera, "damaged image", f"{message.topic} {message.sequence} in {path.name}: {exc}")
-        return Shot(camera, StampedImage(image.pixels, image.stamp_ns), message.log_ns)
+        return Shot(camera, image, message.log_ns)
 
 
 class _Gaps:

@@ -15,7 +15,7 @@ from mcap.reader import make_reader
 from recordings import BEGAN_NS, HEADING, make_shot, record, shots_of, wait_until_off
 from skewline.node import ConfigError, NodeError
 from skewline.node.image_message import decode_image
-from skewline.node.record_config import RecordConfig
+from skewline.node.record_config import RecordConfig, record_settings
 from skewline.node.recording import QUEUE_BYTES, Recorder
 from skewline.node.recording_info import find_recording, read_recording
 from skewline.node.recording_reader import Segment
@@ -45,7 +45,7 @@ def test_the_open_formats_own_reader_and_an_independent_unpacker_find_every_imag
     for shot, (schema, _, message) in zip(shots, read, strict=True):
         assert schema is not None
         assert schema.name == "skewline image"
-        assert b"RECORDING.md" in schema.data
+        assert b"WIRE.md" in schema.data
         assert (message.log_time, message.publish_time) == (shot.arrived_ns, shot.stamp_ns)
         keys = msgpack.unpackb(message.data)
         assert (keys["camera"], keys["stamp_ns"], keys["sequence"]) == (shot.camera, shot.stamp_ns, message.sequence)
@@ -97,7 +97,7 @@ def test_raw_and_png_keep_grey_deep_and_colour_pixels_exactly(tmp_path: Path, im
     (path,) = record(tmp_path, shots, images=images)
 
     for pixels, message in zip(kinds, Segment.of(path).messages(), strict=True):
-        np.testing.assert_array_equal(decode_image(message.data, 1000).pixels, pixels)
+        np.testing.assert_array_equal(decode_image(message.data, 1000).image.pixels, pixels)
 
 
 def test_jpeg_keeps_8_bit_images_smaller_and_deeper_ones_without_loss(tmp_path: Path) -> None:
@@ -168,6 +168,22 @@ def test_a_disk_that_does_not_answer_costs_images_and_never_the_callers_time(tmp
     info = read_recording([tmp_path / "shift.0001.mcap"])
     assert info.topics["image/a"].count == count - dropped
     assert writing.status.reason == "told to stop"
+
+
+def test_images_of_a_source_that_waits_are_all_kept_however_slow_the_disk_is(tmp_path: Path) -> None:
+    go = threading.Event()
+    writing = Recorder(config_of(), tmp_path, HEADING, open_file=lambda path: StuckFile(path, go))
+    large = Shot("a", StampedImage(np.zeros((2000, 3200), np.uint8), 1), 2)
+    count = 2 * QUEUE_BYTES // large.image.pixels.nbytes
+
+    threading.Timer(0.3, go.set).start()
+    for _ in range(count):
+        writing.record(large, wait=True)
+    writing.close()
+
+    assert go.is_set()
+    assert writing.status.dropped == 0
+    assert read_recording([tmp_path / "shift.0001.mcap"]).topics["image/a"].count == count
 
 
 def test_a_limit_ends_the_recording_below_it_with_the_reason_and_everything_before_is_whole(tmp_path: Path) -> None:
@@ -401,6 +417,15 @@ def test_settings_that_cannot_work_are_refused_with_the_key(
     with pytest.raises(ConfigError, match=complaint):
         Recorder(config_of(**settings), tmp_path, HEADING)
     assert list(tmp_path.iterdir()) == []
+
+
+def test_the_configurations_table_is_read_and_its_mistakes_are_named() -> None:
+    assert record_settings({"rig": "rig.json"}) == RecordConfig()
+    assert record_settings({"record": {"images": "png", "limit_gb": 2}}) == RecordConfig(images="png", limit_gb=2.0)
+    with pytest.raises(ConfigError, match=r"record\.image \('png'\) is no key .* did you mean images\?"):
+        record_settings({"record": {"image": "png"}})
+    with pytest.raises(ConfigError, match=r"record is 'png'; expected a table \[record\]"):
+        record_settings({"record": "png"})
 
 
 def test_a_name_holds_the_time_in_utc(tmp_path: Path) -> None:

@@ -103,8 +103,8 @@ def check(segments: tuple[Path, ...]) -> int:
     """Hold every message against what was recorded; count them."""
     messages = [message for path in segments if path.stat().st_size for message in Segment.of(path).messages()]
     for index, message in enumerate(messages):
-        image = decode_image(message.data, 10**6)
+        found = decode_image(message.data, 10**6)
         assert message.intact
-        assert (image.camera, image.sequence) == (BOTH[index % 2], index // 2)
-        np.testing.assert_array_equal(image.pixels, picture(image.camera, image.sequence, SIZE))
+        assert (found.camera, found.sequence) == (BOTH[index % 2], index // 2)
+        np.testing.assert_array_equal(found.image.pixels, picture(BOTH[index % 2], index // 2, SIZE))
     return len(messages)

@@ -8,7 +8,7 @@ from __future__ import annotations
 import itertools
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Annotated, Any, Literal, TypeVar
 
@@ -19,6 +19,7 @@ from .access import AccessConfig
 from .errors import ConfigError, NodeError
 from .match import MatcherName, MatchSettings
 from .pairing import PairingSettings
+from .record_config import RecordConfig, check_record
 from .shot import BOTH, CameraName
 from .sources import Source, SourceKind
 from .stream import WatchConfig
@@ -97,6 +98,7 @@ class _Tables(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
     trust: dict[str, Any] = {}
     access: dict[str, Any] = {}
     control: dict[str, Any] = {}
+    record: dict[str, Any] | None = None
 
 
 class _SourceTables(Struct, frozen=True, kw_only=True):
@@ -168,8 +170,12 @@ class NodeConfig:
         The rig file.
     sources : SourcesConfig
         Where pairs come from.
+    text : str
+        What the file held; empty where it was no file.
     volume, match, publish, trust, access, control
         Their tables.
+    record : RecordConfig or None
+        Its table; None where there is none, and so no place to record to.
     """
 
     rig: Path
@@ -180,6 +186,8 @@ class NodeConfig:
     trust: TrustConfig
     access: AccessConfig
     control: ControlConfig
+    record: RecordConfig | None = None
+    text: str = ""
 
     @property
     def base(self) -> Path:
@@ -205,7 +213,7 @@ def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig
     path = Path(path)
     content = read_toml(path, "the node's configuration", ConfigError)
     try:
-        return parse_config(content, kinds, path.parent)
+        return replace(parse_config(content, kinds, path.parent), text=path.read_text(encoding="utf-8"))
     except ConfigError as exc:
         raise ConfigError(f"{path}: {exc}") from exc
 
@@ -258,6 +266,7 @@ def parse_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], ba
         trust=_trust(top.trust),
         access=_checked(top.access, AccessConfig, "access"),
         control=_checked(top.control, ControlConfig, "control"),
+        record=None if top.record is None else _record(top.record),
     )
     _check_publish(config.publish, config.control, volume)
     return config
@@ -321,6 +330,12 @@ def _each_hint(cameras: tuple[CameraName, ...], kinds: Mapping[str, SourceKind])
     if len(cameras) < len(BOTH) or not singles:
         return ""
     return ", or tables [source.a] and [source.b], each with one of " + ", ".join(f'"{name}"' for name in singles)
+
+
+def _record(table: Mapping[str, Any]) -> RecordConfig:
+    record = _checked(table, RecordConfig, "record")
+    check_record(record)
+    return record
 
 
 def _watch(table: Mapping[str, Any]) -> WatchConfig:

@@ -21,13 +21,16 @@ from .commands import node_commands
 from .config import NodeConfig
 from .control import ControlServer
 from .engine import DepthEngine
-from .errors import UNKNOWN_SCALE, NodeError, PairError
+from .errors import UNKNOWN_SCALE, ConfigError, NodeError, PairError
 from .feed import Feed
 from .frame import DepthFrame
 from .gatekeeper import Gatekeeper
 from .hand_over import PairFeed, read_ahead
+from .kept_config import without_passwords
 from .publisher import Publisher
 from .record_switch import RecordSwitch
+from .recording import TOLD_TO_STOP, Recorder
+from .recording_format import Heading
 from .shot import CameraName, LostShot, Pair, Shot
 from .sources import SourceKind
 from .status import NodeStatus, Tally
@@ -293,7 +296,7 @@ def run_node(
     rig = Rig.load(config.rig)
     policy = AccessPolicy.from_config(config.access, config.base)
     steering = Steering(stop)
-    recorder = RecordSwitch()
+    recorder = RecordSwitch(None if config.record is None else lambda: begin_recording(config, publisher.session, log))
     last: list[NodeStatus] = []
 
     def note(status: NodeStatus) -> None:
@@ -321,6 +324,7 @@ def run_node(
             on_ready(NodeAddresses(rig, publisher, control, policy))
         stack.callback(recorder.close)
         feed = make_feed(config, kinds, rig, log, recorder.keep)
+        recorder.waits = not feed.live
         first = equipment(rig, config, make_engine)
         if control is not None:
             control.start()
@@ -371,6 +375,35 @@ def check_same_cameras(rig: Rig, running: Rig) -> None:
                 f"the rig's camera {name} gives {given[0]} x {given[1]} pixels; expected {wanted[0]} x {wanted[1]} as the "
                 "running node's: solve a rig for these cameras at this size, or start the node anew"
             )
+
+
+def begin_recording(config: NodeConfig, session: str, log: logging.Logger) -> Recorder:
+    """Begin a recording as the configuration says, with rig and configuration inside.
+
+    Raises
+    ------
+    NodeError
+        Where it says nothing of recording, or no file can be made.
+    CalibrationError
+        Where the rig file cannot be read.
+    """
+    if config.record is None:
+        raise ConfigError("record is missing; expected a table [record]: give it one")
+    heading = Heading(
+        session=session,
+        rig=config.rig.read_text(encoding="utf-8") if config.rig.is_file() else None,
+        config=without_passwords(config.text) if config.text else None,
+    )
+    recorder = Recorder(
+        config.record,
+        config.base,
+        heading,
+        on_stop=lambda reason: log.log(
+            logging.INFO if reason == TOLD_TO_STOP else logging.WARNING, "recording ended: %s", reason
+        ),
+    )
+    log.info("recording to %s", recorder.status.file)
+    return recorder
 
 
 def _await_subscriber(timeout_s: float, publisher: Publisher, stop: threading.Event, log: logging.Logger) -> None:

@@ -109,14 +109,13 @@ def test_a_rig_of_two_cameras_has_the_spread_of_pairs_drawn_by_the_covariance_of
     whole = ring()
     rig = whole.rig(first, other)
     a, b = NAMES.index(first), NAMES.index(other)
-    steps = []
-    for drawn in rng.multivariate_normal(np.zeros(18), whole.covariance, 4000).reshape(-1, 3, 6):
-        R, t = whole.R.copy(), whole.t.copy()
-        R[1:], t[1:] = Rotation.from_rotvec(drawn[:, :3]).as_matrix() @ R[1:], t[1:] + drawn[:, 3:]
-        R_pair = R[b] @ R[a].T
-        turn = Rotation.from_matrix(R_pair @ rig.R.T).as_rotvec()
-        steps.append(np.concatenate([turn, t[b] - R_pair @ t[a] - rig.t]))
-    seen = np.cov(np.array(steps).T)
+    drawn = np.zeros((4000, 4, 6))  # the first camera stays
+    drawn[:, 1:] = rng.multivariate_normal(np.zeros(18), whole.covariance, 4000).reshape(-1, 3, 6)
+    R_a, R_b = (Rotation.from_rotvec(drawn[:, k, :3]).as_matrix() @ whole.R[k] for k in (a, b))
+    t_a, t_b = (whole.t[k] + drawn[:, k, 3:] for k in (a, b))
+    R_pair = R_b @ R_a.transpose(0, 2, 1)
+    turns = Rotation.from_matrix(R_pair @ rig.R.T).as_rotvec()
+    seen = np.cov(np.hstack([turns, t_b - np.einsum("nij,nj->ni", R_pair, t_a) - rig.t]).T)
     deviations = np.sqrt(np.diag(rig.covariance))
     np.testing.assert_allclose(
         seen / np.outer(deviations, deviations), rig.covariance / np.outer(deviations, deviations), atol=0.08

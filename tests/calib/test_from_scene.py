@@ -2,25 +2,19 @@
 
 from __future__ import annotations
 
-from pathlib import Path
-
 import cv2
 import leuven
 import numpy as np
 import pytest
+import real_pairs
 from motorcycle import BASELINE_M, Scene, carried_over, commonly_seen, original, reimaged
 from pose_errors import PoseErrors, errors_of
 from scipy.spatial.transform import Rotation
 from skewline.calib import CalibrationError, Camera, Rig
-from skewline.calib.chessboard import Chessboard
 from skewline.calib.from_scene import ScenePose, pose_from_scene
-from skewline.calib.from_target import View, calibrate_pair
-from skewline.calib.images import find_images, read_image
+from skewline.calib.images import read_image
 from skewline.calib.matches import Matches
 from skewline.calib.pose_words import depth_saying
-from skewline.calib.targets import Target
-
-CHESSBOARDS = Path(__file__).parent.parent / "data" / "chessboard-pairs"
 
 
 def solved(scene: Scene) -> tuple[ScenePose, PoseErrors]:
@@ -83,16 +77,7 @@ def test_twenty_solutions_of_four_yaws_and_five_seeds_stay_within_the_floors(
 
 @pytest.fixture(scope="module")
 def chessboard_rig() -> Rig:
-    board = Chessboard(columns=9, rows=6, square_m=0.03)
-    views = [
-        View(name_a=a.name, name_b=b.name, seen_a=board.find(read_image(a)), seen_b=board.find(read_image(b)))
-        for a, b in zip(*chessboard_files(), strict=True)
-    ]
-    return calibrate_pair(Target((board,)), views, (640, 480), (640, 480)).rig
-
-
-def chessboard_files() -> tuple[list[Path], list[Path]]:
-    return find_images(str(CHESSBOARDS / "left*.jpg")), find_images(str(CHESSBOARDS / "right*.jpg"))
+    return real_pairs.solved("pinhole 5").rig
 
 
 def apart_deg(one: Rig, other: Rig) -> tuple[float, float]:
@@ -104,10 +89,9 @@ def apart_deg(one: Rig, other: Rig) -> tuple[float, float]:
 def test_chessboard_corners_taken_as_plain_correspondences_give_the_rotation_of_the_target_solve(
     chessboard_rig: Rig,
 ) -> None:
-    board = Chessboard(columns=9, rows=6, square_m=0.03)
     parts = []
-    for number, (a, b) in enumerate(zip(*chessboard_files(), strict=True)):
-        in_a, in_b = board.find(read_image(a)), board.find(read_image(b))
+    for number, view in enumerate(real_pairs.views()):
+        in_a, in_b = view.seen_a, view.seen_b
         assert in_a
         assert in_b
         count = len(in_a)
@@ -127,7 +111,7 @@ def test_chessboard_corners_taken_as_plain_correspondences_give_the_rotation_of_
 
 
 def test_chessboard_pictures_taken_as_any_scene_give_the_rotation_of_the_target_solve(chessboard_rig: Rig) -> None:
-    files = list(zip(*chessboard_files(), strict=True))[::3]
+    files = list(zip(*real_pairs.files(), strict=True))[::5]
     pose = pose_from_scene(chessboard_rig.a, chessboard_rig.b, [(read_image(a), read_image(b)) for a, b in files])
     turned, _ = apart_deg(pose.rig, chessboard_rig)
     assert turned < 0.15

@@ -5,16 +5,16 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+import real_pairs
 from scipy.spatial.transform import Rotation
 from skewline.calib import CalibrationError, Camera, Rig
 from skewline.calib.advice import refuse_folding_lens
 from skewline.calib.from_target import View, calibrate_pair
-from skewline.calib.images import find_images, read_image
+from skewline.calib.images import read_image
 from skewline.calib.result import CalibrationResult
 from skewline.calib.targets import Chessboard, Sighting, Target, parse_target
 
 DATA = Path(__file__).parent.parent / "data" / "chessboard-pairs"
-SIZE = (640, 480)
 BOARD = Chessboard(columns=9, rows=6, square_m=0.03)
 TARGET = Target((BOARD,))
 
@@ -26,18 +26,9 @@ PUBLISHED_T_MM = np.array([-99.80198, 1.12443, 0.05041])
 T_UNCERTAINTY_MM = np.array([0.142, 0.11352, 0.49773])
 
 
-@pytest.fixture(scope="module")
-def real_views() -> list[View]:
-    files = zip(find_images(str(DATA / "left*.jpg")), find_images(str(DATA / "right*.jpg")), strict=True)
-    return [
-        View(name_a=a.name, name_b=b.name, seen_a=BOARD.find(read_image(a)), seen_b=BOARD.find(read_image(b)))
-        for a, b in files
-    ]
-
-
 @pytest.fixture(scope="module", params=["pinhole 5", "pinhole 8"])
-def real_result(request: pytest.FixtureRequest, real_views: list[View]) -> CalibrationResult:
-    return calibrate_pair(TARGET, real_views, SIZE, SIZE, model=request.param)
+def real_result(request: pytest.FixtureRequest) -> CalibrationResult:
+    return real_pairs.solved(request.param)
 
 
 def test_the_pose_of_real_chessboard_pairs_lies_within_the_published_uncertainties(
@@ -60,8 +51,8 @@ def test_real_chessboard_pairs_fit_as_well_as_opencv_alone_fits_them(real_result
     assert real_result.epipolar_median_px < real_result.epipolar_95_px < 0.6
 
 
-def test_real_focal_lengths_agree_with_the_published_ones(real_views: list[View]) -> None:
-    result = calibrate_pair(TARGET, real_views, SIZE, SIZE)
+def test_real_focal_lengths_agree_with_the_published_ones() -> None:
+    result = real_pairs.solved("pinhole 5")
 
     # Bouguet, as above: left and right focal lengths; his own uncertainties are of a few pixels' third.
     assert np.diag(result.rig.a.K)[:2] == pytest.approx([533.52331, 533.52699], abs=1.0)

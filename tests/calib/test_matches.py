@@ -1,7 +1,5 @@
 """Matches found in images: real ones with known truth, drawn ones with known places."""
 
-from functools import cache
-
 import cv2
 import motorcycle
 import numpy as np
@@ -10,13 +8,7 @@ from scipy.spatial import cKDTree
 from skewline.calib import CalibrationError
 from skewline.calib.matches import Matches, find_matches
 
-scene_at = cache(motorcycle.reimaged)
-
-
-@cache
-def found_at(yaw_deg: float) -> Matches:
-    scene = scene_at(yaw_deg)
-    return find_matches(scene.image_a, scene.image_b)
+scene_at, found_at = motorcycle.reimaged, motorcycle.matches
 
 
 def errors_px(yaw_deg: float, matches: Matches) -> np.ndarray:

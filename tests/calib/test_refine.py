@@ -31,7 +31,8 @@ def test_the_95_percent_intervals_of_all_parameters_hold_the_truth_as_often_as_t
     seen, state = truth(RIG, placings(RIG, 8, seed=5))
     trials, inside = 200, np.zeros(24)
     for _ in range(trials):
-        fit = refine(noisy(seen, rng), state)
+        # Ended at 1e-6 instead of 1e-11, a solution is off by a thousandth of a sigma and takes half as long.
+        fit = refine(noisy(seen, rng), state, settled=1e-6)
         inside += np.abs(true_errors(fit)) <= 1.96 * np.sqrt(np.diag(fit.covariance))
 
     coverage = dict(zip(fit.names, inside / trials, strict=True))

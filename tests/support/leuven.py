@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 from pathlib import Path
 
 import cv2
 import numpy as np
+from skewline.calib.matches import Matches, find_matches
 
 FOLDER = Path(__file__).resolve().parents[1] / "data/leuven"
 
@@ -20,11 +22,19 @@ class Leuven:
     K: np.ndarray
 
 
+@cache
 def load() -> Leuven:
     """Read the pair as its own text file describes it."""
     *names, first, second, third = (FOLDER / "essential_mat_data.txt").read_text(encoding="ascii").splitlines()
     a, b = (cv2.imread(str(FOLDER / name), cv2.IMREAD_GRAYSCALE) for name in names)
     return Leuven(a, b, np.array([row.split() for row in (first, second, third)], dtype=float))
+
+
+@cache
+def matches() -> Matches:
+    """What the code under test finds in the pair; once for all tests of a process."""
+    pair = load()
+    return find_matches(pair.image_a, pair.image_b)
 
 
 def sift_matches(pair: Leuven) -> tuple[np.ndarray, np.ndarray]:

@@ -1,6 +1,7 @@
 """A calibration result made from a known rig: boards projected with noise, covariance from the normal equations."""
 
 from collections.abc import Callable
+from functools import cache
 
 import numpy as np
 from scipy.spatial.transform import Rotation
@@ -120,6 +121,7 @@ def camera_fit(camera: Camera, fits: list[ViewFit], coverage: float) -> CameraFi
     )
 
 
+@cache
 def make_result(
     *, views: int = 16, held_out: int = 3, noise_px: float = NOISE_PX, seed: int = 7, coverage: float = 0.9
 ) -> CalibrationResult:

@@ -9,11 +9,13 @@ true depth survives the re-imaging exactly.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache, lru_cache
 
 import cv2
 import numpy as np
 from scipy.spatial.transform import Rotation
 from skewline.calib import Camera, Rig
+from skewline.calib.matches import Matches, find_matches
 from skewline.node import DepthFrame
 from skimage import data
 
@@ -35,7 +37,12 @@ class Scene:
     points_a: np.ndarray
     disparity_px: np.ndarray
 
+    def __post_init__(self) -> None:
+        for shared in (self.image_a, self.image_b, self.points_a, self.disparity_px):
+            shared.setflags(write=False)
 
+
+@cache
 def original() -> Scene:
     """The pair as it stands: two equal, parallel cameras with different principal points."""
     left, right, disparity = data.stereo_motorcycle()
@@ -53,6 +60,7 @@ def original() -> Scene:
     return Scene(rig, bgr[0], bgr[1], points * depth[:, None], whole)
 
 
+@lru_cache(maxsize=8)
 def reimaged(yaw_deg: float, seed: int = 0) -> Scene:
     """The pair as two unlike cameras would have seen it, B turned from A by ``yaw_deg`` and both by a few degrees more.
 
@@ -72,6 +80,13 @@ def reimaged(yaw_deg: float, seed: int = 0) -> Scene:
     image_b = np.clip(np.rint(image_b * 0.8 + noise), 0, 255).astype(np.uint8)
     rig = Rig(a=a, b=b, R=turn_b @ turn_a.T, t=turn_b @ source.rig.t)
     return Scene(rig, image_a, image_b, source.points_a @ turn_a.T, source.disparity_px)
+
+
+@cache
+def matches(yaw_deg: float) -> Matches:
+    """What is found of the re-imaged pair; once for all tests of a process, since finding takes a second."""
+    scene = reimaged(yaw_deg)
+    return find_matches(scene.image_a, scene.image_b)
 
 
 def _turns(yaw_deg: float) -> tuple[np.ndarray, np.ndarray]:

@@ -30,8 +30,7 @@ GRIDS = [
 
 
 @pytest.mark.parametrize("text", GRIDS)
-@pytest.mark.parametrize("turn", [0, 90, 180, 270, 30])
-@pytest.mark.parametrize("tilt", [10, 40])
+@pytest.mark.parametrize(("turn", "tilt"), [(0, 10), (90, 40), (180, 10), (270, 40), (30, 40)])
 def test_circles_are_found_to_a_fiftieth_of_a_pixel_in_one_of_their_orders(text: str, turn: float, tilt: float) -> None:
     board = grid_of(text)
     shot = picture(board, turn_deg=turn, tilt_deg=tilt)

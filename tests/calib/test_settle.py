@@ -124,6 +124,7 @@ def test_the_minimum_is_that_of_a_bundle_adjustment_over_pose_and_points() -> No
     np.testing.assert_allclose((left**2).sum(), 2 * bundle.cost, rtol=0.02)
 
 
+@pytest.mark.timeout(400)
 def test_the_true_pose_lies_within_the_stated_95_percent_region_in_90_to_99_percent_of_200_trials() -> None:
     rng = np.random.default_rng(4)
     cameras, poses = (CAMERA_A, CAMERA_B), pair_poses()
@@ -141,7 +142,7 @@ def test_errors_that_go_together_within_a_part_of_the_picture_raise_the_stated_d
     rng = np.random.default_rng(5)
     cameras, poses = (CAMERA_A, CAMERA_B), pair_poses()
     distances, plain = [], []
-    for _ in range(25):
+    for _ in range(12):
         points = points_before(cameras, poses, 600, rng)
         exact = sighted(cameras, poses, (0, 1), points)
         part = (exact.pixels[:, 0, 0] // 160).astype(int) + 8 * (exact.pixels[:, 0, 1] // 160).astype(int)
@@ -153,6 +154,7 @@ def test_errors_that_go_together_within_a_part_of_the_picture_raise_the_stated_d
             basis = found.poses.free_steps()
             step = basis.T @ pose_step(found.poses, poses)
             kept.append(step @ np.linalg.solve(basis.T @ found.covariance @ basis, step) / 5)
+    # By chi-square of 5 degrees, a mean of 12 true ones has a deviation of sqrt(2 / 5 / 12) = 0.18: 1.6 is 3.3 of them.
     assert np.mean(distances) < 1.6
     assert np.mean(plain) > 3
 

@@ -202,7 +202,7 @@ def test_the_lens_model_is_chosen_by_held_out_views_and_no_richer_than_need_be(
 ) -> None:
     rng = np.random.default_rng(61)
     rig = rig_of(camera, camera)
-    poses = placings(rig, 16, seed=62, near_m=0.3, far_m=0.7)
+    poses = placings(rig, 10, seed=62, near_m=0.3, far_m=0.7)
     exact = [both(rig, BOARD.points @ T[:3, :3].T + T[:3, 3])[0] for T in poses]
     seen, _ = truth(rig, poses)
     noisy = [replace(s, pixels=p + rng.normal(0, 0.1, p.shape)) for s, p in zip(seen[::2], exact, strict=True)]

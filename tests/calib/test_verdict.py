@@ -1,11 +1,14 @@
 """The verdict's rule, both ways: what is good stays good, and each broken limit shows."""
 
+from collections.abc import Iterator
 from dataclasses import replace
 from typing import Any
 
 import numpy as np
 import pytest
 from made_up_result import make_result
+from skewline.calib import verdict as verdict_module
+from skewline.calib.depth_error import DepthErrorCurve, depth_error_curve
 from skewline.calib.result import CalibrationResult
 from skewline.calib.verdict import BAD, CARE, judge
 
@@ -15,6 +18,22 @@ NEAR, FAR = 0.5, 1.1
 @pytest.fixture(scope="module")
 def good() -> CalibrationResult:
     return make_result()
+
+
+@pytest.fixture(autouse=True, scope="module")
+def curves_worked_out_once() -> Iterator[None]:
+    """Most results here differ in a figure and not in rig or parameters, which alone make the curve."""
+    kept: dict[tuple[object, ...], tuple[CalibrationResult, DepthErrorCurve]] = {}
+
+    def curve(source: CalibrationResult, *volume: float, **more: float) -> DepthErrorCurve:
+        key = (id(source.rig), id(source.parameters), volume, *more.items())
+        if key not in kept:
+            kept[key] = source, depth_error_curve(source, *volume, **more)  # the source too: ids stay taken
+        return kept[key][1]
+
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(verdict_module, "depth_error_curve", curve)
+        yield
 
 
 def test_a_careful_calibration_is_good_and_its_depth_errors_are_those_of_the_curve(good: CalibrationResult) -> None:

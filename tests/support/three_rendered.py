@@ -5,8 +5,9 @@ from __future__ import annotations
 from functools import cache
 
 import numpy as np
+from cells import make_cell
 from skewline.calib import Camera
-from skewline.tools.cell import Photometry, make_cell, render_image
+from skewline.tools.cell import Photometry, render_image
 
 SIZE = {"size_a": (320, 240), "size_b": (320, 240)}
 PAIRS = (("front", "right"), ("front", "left"), ("right", "left"))

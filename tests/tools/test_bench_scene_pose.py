@@ -9,7 +9,7 @@ from skewline.tools.bench import scene_pose
 
 @pytest.fixture(scope="module")
 def rows() -> list[scene_pose.Row]:
-    return scene_pose.solve_places([150, 1500], size=(480, 360))
+    return scene_pose.solve_places([150, 1500], size=(400, 300))
 
 
 def test_each_solution_is_compared_with_the_truth_and_with_what_it_says_of_itself(rows: list[scene_pose.Row]) -> None:

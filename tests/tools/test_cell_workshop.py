@@ -2,13 +2,13 @@
 
 import numpy as np
 import pytest
+from cells import make_cell
 from skewline.tools import cell as face
 from skewline.tools.cell import (
     Cell,
     board_corners,
     board_poses,
     cast,
-    make_cell,
     moved,
     plane_cell,
     render_pairs,

@@ -12,13 +12,17 @@ from typing import Any
 import leuven
 import numpy as np
 import pytest
+from remembering import remembering
 from skewline.calib import Camera, Rig
 from skewline.calib.focal_guess import FocalGuess, guess_focal_lengths
 from skewline.tools import guessed_intrinsics
 from skewline.tools.cli import main
+from skewline.tools.verbs import pose as pose_verb
 
 PICTURES = ["--a", str(leuven.FOLDER / "leuvenA.jpg"), "--b", str(leuven.FOLDER / "leuvenB.jpg")]
 GUESS = ["--guess-focal", "--same-focal"]
+SOLVED_ONCE = remembering(pose_verb.pose_from_scene)
+FOUND_ONCE = remembering(pose_verb.find_all_matches)
 
 
 @dataclass(frozen=True)
@@ -35,7 +39,7 @@ def first_guess() -> list[FocalGuess]:
 
 @pytest.fixture
 def guessed_once(monkeypatch: pytest.MonkeyPatch, first_guess: list[FocalGuess]) -> None:
-    """Guess truly the first time, and give the very same to later runs on the same pictures."""
+    """Guess and solve truly the first time, and give the very same to later runs on the same pictures."""
 
     def guess(*given: Any, **more: Any) -> FocalGuess:
         if not first_guess:
@@ -43,6 +47,8 @@ def guessed_once(monkeypatch: pytest.MonkeyPatch, first_guess: list[FocalGuess])
         return first_guess[0]
 
     monkeypatch.setattr(guessed_intrinsics, "guess_focal_lengths", guess)
+    monkeypatch.setattr(pose_verb, "find_all_matches", lambda pairs, picks, _progress: FOUND_ONCE(pairs, picks))
+    monkeypatch.setattr(pose_verb, "pose_from_scene", SOLVED_ONCE)
 
 
 def solved(path: Path, *more: str) -> Outcome:

@@ -14,14 +14,17 @@ import cv2
 import numpy as np
 import pytest
 from pose_errors import PoseErrors, pose_errors
+from remembering import remembering
 from scipy.spatial.transform import Rotation
 from skewline.calib import Camera, Rig
 from skewline.node import DepthEngine
 from skewline.tools.cell import Cell, make_cell, moved, render_pair, true_depth
 from skewline.tools.cli import main
+from skewline.tools.verbs import pose as pose_verb
 
 CHESSBOARDS = Path(__file__).parent.parent / "data" / "chessboard-pairs"
 SIZE_A, SIZE_B = (800, 600), (640, 480)
+SOLVED_ONCE = remembering(pose_verb.pose_from_scene)
 
 
 @pytest.fixture(scope="module")
@@ -45,7 +48,10 @@ Run = Callable[..., dict[str, Any]]
 
 
 @pytest.fixture
-def pose(pictures: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> Run:
+def pose(pictures: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch) -> Run:
+    """The verb; the same pictures and picks are solved truly the first time alone, since one pose takes ten seconds."""
+    monkeypatch.setattr(pose_verb, "pose_from_scene", SOLVED_ONCE)
+
     def run(*more: str, status: int = 0, a: str = "a?.png", b: str = "b?.png") -> dict[str, Any]:
         files = ["--a", str(pictures / a), "--b", str(pictures / b)]
         known = ["--rig", str(pictures / "known.rig.json"), "-o", str(tmp_path / "new.rig.json")]
@@ -71,6 +77,7 @@ def errors(cell: Cell, rig: Rig) -> PoseErrors:
     return pose_errors(cell.rig, rig.R, rig.t, volume_points(cell), np.array(rig.covariance))
 
 
+@pytest.mark.timeout(400)
 def test_two_rendered_pairs_and_a_kept_baseline_give_the_true_rig(pose: Run, cell: Cell, tmp_path: Path) -> None:
     figures = pose("--keep-baseline", "--show", str(tmp_path / "matches.png"))
 
@@ -89,7 +96,7 @@ def test_two_rendered_pairs_and_a_kept_baseline_give_the_true_rig(pose: Run, cel
 
 
 def test_depth_with_the_found_rig_scores_as_with_the_true_one(pose: Run, cell: Cell, tmp_path: Path) -> None:
-    pose("--keep-baseline", a="a0.png", b="b0.png")
+    pose("--keep-baseline")
     pair = render_pair(cell, np.random.default_rng(0))
 
     def share_right(rig: Rig) -> float:
@@ -107,7 +114,8 @@ def test_depth_with_the_found_rig_scores_as_with_the_true_one(pose: Run, cell: C
 
 
 def test_without_a_length_the_rig_says_that_its_scale_is_not_known(pose: Run, cell: Cell, tmp_path: Path) -> None:
-    figures = pose("--no-polish")
+    (tmp_path / "picks.csv").write_text("\n".join(picked_lines(cell)), encoding="utf-8")
+    figures = pose("--matches", str(tmp_path / "picks.csv"), "--no-polish", a="a0.png", b="b0.png")
 
     rig = Rig.load(tmp_path / "new.rig.json")
     assert not rig.scale_known

@@ -154,6 +154,7 @@ def test_the_pairs_with_epipolar_lines_are_pictures_of_one_instant_the_worst_nam
     assert 0.02 < np.median(off) < 0.2
 
 
+@pytest.mark.usefixtures("without_plots")
 def test_thumbnails_are_whole_jpegs_and_a_missing_one_leaves_an_empty_picture(
     result: CalibrationResult, thumbnails: dict[tuple[str, str], np.ndarray], page: Page
 ) -> None:

@@ -10,7 +10,7 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Annotated, Any, Literal, TypeVar
+from typing import Annotated, Any, TypeVar
 
 from msgspec import Meta, Struct
 
@@ -80,9 +80,10 @@ class PublishConfig(Struct, frozen=True, kw_only=True, forbid_unknown_fields=Tru
 
 
 class ControlConfig(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
-    """``[control]``: where requests come in; an ``address`` of "none" takes none."""
+    """``[control]``: where requests come in, and whether any do."""
 
-    address: Address | Literal["none"] = "tcp://127.0.0.1:7603"
+    on: bool = True
+    address: Address = "tcp://127.0.0.1:7603"
 
 
 class _Tables(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
@@ -368,7 +369,9 @@ def _match(table: Mapping[str, Any]) -> MatchConfig:
 
 
 def _check_publish(publish: PublishConfig, control: ControlConfig, volume: VolumeConfig) -> None:
-    addresses = {"publish.depth": publish.depth, "publish.status": publish.status, "control.address": control.address}
+    addresses = {"publish.depth": publish.depth, "publish.status": publish.status}
+    if control.on:
+        addresses["control.address"] = control.address
     for (first, one), (second, other) in itertools.combinations(addresses.items(), 2):
         if one == other and not one.endswith((":0", ":*")):
             raise ConfigError(f"{first} and {second} are both {one}; expected two addresses")

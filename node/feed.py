@@ -160,8 +160,12 @@ class Feed:
             yield from self._count([item])
             return
         self._tap(item)
+        camera = self._cameras[item.camera]
         with self._lock:
-            refused = self._cameras[item.camera].accept(item)
+            well = camera.state == "delivering"
+            refused = camera.accept(item)
+        if well and camera.state != "delivering":  # what waits would be paired late
+            yield from self._count(self._pairer.forget())
         yield from self._count(self._pairer.add(item) if refused is None else [refused])
         self._tell_changes()
 

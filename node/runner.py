@@ -317,7 +317,7 @@ def run_node(
             Publisher(config.publish.depth, config.publish.status, packing=config.publish.packing, keeper=keeper)
         )
         control = None
-        if config.control.address != "none":
+        if config.control.on:
             control = ControlServer(config.control.address, keeper, commands, log=log)
             stack.callback(control.close)
         if on_ready:

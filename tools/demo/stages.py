@@ -80,7 +80,7 @@ def write_config(file: Path, cell: Cell, rig: Path, pairs: Path, **source: objec
     lines = [f"rig = {json.dumps(str(rig))}", "", "[volume]", f"near_m = {cell.near_m}", f"far_m = {cell.far_m}", ""]
     lines += ["[source]", *(f"{key} = {json.dumps(value)}" for key, value in settings.items()), "", "[publish]"]
     lines += ['depth = "tcp://127.0.0.1:0"', 'status = "tcp://127.0.0.1:0"', "wait_for_subscriber_s = 30"]
-    lines += ["", "[control]", 'address = "none"']
+    lines += ["", "[control]", "on = false"]
     file.write_text("\n".join(lines) + "\n", encoding="utf-8")
 
 

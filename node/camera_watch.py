@@ -101,11 +101,12 @@ class CameraWatch:
         self._stall.opened()  # the next complaint is due only when the new attempt gives nothing either
         return True
 
-    def report(self) -> CameraReport:
-        """Sum up, and begin to count the rate anew."""
+    def report(self, *, peek: bool = False) -> CameraReport:
+        """Sum up, and begin to count the rate anew unless this is but a peek."""
         now_s = time.monotonic()
         before_s, before = self._reported
-        self._reported = now_s, self._images
+        if not peek:
+            self._reported = now_s, self._images
         return CameraReport(
             state=self.state,
             state_s=now_s - self._since_s,

@@ -85,10 +85,15 @@ class Feed:
         """Whether images come at their own pace, so that the newest pair counts."""
         return self._sources[0].live
 
-    def view(self) -> FeedView:
-        """Say how each camera and the pairing stand; rates are since the last call. May be called from any thread."""
+    def view(self, *, peek: bool = False) -> FeedView:
+        """Say how each camera and the pairing stand; may be called from any thread.
+
+        Rates are since the last call that was no peek.
+        """
         with self._lock:
-            cameras: dict[str, CameraReport] = {name: camera.report() for name, camera in self._cameras.items()}
+            cameras: dict[str, CameraReport] = {
+                name: camera.report(peek=peek) for name, camera in self._cameras.items()
+            }
             offset = self._offset
         if offset is None:
             return FeedView(cameras=cameras)

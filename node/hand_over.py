@@ -27,8 +27,8 @@ class PairFeed(Protocol):
     def pairs(self, stop: threading.Event) -> Iterator[Pair | LostShot]:
         """Give pairs until ``stop`` is set or nothing more will come."""
 
-    def view(self) -> FeedView:
-        """Say how each camera and the pairing stand; may be called from any thread."""
+    def view(self, *, peek: bool = False) -> FeedView:
+        """Say how each camera and the pairing stand, rates since the last call that was no peek; from any thread."""
 
 
 class HandOver:

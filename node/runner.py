@@ -44,6 +44,9 @@ _BAD_PAIR_PAUSE_S = 0.02
 
 _PAUSE_TICK_S = 0.05
 
+_OLDEST_LIVE_NS = 60_000_000_000
+"""An image that was taken so long before the node began has not come from a camera."""
+
 _LAST_WORDS_S = 0.2
 """How long the last frames of a source that ended may take to leave."""
 
@@ -94,6 +97,7 @@ class Node:
     ) -> None:
         self._feed = feed
         self._access = access
+        self._began_ns = time.time_ns() - _OLDEST_LIVE_NS
         self._recorder = recorder or RecordSwitch()
         self._equipment = Equipment(engine, fingerprint, judge_frame)
         self._steering = steering
@@ -106,8 +110,8 @@ class Node:
 
     def run(self, stop: threading.Event) -> NodeStatus:
         """Publish until the feed ends or ``stop`` is set; return the figures of the whole run."""
-        next_status_s = time.monotonic()  # the first one at once: whoever asks finds a node that answers
         tally = self._tally
+        next_status_s = self._tell_status_at(time.monotonic())  # at once: whoever asks finds a node that answers
         ahead = read_ahead(self._feed, stop, self._lost, on_pair=tally.add_pair, on_drop=tally.add_dropped)
         with closing(ahead) as pairs:  # the reading ends with the loop, however that ends
             for pair in pairs:
@@ -125,6 +129,10 @@ class Node:
     @property
     def _paused(self) -> bool:
         return self._steering is not None and self._steering.paused
+
+    def status(self) -> NodeStatus:
+        """Say how the node stands now; may be called from any thread."""
+        return self._complete(self._tally.peek(self._feed.view(peek=True)))
 
     def _lost(self, lost: LostShot) -> None:
         self._tally.add_lost(lost.reason)
@@ -149,7 +157,8 @@ class Node:
         sent, message = self._publisher.send_depth(self._equipment.judge_frame(frame))
         self._recorder.keep_depth(message, sent.stamp_ns)
         stages_ms = {**frame.stages_ms, "publish": (time.perf_counter() - start_s) * 1e3}
-        latency_ms = (time.time_ns() - frame.stamp_ns) / 1e6 if frame.stamp_ns else None
+        # Images from before the node's start are recorded ones: what they were waiting for was not the node.
+        latency_ms = (time.time_ns() - frame.stamp_ns) / 1e6 if frame.stamp_ns > self._began_ns else None
         self._tally.add_published(latency_ms, stages_ms)
 
     def _tell_status_at(self, due_s: float) -> float:
@@ -297,32 +306,29 @@ def run_node(
     policy = AccessPolicy.from_config(config.access, config.base)
     steering = Steering(stop)
     recorder = RecordSwitch(None if config.record is None else lambda: begin_recording(config, publisher.session, log))
-    last: list[NodeStatus] = []
-
-    def note(status: NodeStatus) -> None:
-        last[:] = [status]
-        if on_status:
-            on_status(status)
+    running: list[Node] = []
 
     def equip(other: Rig) -> Equipment:
         check_same_cameras(other, rig)
         log.info("rig %s is taken in place of %s", other.fingerprint, rig.fingerprint)
         return equipment(other, config, make_engine)
 
-    commands = node_commands(steering, status=lambda: last[0] if last else None, equip=equip, record=recorder.turn)
+    commands = node_commands(
+        steering, status=lambda: running[0].status() if running else None, equip=equip, record=recorder.turn
+    )
     with ExitStack() as stack:
         # The sockets come first: a port in use must show at once, not after seconds of preparation.
         keeper = stack.enter_context(Gatekeeper(policy, log=log))
         publisher = stack.enter_context(
             Publisher(config.publish.depth, config.publish.status, packing=config.publish.packing, keeper=keeper)
         )
+        stack.callback(recorder.close)
         control = None
         if config.control.on:
             control = ControlServer(config.control.address, keeper, commands, log=log)
             stack.callback(control.close)
         if on_ready:
             on_ready(NodeAddresses(rig, publisher, control, policy))
-        stack.callback(recorder.close)
         feed = make_feed(config, kinds, rig, log, recorder.keep)
         recorder.waits = not feed.live
         first = equipment(rig, config, make_engine)
@@ -336,12 +342,13 @@ def run_node(
             fingerprint=first.fingerprint,
             picture=config.publish.picture,
             log=log,
-            on_status=note,
+            on_status=on_status,
             judge_frame=first.judge_frame,
             steering=steering,
             access=policy.describe(),
             recorder=recorder,
         )
+        running.append(node)
         summary = node.run(stop)
         publisher.close(linger_s=0.0 if stop.is_set() else _LAST_WORDS_S)
     return summary

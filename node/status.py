@@ -185,6 +185,11 @@ class Tally:
             window, self._window = self._window, _Span(now_s)
             return self._sum_up(window, now_s, feed or FeedView())
 
+    def peek(self, feed: FeedView | None = None) -> NodeStatus:
+        """Give what :meth:`status` would give, and let it go on."""
+        with self._lock:
+            return self._sum_up(self._window, self._clock(), feed or FeedView())
+
     def summary(self, feed: FeedView | None = None) -> NodeStatus:
         """Sum up the whole run; times look back on the last 10 000 frames at most."""
         with self._lock:

@@ -50,7 +50,7 @@ class Shown:
     def __init__(self, pictures: Sequence[tuple[Any, Any]], hold: int = HOLD) -> None:
         self._pictures = [pair for pair in pictures for _ in range(hold)]
 
-    def view(self) -> FeedView:
+    def view(self, *, peek: bool = False) -> FeedView:  # noqa: ARG002 - part of the protocol
         return FeedView()
 
     def pairs(self, stop: threading.Event) -> Iterator[Pair | LostShot]:

@@ -132,8 +132,15 @@ class Rig:
         return cls._from_object(read_object(path, "rig file", FORMAT, VERSION), str(path))
 
     @classmethod
-    def from_text(cls, text: str, name: str) -> Rig:
-        """Read what a rig file holds; ``name`` stands in messages.
+    def parse(cls, text: str, name: str) -> Rig:
+        """Read a rig file's text, as a recording keeps it.
+
+        Parameters
+        ----------
+        text : str
+            What stands in the file.
+        name : str
+            Where the text is from, for messages.
 
         Raises
         ------
@@ -317,18 +324,22 @@ def read_object(path: str | os.PathLike[str], kind: str, form: str, version: int
         Where the file is missing, cut short, or of another format or version; ``kind`` is what the message calls it.
     """
     try:
-        text = Path(path).read_text(encoding="utf-8")
+        data = Path(path).read_bytes()
     except OSError as exc:
         raise RigFileError(f"cannot read {kind} {path}: {exc.strerror}; expected a file that calibrate wrote") from exc
-    except ValueError as exc:
-        raise RigFileError(f"{kind} {path} is not whole JSON ({exc}); {FILE_REMEDY}") from exc
-    return parse_object(text, str(path), kind, form, version)
+    return parse_object(data, str(path), kind, form, version)
 
 
-def parse_object(text: str, name: str, kind: str, form: str, version: int) -> dict[str, Any]:
-    """Do as :func:`read_object` with a text at hand, which messages call ``name``."""
+def parse_object(text: str | bytes, name: str, kind: str, form: str, version: int) -> dict[str, Any]:
+    """Read the text of such a file; ``name`` is where it is from.
+
+    Raises
+    ------
+    RigFileError
+        Where it is cut short, or of another format or version.
+    """
     try:
-        content = json.loads(text)
+        content = json.loads(text.decode() if isinstance(text, bytes) else text)
     except (ValueError, RecursionError) as exc:
         raise RigFileError(f"{kind} {name} is not whole JSON ({exc}); {FILE_REMEDY}") from exc
     if not isinstance(content, dict) or content.get("format") != form:

@@ -68,7 +68,7 @@ def node_commands(
         return {}
 
     def take_rig(values: RigValues) -> Mapping[str, Any]:
-        equipment = equip(Rig.from_text(values.text, values.name))
+        equipment = equip(Rig.parse(values.text, values.name))
         steering.equip(equipment)
         return {"rig": equipment.fingerprint}
 

@@ -208,6 +208,18 @@ def test_a_rig_comes_back_from_its_file_to_the_bit(kind: str, tmp_path: Path) ->
     assert loaded.fingerprint == rig.fingerprint
 
 
+def test_a_rig_files_text_is_read_as_the_file_is_and_its_mistakes_carry_the_name_given(tmp_path: Path) -> None:
+    rig = make_rig()
+    rig.save(tmp_path / "rig.json")
+    text = (tmp_path / "rig.json").read_text(encoding="utf-8")
+
+    assert Rig.parse(text, "inside").fingerprint == rig.fingerprint
+    with pytest.raises(RigFileError, match="rig file inside is not whole JSON"):
+        Rig.parse(text[:-20], "inside")
+    with pytest.raises(RigFileError, match=r"rig file inside lacks the key 'R'"):
+        Rig.parse(text.replace('"R"', '"Q"'), "inside")
+
+
 def test_the_file_is_utf_8_json_with_the_format_version_and_row_major_arrays(tmp_path: Path) -> None:
     make_rig(notes={"bench": "Prüfstand"}).save(str(tmp_path / "bench.rig.json"))
     content = json.loads((tmp_path / "bench.rig.json").read_bytes().decode("utf-8"))

@@ -11,6 +11,7 @@ import time
 from collections.abc import Callable, Mapping
 from contextlib import ExitStack, closing
 from dataclasses import dataclass, replace
+from typing import Protocol
 
 from msgspec import structs
 
@@ -51,6 +52,20 @@ _LAST_WORDS_S = 0.2
 """How long the last frames of a source that ended may take to leave."""
 
 
+class Outlet(Protocol):
+    """What the node needs of a publisher."""
+
+    @property
+    def session(self) -> str:
+        """Name of the node's run."""
+
+    def send_depth(self, frame: DepthFrame) -> tuple[DepthFrame, bytes]:
+        """Send one frame under its number; give it back as it was sent, and its bytes."""
+
+    def send_status(self, status: NodeStatus) -> None:
+        """Send one status message."""
+
+
 class Node:
     """One feed, one engine, one publisher; ``run`` drives them until the feed ends or it is told to stop.
 
@@ -60,7 +75,7 @@ class Node:
         Where pairs come from.
     engine : Engine
         What makes depth of them.
-    publisher : Publisher
+    publisher : Outlet
         Where frames go.
     fingerprint : str
         The rig's.
@@ -84,7 +99,7 @@ class Node:
         self,
         feed: PairFeed,
         engine: Engine,
-        publisher: Publisher,
+        publisher: Outlet,
         *,
         fingerprint: str,
         picture: bool = False,

@@ -37,6 +37,8 @@ class RecordingSettings(Struct, frozen=True, kw_only=True, forbid_unknown_fields
         At any pace the source waits for the node, and nothing is lost.
     from_s, to_s : float, optional
         The part that is wanted, by arrival, in seconds from the recording's first.
+    stamps : {"source", "arrival"}
+        What the images are stamped with: their own stamps, or their arrivals at the recording host.
     loop : bool
         Begin again after the last image, with stamps and arrivals that go on rising: each round adds the recording's
         length to them.
@@ -46,6 +48,7 @@ class RecordingSettings(Struct, frozen=True, kw_only=True, forbid_unknown_fields
     pace: Literal["recorded", "fast"] | Annotated[float, Meta(gt=0, le=1000)] = "recorded"
     from_s: Annotated[float, Meta(ge=0)] = 0.0
     to_s: Annotated[float, Meta(gt=0)] | None = None
+    stamps: Literal["source", "arrival"] = "source"
     loop: bool = False
 
 
@@ -140,7 +143,7 @@ class RecordingSource:
                 return
 
     def _round(self) -> Iterator[Shot | LostShot]:
-        window = self._window()
+        window = window_of(self._info, self._settings.from_s, self._settings.to_s)
         for path in self._segments:
             try:
                 segment = Segment.of(path)
@@ -149,12 +152,6 @@ class RecordingSource:
                         yield item
             except (NodeError, OSError) as exc:
                 raise SourceError(f"the recording cannot be read on: {exc}") from exc
-
-    def _window(self) -> Window:
-        start_ns = self._info.start_ns + round(self._settings.from_s * 1e9)
-        if self._settings.to_s is None:
-            return Window(start_ns if self._settings.from_s else 0)
-        return Window(start_ns, self._info.start_ns + round(self._settings.to_s * 1e9))
 
     def _image(self, message: FoundMessage, path: Path) -> Shot | LostShot | None:
         """Decode an image; None for other messages, and for cameras that are not wanted."""
@@ -168,7 +165,17 @@ class RecordingSource:
             image = decode_image(message.data, MOST_PIXELS).image
         except NodeError as exc:
             return LostShot(camera, "damaged image", f"{message.topic} {message.sequence} in {path.name}: {exc}")
+        if self._settings.stamps == "arrival":
+            image = replace(image, stamp_ns=message.log_ns)
         return Shot(camera, image, message.log_ns)
+
+
+def window_of(info: RecordingInfo, from_s: float, to_s: float | None) -> Window:
+    """Give the arrivals of a part of a recording, from and to in seconds from its first; without an end, to its last."""
+    start_ns = info.start_ns + round(from_s * 1e9)
+    if to_s is None:
+        return Window(start_ns if from_s else 0)
+    return Window(start_ns, info.start_ns + round(to_s * 1e9))
 
 
 class _Gaps:

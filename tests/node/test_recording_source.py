@@ -88,6 +88,14 @@ def test_depth_frames_in_a_recording_are_passed_over(tmp_path: Path) -> None:
     assert numbers(all_of(source_of(tmp_path))) == ["a0", "b0"]
 
 
+def test_arrivals_can_stand_for_stamps(tmp_path: Path) -> None:
+    record(tmp_path, shots_of(2))
+
+    shots = all_of(source_of(tmp_path, stamps="arrival"))
+
+    assert [shot.stamp_ns for shot in shots if isinstance(shot, Shot)] == [shot.arrived_ns for shot in shots_of(2)]
+
+
 def test_the_recorded_pace_keeps_the_gaps_and_a_factor_divides_them(tmp_path: Path) -> None:
     record(tmp_path, [make_shot("a", number) for number in (0, 3, 20)])  # 0, 30 and 200 ms
 

@@ -7,6 +7,7 @@ import secrets
 import threading
 import time
 import warnings
+from collections.abc import Callable
 from dataclasses import replace
 from types import TracebackType
 from typing import Any
@@ -40,6 +41,8 @@ class Publisher:
         How pixels travel.
     keeper : Gatekeeper, optional
         Who may connect and where may be bound, entered already; without, anybody and anywhere.
+    tap : callable, optional
+        ``tap(message, stamp_ns)``, called with the bytes of each depth message that was sent; it must not wait.
     context : zmq.Context, optional
         A context of the caller's; by default the keeper's, or else one that the publisher owns.
 
@@ -58,6 +61,7 @@ class Publisher:
         *,
         packing: Packing | None = None,
         keeper: Gatekeeper | None = None,
+        tap: Callable[[bytes, int], None] = lambda *_: None,
         context: zmq.Context[Any] | None = None,
     ) -> None:
         self.session = secrets.token_hex(8)
@@ -67,6 +71,7 @@ class Publisher:
         if context is None and keeper is not None:
             context = keeper.context
         self._keeper = keeper
+        self._tap = tap
         self._revocations = 0 if keeper is None else keeper.revocations
         self._own_context = context is None
         self._context = zmq.Context() if context is None else context
@@ -94,15 +99,16 @@ class Publisher:
             warnings.warn("a Publisher was dropped unclosed; use it in a with statement", ResourceWarning, stacklevel=2)
             self.close()
 
-    def send_depth(self, frame: DepthFrame) -> tuple[DepthFrame, bytes]:
-        """Send one frame under the next sequence number and this session's name; give it back as it was sent, and its bytes."""
+    def send_depth(self, frame: DepthFrame) -> DepthFrame:
+        """Send one frame under the next sequence number and this session's name; give it back as it was sent."""
         sent = replace(frame, sequence=self._sequence, session=self.session, published_ns=time.time_ns())
         self._turn_out_revoked()
         self._hear_subscribers()
         message = encode_depth(sent, self._packing)
         self._depth.send(message, zmq.NOBLOCK)
         self._sequence += 1
-        return sent, message
+        self._tap(message, sent.stamp_ns)
+        return sent
 
     def send_status(self, status: NodeStatus) -> None:
         """Send one status message."""

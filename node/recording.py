@@ -58,6 +58,11 @@ class RecorderStatus:
     dropped: int
     reason: str
 
+    @property
+    def stopped_early(self) -> bool:
+        """Whether it ended by itself: the disk, a limit."""
+        return not self.on and self.reason != TOLD_TO_STOP
+
 
 class Recorder:
     """One recording, from its making to ``close``; a thread of its own encodes and writes.

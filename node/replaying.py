@@ -121,9 +121,9 @@ class SteppedFeed:
         """As the feed says."""
         return self._feed.live
 
-    def view(self) -> FeedView:
+    def view(self, *, peek: bool = False) -> FeedView:
         """As the feed says."""
-        return self._feed.view()
+        return self._feed.view(peek=peek)
 
     def pairs(self, stop: threading.Event) -> Iterator[Pair | LostShot]:
         """Give the feed's pairs, each after its leave; losses come at once."""

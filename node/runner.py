@@ -59,8 +59,8 @@ class Outlet(Protocol):
     def session(self) -> str:
         """Name of the node's run."""
 
-    def send_depth(self, frame: DepthFrame) -> tuple[DepthFrame, bytes]:
-        """Send one frame under its number; give it back as it was sent, and its bytes."""
+    def send_depth(self, frame: DepthFrame) -> DepthFrame:
+        """Send one frame under its number; give it back as it was sent."""
 
     def send_status(self, status: NodeStatus) -> None:
         """Send one status message."""
@@ -169,8 +169,7 @@ class Node:
             stop.wait(_BAD_PAIR_PAUSE_S)
             return
         start_s = time.perf_counter()
-        sent, message = self._publisher.send_depth(self._equipment.judge_frame(frame))
-        self._recorder.keep_depth(message, sent.stamp_ns)
+        self._publisher.send_depth(self._equipment.judge_frame(frame))
         stages_ms = {**frame.stages_ms, "publish": (time.perf_counter() - start_s) * 1e3}
         # Images from before the node's start are recorded ones: what they were waiting for was not the node.
         latency_ms = (time.time_ns() - frame.stamp_ns) / 1e6 if frame.stamp_ns > self._began_ns else None
@@ -335,7 +334,13 @@ def run_node(
         # The sockets come first: a port in use must show at once, not after seconds of preparation.
         keeper = stack.enter_context(Gatekeeper(policy, log=log))
         publisher = stack.enter_context(
-            Publisher(config.publish.depth, config.publish.status, packing=config.publish.packing, keeper=keeper)
+            Publisher(
+                config.publish.depth,
+                config.publish.status,
+                packing=config.publish.packing,
+                keeper=keeper,
+                tap=recorder.keep_depth,
+            )
         )
         stack.callback(recorder.close)
         control = None

@@ -23,6 +23,8 @@ VERBS = {
     "pose": "R and t between two cameras from any scene, without a target",
     "run": "run the node: frame pairs in, metric depth out over ZeroMQ",
     "control": "ask a running node: status, pause, resume, record, another rig, stop",
+    "record": "keep the images of both cameras as they come, for replaying",
+    "replay": "make depth of a recording again, the same every time, and compare rigs or settings on it",
     "listen": "show the depth frames that a node publishes, and save them",
     "keys": "make keys, and decide which programs a node lets in",
 }

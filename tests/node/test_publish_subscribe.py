@@ -80,7 +80,7 @@ def test_latest_gives_the_newest_and_drops_the_older(publisher: Publisher) -> No
         while next(every).sequence < publisher._sequence - 1:
             pass
         for _ in range(10):
-            last = publisher.send_depth(frame())[0].sequence
+            last = publisher.send_depth(frame()).sequence
             assert next(every).sequence == last
         given = [first]
         while given[-1].sequence < last:
@@ -108,7 +108,7 @@ def test_a_stalled_reader_of_latest_finds_the_newest_frame_not_an_old_one(publis
         every = connected(witness, publisher)
         begin_latest(node, publisher)
         for _ in range(50):
-            last = publisher.send_depth(frame())[0].sequence
+            last = publisher.send_depth(frame()).sequence
             while next(every).sequence < last:
                 pass
         time.sleep(0.2)  # let the newest cross the loopback; too short a wait could only fail this test

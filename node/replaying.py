@@ -29,11 +29,11 @@ from .publisher import Publisher
 from .recording_format import DEPTH_TOPIC, IMAGE_TOPICS
 from .recording_info import RecordingInfo
 from .recording_reader import EVER, FoundMessage, Segment, Window
-from .runner import Engine
 from .shot import CameraName, LostShot, Pair
 from .sources import BUILT_IN
 from .sources.recording import MOST_PIXELS
 from .status import NodeStatus
+from .steering import Engine
 from .wire import Packing, decode_depth, encode_depth
 
 _CAMERA_OF: dict[str, CameraName] = {topic: camera for camera, topic in IMAGE_TOPICS.items()}

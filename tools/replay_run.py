@@ -34,8 +34,9 @@ from ..node.replaying import (
     holds_images,
     settings_from,
 )
-from ..node.runner import Engine, Node, depth_engine, judged
+from ..node.runner import Node, depth_engine, judged
 from ..node.sources.recording import RecordingSettings, RecordingSource, window_of
+from ..node.steering import Engine
 from ..node.wire import decode_depth, encode_depth
 
 _LAST_WORDS_S = 0.2

@@ -156,18 +156,20 @@ def prepare_folder(folder: Path, tables: dict[str, str]) -> Path:
 
 
 @contextmanager
-def running_node(config: Path) -> Iterator[tuple[int, str, str]]:
-    """Run a node; give its process id and addresses."""
+def running_node(config: Path) -> Iterator[tuple[int, dict[str, str]]]:
+    """Run a node; give its process id, and its addresses by what they are for."""
     command = [sys.executable, "-m", "skewline.tools.cli", "run", str(config)]
     with subprocess.Popen(command, stderr=subprocess.PIPE, text=True) as process:
         try:
             lines = iter(process.stderr or ())
-            depth = next(line.split()[-1] for line in lines if "depth on" in line)
-            status = next(line.split()[-1] for line in lines if "status on" in line)
+            addresses = {
+                what: next(line.split()[-1] for line in lines if f"{what} on" in line)
+                for what in ("depth", "status", "control")
+            }
             # Somebody has to read on, or a talkative node would wait for room in the pipe.
             drain = threading.Thread(target=lambda: deque(lines, maxlen=0), daemon=True)
             drain.start()
-            yield process.pid, depth, status
+            yield process.pid, addresses
         finally:
             process.terminate()
             process.wait()
@@ -231,10 +233,10 @@ def measure(kind: str, seconds: float) -> Figures:
         for camera, _ in cameras.values():
             stack.callback(camera.end)
             camera.start()
-        pid, depth, status_address = stack.enter_context(running_node(config))
+        pid, addresses = stack.enter_context(running_node(config))
         statuses: list[NodeStatus] = []
-        threading.Thread(target=_read_status, args=(status_address, statuses), daemon=True).start()
-        reader = Reader(depth)
+        threading.Thread(target=_read_status, args=(addresses["status"], statuses), daemon=True).start()
+        reader = Reader(addresses["depth"])
         reader.start()
         stack.callback(reader.stop.set)
         until(lambda: bool(reader.came))

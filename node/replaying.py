@@ -25,16 +25,16 @@ from .frame import DepthFrame
 from .hand_over import PairFeed
 from .image_message import decode_image
 from .pairing import PairingSettings
-from .publisher import Publisher
 from .recording_format import DEPTH_TOPIC, IMAGE_TOPICS
 from .recording_info import RecordingInfo
 from .recording_reader import EVER, FoundMessage, Segment, Window
+from .runner import Outlet
 from .shot import CameraName, LostShot, Pair
 from .sources import BUILT_IN
 from .sources.recording import MOST_PIXELS
 from .status import NodeStatus
 from .steering import Engine
-from .wire import Packing, decode_depth, encode_depth
+from .wire import Packing, decode_depth, encode_depth, packing_of
 
 _CAMERA_OF: dict[str, CameraName] = {topic: camera for camera, topic in IMAGE_TOPICS.items()}
 
@@ -71,13 +71,13 @@ class ReplayOutlet:
 
     Parameters
     ----------
-    publisher : Publisher or None
+    publisher : Outlet or None
         Sends and numbers the frames; without one nothing leaves the process.
     listeners : sequence of callable
         Called with each numbered frame, in order.
     """
 
-    def __init__(self, publisher: Publisher | None, listeners: Sequence[Callable[[DepthFrame], None]] = ()) -> None:
+    def __init__(self, publisher: Outlet | None, listeners: Sequence[Callable[[DepthFrame], None]] = ()) -> None:
         self.session = publisher.session if publisher else "replay"
         self.frames = 0
         self._publisher = publisher
@@ -182,6 +182,12 @@ class RecordedDepth:
             if message.topic == DEPTH_TOPIC and message.intact
         )
         self._head: DepthFrame | None = None
+        self._packing = Packing()
+
+    @property
+    def packing(self) -> Packing:
+        """How the frame given last was packed."""
+        return self._packing
 
     def at(self, stamp_ns: int) -> DepthFrame | None:
         """Give the frame of a stamp; None where there is none, and for stamps before the last one asked for.
@@ -195,7 +201,7 @@ class RecordedDepth:
             message = next(self._messages, None)
             if message is None:
                 return None
-            self._head = decode_depth(message.data)
+            self._head, self._packing = decode_depth(message.data), packing_of(message.data)
         return self._head if stamp_ns and self._head and self._head.stamp_ns == stamp_ns else None
 
 

@@ -218,6 +218,18 @@ def decode_depth(data: bytes) -> DepthFrame:
     )
 
 
+def packing_of(data: bytes) -> Packing:
+    """Say how a depth message's pixels are packed.
+
+    Raises
+    ------
+    WireError
+        For bytes that are no whole depth message of this version.
+    """
+    message = _decode(data, DEPTH_FORMAT, _DepthMessage)
+    return Packing(pixels=message.pixels, depth_unit_m=message.depth_unit, sigma_unit_m=message.sigma_unit)
+
+
 def _trust_map(trust: Trust) -> _TrustMap:
     reasons = [
         _ReasonMap(

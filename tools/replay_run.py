@@ -288,7 +288,7 @@ def _engine(
 
 
 def _against_recorded(info: RecordingInfo, setup: Setup, start_ns: int) -> tuple[Engine, DepthDifference]:
-    """Compare with recorded frames; ours are packed as they travel, so that nothing but depth itself differs."""
+    """Compare with recorded frames; ours are packed as they were, so that nothing but depth itself differs."""
     if DEPTH_TOPIC not in info.topics:
         raise NodeError(
             f"{info.segments[0]} holds no depth frames; expected some for --against recorded: record with record.depth = "
@@ -296,10 +296,10 @@ def _against_recorded(info: RecordingInfo, setup: Setup, start_ns: int) -> tuple
         )
     inside = setup.rig if info.rig is None else Rig.parse(info.rig, f"the rig inside {info.segments[0]}")
     difference, recorded = DepthDifference(setup.rig.a, inside.a), RecordedDepth(info.segments, start_ns)
-    packing = setup.settings.config.publish.packing
 
     def compare(_image_a: NDArray[Any], _image_b: NDArray[Any], frame: DepthFrame) -> None:
-        difference.add(decode_depth(encode_depth(frame, packing)), recorded.at(frame.stamp_ns))
+        other = recorded.at(frame.stamp_ns)
+        difference.add(decode_depth(encode_depth(frame, recorded.packing)), other)
 
     return ComparingEngine(setup.engine(), compare), difference
 

@@ -17,8 +17,9 @@ from skewline.node import ConfigError, DepthEngine, DepthFrame, NodeError
 from skewline.node.camera_report import FeedView
 from skewline.node.match import MatcherName
 from skewline.node.recording_info import read_recording
-from skewline.node.replaying import DepthDigest, RecordedDepth, SteppedFeed, check_sizes, settings_from
+from skewline.node.replaying import DepthDigest, RecordedDepth, ReplayOutlet, SteppedFeed, check_sizes, settings_from
 from skewline.node.shot import LostShot, Pair, Shot, StampedImage
+from skewline.node.status import NodeStatus, Tally
 from skewline.node.trust import Trust
 from skewline.node.wire import Packing, encode_depth
 
@@ -164,6 +165,42 @@ def test_a_rig_of_other_pixels_is_refused_by_the_first_images(tmp_path: Path) ->
     check_sizes(info, Rig(a=small, b=fitting, R=np.eye(3), t=np.array([-0.1, 0, 0])), "rig.json")
     with pytest.raises(NodeError, match=r"camera B's images are of 100x48 pixels, and rig\.json .* 64x48.*--rig"):
         check_sizes(info, Rig(a=small, b=small, R=np.eye(3), t=np.array([-0.1, 0, 0])), "rig.json")
+
+
+class Sent:
+    """Stands in for a publisher: numbers frames from 100 on, and keeps what it was given."""
+
+    session = "of the publisher"
+
+    def __init__(self) -> None:
+        self.frames: list[DepthFrame] = []
+        self.statuses: list[NodeStatus] = []
+
+    def send_depth(self, frame: DepthFrame) -> DepthFrame:
+        self.frames.append(replace(frame, sequence=100 + len(self.frames)))
+        return self.frames[-1]
+
+    def send_status(self, status: NodeStatus) -> None:
+        self.statuses.append(status)
+
+
+def test_what_is_published_is_what_is_summed_up_and_no_latency_is_made_of_old_stamps() -> None:
+    tally = Tally("s", "f")
+    tally.add_published(1e12, {"match": 5.0})
+    sent, heard, alone = Sent(), list[DepthFrame](), list[DepthFrame]()
+    outlet, quiet = ReplayOutlet(sent, [heard.append]), ReplayOutlet(None, [alone.append])
+    for _ in range(2):
+        outlet.send_depth(frame_of())
+        quiet.send_depth(frame_of())
+    outlet.send_status(tally.status())
+    quiet.send_status(tally.status())
+
+    assert heard == sent.frames
+    assert [frame.sequence for frame in heard] == [100, 101]
+    assert [frame.sequence for frame in alone] == [0, 1]
+    (status,) = sent.statuses
+    assert (status.published, status.latency_p50_ms, status.latency_p99_ms) == (1, None, None)
+    assert status.stages_ms == {"match": 5.0}
 
 
 class Pairs:

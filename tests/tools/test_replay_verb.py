@@ -23,7 +23,7 @@ from skewline.node.depth_difference import OTHER_VIEW, SAME_VIEW
 from skewline.node.publisher import Publisher
 from skewline.node.recording_info import find_recording, read_recording
 from skewline.node.shot import BOTH
-from skewline.node.wire import encode_depth
+from skewline.node.wire import Packing, encode_depth
 from skewline.tools.cli import main
 from skewline.tools.replay_run import ReplayOptions, ReplayResult, make_setup, replay
 
@@ -210,7 +210,8 @@ def test_a_part_is_replayed_by_arrival(plane_bench: Any, verb: Verb) -> None:
 
 def test_a_baseline_one_percent_longer_makes_depth_one_percent_larger(plane_bench: Any, verb: Verb) -> None:
     name, rig = record_plane(plane_bench, pairs=4), lengthened(plane_bench, 1.01)
-    difference = figures(verb, name, "--fast", "--against-rig", rig)["difference"]
+    values = figures(verb, name, "--fast", "--digest", "--against-rig", rig)
+    difference = values["difference"]
 
     assert difference["compared"] == OTHER_VIEW  # the other rig has other disparities, and so another view
     assert difference["frames"] == 4
@@ -219,6 +220,7 @@ def test_a_baseline_one_percent_longer_makes_depth_one_percent_larger(plane_benc
     assert difference["gained_share"] < 0.01
     assert difference["lost_share"] < 0.01
     assert Rig.load(rig).baseline_m == pytest.approx(0.101)
+    assert values["digest"] == digest(verb, name, "--fast")  # of this run; comparing leaves it alone
 
 
 def test_the_same_settings_change_nothing_and_others_are_told_in_words(plane_bench: Any, verb: Verb) -> None:
@@ -238,7 +240,7 @@ def test_the_same_settings_change_nothing_and_others_are_told_in_words(plane_ben
     assert f"lost {other['lost_share']:.2%}" in out
 
 
-def record_with_depth(bench: Any, verb: Verb, *, leave_out: int) -> Path:
+def record_with_depth(bench: Any, packing: Packing, *, leave_out: int) -> Path:
     """Record pairs with the depth that a node would have published of them, but for one."""
     name = record_plane(bench, pairs=5, name="first")
     frames = list[DepthFrame]()
@@ -248,13 +250,16 @@ def record_with_depth(bench: Any, verb: Verb, *, leave_out: int) -> Path:
             for camera in BOTH:
                 writing.record(plane_shot(bench, camera, number))
             if number != leave_out:
-                writing.record_depth(encode_depth(frame), frame.stamp_ns)
+                writing.record_depth(encode_depth(frame, packing), frame.stamp_ns)
     folder: Path = bench.folder
     return folder / "shift"
 
 
-def test_recorded_depth_is_found_again_to_the_bit_and_what_is_missing_is_counted(plane_bench: Any, verb: Verb) -> None:
-    name = record_with_depth(plane_bench, verb, leave_out=2)
+@pytest.mark.parametrize("packing", [Packing(), Packing(pixels="float32"), Packing(depth_unit_m=1e-3)])
+def test_recorded_depth_is_found_again_to_the_bit_and_what_is_missing_is_counted(
+    plane_bench: Any, verb: Verb, packing: Packing
+) -> None:
+    name = record_with_depth(plane_bench, packing, leave_out=2)
     difference = figures(verb, name, "--fast", "--against", "recorded")["difference"]
     changed = figures(verb, name, "--fast", "--against", "recorded", "--rig", lengthened(plane_bench, 1.01))
 

@@ -213,6 +213,7 @@ def _figures(result: ReplayResult) -> dict[str, Any]:
         "replayed_s": result.replayed_s,
         "took_s": result.took_s,
         "times_real": result.times_real,
+        "stages_ms": status.stages_ms,
         "to_the_end": result.to_the_end,
         "digest": result.digest,
         "difference": None if result.difference is None else dataclasses.asdict(result.difference),

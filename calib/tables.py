@@ -7,11 +7,12 @@ import math
 import re
 import tomllib
 from collections.abc import Mapping
+from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, Generic, TypeVar
 
 import msgspec
-from msgspec import Struct, inspect
+from msgspec import Struct, inspect, structs
 
 _Table = TypeVar("_Table", bound=Struct)
 
@@ -32,10 +33,53 @@ def read_toml(path: Path, what: str, error: type[Exception]) -> dict[str, Any]:
         raise error(f"{path} is no TOML file: {exc}; mend it there") from exc
 
 
+@dataclass(frozen=True)
+class TableReading(Generic[_Table]):
+    """What came of one table.
+
+    Attributes
+    ----------
+    value : msgspec.Struct or None
+        The value class; None where a key is missing or bad. Unknown keys alone do not keep it from being made.
+    sound : mapping of str to Any
+        What every key came to that is good or was left to its default: enough to check one key against another
+        although a third is bad.
+    faults : tuple of str
+        Each names the key's path, the value and what is allowed.
+    """
+
+    value: _Table | None
+    sound: Mapping[str, Any]
+    faults: tuple[str, ...]
+
+
 def checked_table(
     table: Mapping[str, Any], kind: type[_Table], name: str, error: type[Exception], *, also: tuple[str, ...] = ()
 ) -> _Table:
-    """Turn one flat table into its value class; the one place where msgspec's refusals become ours.
+    """Turn one flat table into its value class, or refuse its first fault.
+
+    Parameters
+    ----------
+    table, kind, name, also
+        As for :func:`read_table`.
+    error : type of Exception
+        What to raise.
+
+    Raises
+    ------
+    error
+        Where a key is missing, unknown or out of range: names the key's path, the value and what is allowed.
+    """
+    reading = read_table(table, kind, name, also=also)
+    if reading.value is None or reading.faults:
+        raise error(reading.faults[0])
+    return reading.value
+
+
+def read_table(
+    table: Mapping[str, Any], kind: type[_Table], name: str, *, also: tuple[str, ...] = ()
+) -> TableReading[_Table]:
+    """Turn one flat table into its value class and find all its faults; where msgspec's refusals become ours.
 
     Parameters
     ----------
@@ -45,41 +89,48 @@ def checked_table(
         The value class; its fields and their bounds are what is allowed.
     name : str
         The table's path in the file, for messages; empty for the top level.
-    error : type of Exception
-        What to raise.
     also : tuple of str
         Keys that are allowed but were taken out before.
-
-    Raises
-    ------
-    error
-        Where a key is missing, unknown or out of range: names the key's path, the value and what is allowed.
     """
-    described = inspect.type_info(kind)
-    assert isinstance(described, inspect.StructType)  # noqa: S101 - for the type checker: kind is a Struct
-    allowed = {field.name: field.type for field in described.fields}
-    for key in table:
-        if key not in allowed:
-            raise error(_unknown(name, key, table[key], [*allowed, *also]))
-    for field in described.fields:
-        if field.required and field.name not in table:
-            raise error(f"{_path(name, field.name)} is missing; expected {_describe(field.type)}")
-    for key, value in table.items():
-        if isinstance(value, float) and not math.isfinite(value):
-            raise error(f"{_path(name, key)} is {value}; expected {_describe(allowed[key])}")
+    fields = {field.name: field for field in structs.fields(kind)}
+    faults = [_unknown(name, key, value, [*fields, *also]) for key, value in table.items() if key not in fields]
+    sound: dict[str, Any] = {}
+    missing, bad = list[str](), list[str]()
+    for key, field in fields.items():
+        if key in table:
+            fault = _fault_of(table[key], field.type, key, name)
+            if fault is None:
+                sound[key] = msgspec.convert(table[key], field.type)
+            else:
+                bad.append(fault)
+        elif field.required:
+            missing.append(f"{_path(name, key)} is missing; expected {_describe(inspect.type_info(field.type))}")
+        else:
+            sound[key] = field.default if field.default is not msgspec.NODEFAULT else field.default_factory()
+    faults += [*missing, *bad]
+    if missing or bad:
+        return TableReading(None, sound, tuple(faults))
     try:
-        return msgspec.convert(table, kind)
+        value = msgspec.convert({key: table[key] for key in fields if key in table}, kind)
+    except msgspec.ValidationError as exc:  # what the value class itself finds wrong with the whole
+        return TableReading(None, sound, (*faults, f"{name + ': ' if name else ''}{str(exc).partition(' - at')[0]}"))
+    return TableReading(value, sound, tuple(faults))
+
+
+def _fault_of(value: Any, kind: Any, key: str, table: str) -> str | None:
+    """Say what is wrong with one key's value; None where nothing is."""
+    if isinstance(value, float) and not math.isfinite(value):
+        return f"{_path(table, key)} is {value}; expected {_describe(inspect.type_info(kind))}"
+    try:
+        msgspec.convert(value, kind)
     except msgspec.ValidationError as exc:
-        # msgspec ends with the place: "... - at `$.files[1]`"
-        keys = re.findall(r"\.([^.\[`]+)|\[([0-9]+)\]", str(exc).rpartition("`$")[2])
-        given: Any = table
-        for member, index in keys:
+        place, given = key, value
+        # msgspec ends with the place: "... - at `$[1]`"
+        for member, index in re.findall(r"\.([^.\[`]+)|\[([0-9]+)\]", str(exc).partition(" - at `$")[2]):
+            place += f".{member}" if member else f"[{index}]"
             given = given[member] if member else given[int(index)]
-        if not keys:  # what the value class itself finds wrong with the whole
-            raise error(f"{name + ': ' if name else ''}{str(exc).partition(' - at')[0]}") from exc
-        first = keys[0][0]
-        place = first + "".join(f"[{index}]" for _, index in keys[1:])
-        raise error(f"{_path(name, place)} is {given!r}; expected {_describe(allowed[first])}") from exc
+        return f"{_path(table, place)} is {given!r}; expected {_describe(inspect.type_info(kind))}"
+    return None
 
 
 def _path(table: str, key: str) -> str:

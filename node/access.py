@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import ipaddress
 import socket
+from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated
@@ -45,13 +46,9 @@ class AccessPolicy:
     allow_plain: bool = False
 
     def __post_init__(self) -> None:
-        if (self.key is None) != (self.allowed is None):
-            given, missing = ("allowed", "key") if self.key is None else ("key", "allowed")
-            raise ConfigError(f"access.{given} is given without access.{missing}; expected both or neither: give both")
-        if self.key is not None and self.allow_plain:
-            raise ConfigError(
-                "access.allow_plain is true although access.key is given; expected one of them: with a key nothing is plain"
-            )
+        faults = tuple(_contradictions(self.key is not None, self.allowed is not None, self.allow_plain))
+        if faults:
+            raise ConfigError(*faults)
 
     @classmethod
     def from_config(cls, config: AccessConfig, base: Path) -> AccessPolicy:
@@ -60,15 +57,21 @@ class AccessPolicy:
         Raises
         ------
         ConfigError
-            Where keys are given that do not go together, the key file will not do or the folder is missing.
+            Where keys are given that do not go together, the key file will not do or the folder is missing; it holds
+            all faults.
         """
+        faults: list[str] = []
         allowed = None if config.allowed is None else base / config.allowed
         if allowed is not None and not allowed.is_dir():
-            raise ConfigError(f"access.allowed is {allowed}, which is no folder; expected one: make it with mkdir")
+            faults.append(f"access.allowed is {allowed}, which is no folder; expected one: make it with mkdir")
+        key = None
         try:
             key = None if config.key is None else read_secret(base / config.key)
         except AccessError as exc:
-            raise ConfigError(f"access.key: {exc}") from exc
+            faults.append(f"access.key: {exc}")
+        faults += _contradictions(config.key is not None, config.allowed is not None, config.allow_plain)
+        if faults:
+            raise ConfigError(*faults)
         return cls(key=key, allowed=allowed, allow_plain=config.allow_plain)
 
     @property
@@ -117,6 +120,16 @@ class AccessPolicy:
                 "or access.key and access.allowed (skewline keys new), or access.allow_plain = true to let anybody in"
             )
         return f"{scheme}://{loopback}:{port}"
+
+
+def _contradictions(has_key: bool, has_allowed: bool, allow_plain: bool) -> Iterator[str]:
+    if has_key != has_allowed:
+        given, missing = ("key", "allowed") if has_key else ("allowed", "key")
+        yield f"access.{given} is given without access.{missing}; expected both or neither: give both"
+    if has_key and allow_plain:
+        yield (
+            "access.allow_plain is true although access.key is given; expected one of them: with a key nothing is plain"
+        )
 
 
 def _loopback(host: str) -> str | None:

@@ -1,25 +1,24 @@
 """The node's configuration: a TOML file, checked into frozen values before anything starts.
 
-Every refusal names the key's path, the value given and what is allowed.
+All that is wrong with a file is found at once; every refusal names the key's path, the value given and what is allowed.
 """
 
 from __future__ import annotations
 
-import itertools
-import math
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Annotated, Any, TypeVar
+from typing import Annotated, Any
 
 from msgspec import Meta, Struct
 
-from ..calib.tables import checked_table, read_toml
+from ..calib.tables import read_table, read_toml
 from .access import AccessConfig
-from .errors import ConfigError, NodeError
+from .config_faults import contradictions
+from .errors import ConfigError
 from .match import MatcherName, MatchSettings
 from .pairing import PairingSettings
-from .record_config import RecordConfig, check_record
+from .record_config import RecordConfig
 from .shot import BOTH, CameraName
 from .sources import Source, SourceKind
 from .stream import WatchConfig
@@ -102,6 +101,20 @@ class _Tables(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
     record: dict[str, Any] | None = None
 
 
+_VALUES: Mapping[str, type[Struct]] = {
+    "volume": VolumeConfig,
+    "match": MatchConfig,
+    "publish": PublishConfig,
+    "pairing": PairingSettings,
+    "watch": WatchConfig,
+    "trust": TrustConfig,
+    "access": AccessConfig,
+    "control": ControlConfig,
+    "record": RecordConfig,
+}
+"""What each table becomes; ``[source]`` depends on its kind. A new one stands here, above and in :class:`NodeConfig`."""
+
+
 class _SourceTables(Struct, frozen=True, kw_only=True):
     """What of the top level says where images come from."""
 
@@ -171,12 +184,12 @@ class NodeConfig:
         The rig file.
     sources : SourcesConfig
         Where pairs come from.
-    text : str
-        What the file held; empty where it was no file.
     volume, match, publish, trust, access, control
         Their tables.
     record : RecordConfig or None
         Its table; None where there is none, and so no place to record to.
+    text : str
+        What the file held; empty where it was no file.
     """
 
     rig: Path
@@ -196,6 +209,61 @@ class NodeConfig:
         return self.sources.base
 
 
+@dataclass(frozen=True, kw_only=True)
+class ConfigReading:
+    """What a configuration came to, as far as it is sound.
+
+    Attributes
+    ----------
+    faults : tuple of str
+        All that is wrong with its keys; each names the key's path, the value and what is allowed.
+    base : Path
+        Folder of the configuration file.
+    rig : Path or None
+        The rig file; None where the key has a fault.
+    choices : tuple of SourceChoice
+        The sources whose tables are sound.
+    tables : mapping of str to Any
+        Every other table's values by its name; None where one of its keys is missing or bad.
+    sound : mapping of str to Any
+        The good values by their keys' paths, defaults among them.
+    """
+
+    faults: tuple[str, ...]
+    base: Path
+    rig: Path | None
+    choices: tuple[SourceChoice, ...]
+    tables: Mapping[str, Any]
+    sound: Mapping[str, Any]
+
+    def sources(self) -> SourcesConfig:
+        """Give what it says of sources.
+
+        Raises
+        ------
+        ConfigError
+            Where there is any fault; it holds them all.
+        """
+        if self.faults:
+            raise ConfigError(*self.faults)
+        return SourcesConfig(
+            base=self.base, choices=self.choices, pairing=self.tables["pairing"], watch=self.tables["watch"]
+        )
+
+    def config(self) -> NodeConfig:
+        """Give the whole configuration.
+
+        Raises
+        ------
+        ConfigError
+            Where there is any fault; it holds them all.
+        """
+        sources = self.sources()
+        assert self.rig is not None  # noqa: S101 - for the type checker: without a rig there is a fault
+        rest = {name: value for name, value in self.tables.items() if name not in _SourceTables.__struct_fields__}
+        return NodeConfig(rig=self.rig, sources=sources, **rest)
+
+
 def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig:
     """Read and check a configuration file.
 
@@ -209,14 +277,14 @@ def load_config(path: str | Path, kinds: Mapping[str, SourceKind]) -> NodeConfig
     Raises
     ------
     ConfigError
-        Where the file is missing or is no TOML, or a key is missing, unknown or out of range.
+        Where the file is missing or is no TOML, or a key is missing, unknown or out of range; it holds all faults.
     """
     path = Path(path)
     content = read_toml(path, "the node's configuration", ConfigError)
     try:
         return replace(parse_config(content, kinds, path.parent), text=path.read_text(encoding="utf-8"))
     except ConfigError as exc:
-        raise ConfigError(f"{path}: {exc}") from exc
+        raise ConfigError(*(f"{path}: {fault}" for fault in exc.faults)) from exc
 
 
 def load_sources(path: str | Path, kinds: Mapping[str, SourceKind]) -> SourcesConfig:
@@ -238,10 +306,9 @@ def load_sources(path: str | Path, kinds: Mapping[str, SourceKind]) -> SourcesCo
     content = read_toml(path, "the node's configuration", ConfigError)
     wanted = {name: content[name] for name in _SourceTables.__struct_fields__ if name in content}
     try:
-        tables = _checked(wanted, _SourceTables, "")
-        return _sources(tables.source, tables.pairing, tables.watch, kinds, path.parent)
+        return _read(wanted, _SourceTables, kinds, path.parent).sources()
     except ConfigError as exc:
-        raise ConfigError(f"{path}: {exc}") from exc
+        raise ConfigError(*(f"{path}: {fault}" for fault in exc.faults)) from exc
 
 
 def parse_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], base: Path) -> NodeConfig:
@@ -250,79 +317,105 @@ def parse_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], ba
     Raises
     ------
     ConfigError
-        Where a key is missing, unknown or out of range.
+        Where a key is missing, unknown or out of range; it holds all faults.
     """
-    top = _checked(content, _Tables, "")
-    volume = _checked(top.volume, VolumeConfig, "volume")
-    if not volume.near_m < volume.far_m:
-        raise ConfigError(
-            f"volume.near_m is {volume.near_m:g} and volume.far_m is {volume.far_m:g}; expected near_m < far_m"
-        )
-    config = NodeConfig(
-        rig=base / top.rig,
-        sources=_sources(top.source, top.pairing, top.watch, kinds, base),
-        volume=volume,
-        match=_match(top.match),
-        publish=_checked(top.publish, PublishConfig, "publish"),
-        trust=_trust(top.trust),
-        access=_checked(top.access, AccessConfig, "access"),
-        control=_checked(top.control, ControlConfig, "control"),
-        record=None if top.record is None else _record(top.record),
-    )
-    _check_publish(config.publish, config.control, volume)
-    return config
+    return read_config(content, kinds, base).config()
 
 
-def _sources(
-    source: Mapping[str, Any],
-    pairing: Mapping[str, Any],
-    watch: Mapping[str, Any],
-    kinds: Mapping[str, SourceKind],
-    base: Path,
-) -> SourcesConfig:
-    """Check ``[source]``, or ``[source.a]`` and ``[source.b]``, and what belongs to them."""
-    if "kind" not in source and any(isinstance(source.get(name), dict) for name in BOTH):
-        choices = _one_for_each(source, kinds)
-    else:
-        choices = (_choice(source, "source", BOTH, kinds),)
-    return SourcesConfig(
+def read_config(content: Mapping[str, Any], kinds: Mapping[str, SourceKind], base: Path) -> ConfigReading:
+    """Find all that is wrong with what a TOML file held, and what of it is sound nevertheless; refuses nothing."""
+    return _read(content, _Tables, kinds, base)
+
+
+def _read(content: Mapping[str, Any], top: type[Struct], kinds: Mapping[str, SourceKind], base: Path) -> ConfigReading:
+    reader = _Reader(content, top, kinds)
+    choices = tuple(reader.choices())
+    tables = {name: reader.table(name, kind) for name, kind in _VALUES.items() if name in top.__struct_fields__}
+    rig = reader.sound.get("rig")
+    return ConfigReading(
+        faults=(*reader.faults, *contradictions(reader.sound)),
         base=base,
+        rig=None if rig is None else base / rig,
         choices=choices,
-        pairing=_checked(pairing, PairingSettings, "pairing"),
-        watch=_watch(watch),
+        tables=tables,
+        sound=reader.sound,
     )
 
 
-def _one_for_each(source: Mapping[str, Any], kinds: Mapping[str, SourceKind]) -> tuple[SourceChoice, ...]:
-    for key in source:
-        if key not in BOTH:
-            raise ConfigError(f"source.{key} stands beside source.a and source.b; expected it inside one of them")
-    tables = {name: source.get(name) for name in BOTH}
-    for name, table in tables.items():
-        if not isinstance(table, dict):
-            raise ConfigError(f"source.{name} is {table!r}; expected a table [source.{name}] as for the other camera")
-    return tuple(_choice(table or {}, f"source.{name}", (name,), kinds) for name, table in tables.items())
+class _Reader:
+    """Reads one table after the other, and keeps what is wrong with them and what is sound."""
+
+    def __init__(self, content: Mapping[str, Any], top: type[Struct], kinds: Mapping[str, SourceKind]) -> None:
+        self.faults: list[str] = []
+        self.sound: dict[str, Any] = {}
+        self._kinds = kinds
+        self._checked(content, top, "")
+        self._tables = {name: table for name, table in self.sound.items() if isinstance(table, dict)}
+
+    def table(self, name: str, kind: type[Struct]) -> Struct | None:
+        """Check a table of the top level; None where it, or a key of it, is missing or bad."""
+        return self._checked(self._tables[name], kind, name) if name in self._tables else None
+
+    def choices(self) -> Iterator[SourceChoice]:
+        """Check ``[source]``, or ``[source.a]`` and ``[source.b]``; give those that are sound."""
+        source = self._tables.get("source")
+        if source is None:
+            return
+        if "kind" in source or not any(isinstance(source.get(name), dict) for name in BOTH):
+            yield from self._choice(source, "source", BOTH)
+            return
+        self.faults += [
+            f"source.{key} stands beside source.a and source.b; expected it inside one of them"
+            for key in source
+            if key not in BOTH
+        ]
+        for name in BOTH:
+            table = source.get(name)
+            if isinstance(table, dict):
+                yield from self._choice(table, f"source.{name}", (name,))
+            else:
+                self.faults.append(
+                    f"source.{name} is {table!r}; expected a table [source.{name}] as for the other camera"
+                )
+
+    def _choice(self, table: Mapping[str, Any], path: str, cameras: tuple[CameraName, ...]) -> Iterator[SourceChoice]:
+        kind = table.get("kind")
+        fault = _fault_of_kind(table, path, cameras, self._kinds)
+        if fault is not None:
+            self.faults.append(fault)
+            return
+        assert isinstance(kind, str)  # noqa: S101 - for the type checker: it names a source
+        own = {key: value for key, value in table.items() if key != "kind"}
+        settings = self._checked(own, self._kinds[kind].settings, path, also=("kind",))
+        if settings is not None:
+            yield SourceChoice(cameras=cameras, kind=kind, settings=settings)
+
+    def _checked(
+        self, table: Mapping[str, Any], kind: type[Struct], name: str, *, also: tuple[str, ...] = ()
+    ) -> Struct | None:
+        reading = read_table(table, kind, name, also=also)
+        self.faults += reading.faults
+        self.sound |= {f"{name}.{key}" if name else key: value for key, value in reading.sound.items()}
+        return reading.value
 
 
-def _choice(
+def _fault_of_kind(
     table: Mapping[str, Any], path: str, cameras: tuple[CameraName, ...], kinds: Mapping[str, SourceKind]
-) -> SourceChoice:
-    fitting = {name: kind for name, kind in kinds.items() if kind.both == (len(cameras) == len(BOTH))}
-    names = ", ".join(f'"{name}"' for name in sorted(fitting))
+) -> str | None:
+    """Say what is wrong with a source's kind; None where nothing is."""
+    fitting = sorted(name for name, kind in kinds.items() if kind.both == (len(cameras) == len(BOTH)))
+    names = ", ".join(f'"{name}"' for name in fitting)
     if "kind" not in table:
-        raise ConfigError(f"{path}.kind is missing; expected one of {names}{_each_hint(cameras, kinds)}")
+        return f"{path}.kind is missing; expected one of {names}{_each_hint(cameras, kinds)}"
     kind = table["kind"]
     if not isinstance(kind, str) or kind not in kinds:
-        raise ConfigError(f"{path}.kind is {kind!r}; expected one of {names}{_each_hint(cameras, kinds)}")
+        return f"{path}.kind is {kind!r}; expected one of {names}{_each_hint(cameras, kinds)}"
     if kind not in fitting:
         given, wanted = (
             ("both cameras", "[source]") if kinds[kind].both else ("one camera", "[source.a] and [source.b]")
         )
-        raise ConfigError(f"{path}.kind is {kind!r}, which gives the images of {given}; expected it in {wanted}")
-    settings = {key: value for key, value in table.items() if key != "kind"}
-    return SourceChoice(
-        cameras=cameras, kind=kind, settings=_checked(settings, kinds[kind].settings, path, also=("kind",))
-    )
+        return f"{path}.kind is {kind!r}, which gives the images of {given}; expected it in {wanted}"
+    return None
 
 
 def _each_hint(cameras: tuple[CameraName, ...], kinds: Mapping[str, SourceKind]) -> str:
@@ -331,61 +424,3 @@ def _each_hint(cameras: tuple[CameraName, ...], kinds: Mapping[str, SourceKind])
     if len(cameras) < len(BOTH) or not singles:
         return ""
     return ", or tables [source.a] and [source.b], each with one of " + ", ".join(f'"{name}"' for name in singles)
-
-
-def _record(table: Mapping[str, Any]) -> RecordConfig:
-    record = _checked(table, RecordConfig, "record")
-    check_record(record)
-    return record
-
-
-def _watch(table: Mapping[str, Any]) -> WatchConfig:
-    watch = _checked(table, WatchConfig, "watch")
-    if watch.retry_s > watch.retry_most_s:
-        raise ConfigError(
-            f"watch.retry_s is {watch.retry_s:g} and watch.retry_most_s {watch.retry_most_s:g}; "
-            "expected retry_s to be the smaller"
-        )
-    return watch
-
-
-def _trust(table: Mapping[str, Any]) -> TrustConfig:
-    trust = _checked(table, TrustConfig, "trust")
-    if trust.skew_doubtful_m > trust.skew_bad_m:
-        raise ConfigError(
-            f"trust.skew_doubtful_m is {trust.skew_doubtful_m:g} and trust.skew_bad_m {trust.skew_bad_m:g}; "
-            "expected skew_doubtful_m to be the smaller"
-        )
-    return trust
-
-
-def _match(table: Mapping[str, Any]) -> MatchConfig:
-    match = _checked(table, MatchConfig, "match")
-    try:
-        _ = match.settings
-    except NodeError as exc:
-        raise ConfigError(f"match.{exc}") from exc
-    return match
-
-
-def _check_publish(publish: PublishConfig, control: ControlConfig, volume: VolumeConfig) -> None:
-    addresses = {"publish.depth": publish.depth, "publish.status": publish.status}
-    if control.on:
-        addresses["control.address"] = control.address
-    for (first, one), (second, other) in itertools.combinations(addresses.items(), 2):
-        if one == other and not one.endswith((":0", ":*")):
-            raise ConfigError(f"{first} and {second} are both {one}; expected two addresses")
-    if volume.far_m > publish.packing.range_m:
-        raise ConfigError(
-            f"volume.far_m is {volume.far_m:g}, beyond the {publish.packing.range_m:g} m that uint16 counts of "
-            f"publish.depth_unit_m = {publish.depth_unit_m:g} carry; expected a nearer far_m, "
-            f'a depth_unit_m of {math.ceil(volume.far_m / 65535 * 1e6) / 1e6:g} or more, or pixels = "float32"'
-        )
-
-
-_Table = TypeVar("_Table", bound=Struct)
-
-
-def _checked(table: Mapping[str, Any], kind: type[_Table], name: str, *, also: tuple[str, ...] = ()) -> _Table:
-    """Turn one flat table into its value class."""
-    return checked_table(table, kind, name, ConfigError, also=also)

@@ -27,7 +27,17 @@ class NodeError(RuntimeError):
 
 
 class ConfigError(NodeError):
-    """A configuration value is missing, unknown or out of range."""
+    """A configuration value is missing, unknown or out of range.
+
+    Attributes
+    ----------
+    faults : tuple of str
+        One sentence for each value that is at fault; the message has each on a line of its own.
+    """
+
+    def __init__(self, *faults: str) -> None:
+        super().__init__("\n".join(faults))
+        self.faults = faults
 
 
 class VolumeError(NodeError):

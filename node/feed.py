@@ -66,7 +66,9 @@ class Feed:
         tell: Tell = lambda *_: None,
         tap: Callable[[Shot], None] = lambda _: None,
     ) -> None:
-        _check(sources)
+        faults = faults_between(sources)
+        if faults:
+            raise ConfigError(*faults)
         self._sources = tuple(sources)
         self._watch = watch or WatchConfig()
         self._pairer = Pairer(pairing or PairingSettings(), live=self.live)
@@ -273,19 +275,19 @@ def by_stamp(streams: Sequence[Iterator[Shot | LostShot]]) -> Iterator[Shot | Lo
         yield heads.pop(first)
 
 
-def _check(sources: Sequence[Source]) -> None:
+def faults_between(sources: Sequence[Source]) -> tuple[str, ...]:
+    """Say why sources cannot feed one node together: a camera twice or not at all, or a live one beside one that waits."""
     given = sorted(name for source in sources for name in source.cameras)
     if given != list(BOTH):
-        raise ConfigError(
-            f"the sources give the images of {', '.join(given) or 'no camera'}; expected those of a and of b, each once"
-        )
+        names = ", ".join(given) or "no camera"
+        return (f"the sources give the images of {names}; expected those of a and of b, each once",)
+    faults = []
     if len({source.identity for source in sources}) < len(sources):
-        raise ConfigError(
-            f"source.a and source.b are both {sources[0].identity}; expected two cameras: mend one of them"
-        )
+        faults.append(f"source.a and source.b are both {sources[0].identity}; expected two cameras: mend one of them")
     if len({source.live for source in sources}) > 1:
         live, waiting = sorted(sources, key=lambda source: not source.live)
-        raise ConfigError(
+        faults.append(
             f"{live.identity} runs at its own pace and {waiting.identity} waits for the node; expected both to do the "
             "same: give the file a rate_hz, or take two files"
         )
+    return tuple(faults)

@@ -65,8 +65,7 @@ class FolderSource:
     def __init__(self, settings: FolderSettings, base: Path, cameras: tuple[CameraName, ...] = BOTH) -> None:
         self.cameras = cameras
         self._settings = settings
-        files_a = _find(settings.a, base, "source.a")
-        files_b = _find(settings.b, base, "source.b")
+        files_a, files_b = _find_both(settings, base)
         if len(files_a) != len(files_b):
             raise ConfigError(
                 f"source.a ({settings.a!r}) gives {len(files_a)} images and source.b ({settings.b!r}) {len(files_b)}; "
@@ -108,11 +107,18 @@ class FolderSource:
                 return
 
 
-def _find(files: str | list[str], base: Path, key: str) -> list[Path]:
-    try:
-        return find_images(files, base)
-    except CalibrationError as exc:
-        raise ConfigError(f"{key} is {files!r}: {exc}") from exc
+def _find_both(settings: FolderSettings, base: Path) -> tuple[list[Path], list[Path]]:
+    """Find A's files and B's; where either pattern matches nothing, what is wrong with both."""
+    found, faults = list[list[Path]](), list[str]()
+    for key, files in (("source.a", settings.a), ("source.b", settings.b)):
+        try:
+            found.append(find_images(files, base))
+        except CalibrationError as exc:
+            faults.append(f"{key} is {files!r}: {exc}")
+    if faults:
+        raise ConfigError(*faults)
+    files_a, files_b = found
+    return files_a, files_b
 
 
 def _read_pair(file_a: Path, file_b: Path, stamp_ns: int) -> list[Shot | LostShot]:

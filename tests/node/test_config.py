@@ -135,6 +135,12 @@ def test_float32_pixels_lift_the_limit_on_far() -> None:
     assert config.volume.far_m == 20
 
 
+def test_a_control_address_of_none_is_taken_and_any_other_word_is_not() -> None:
+    assert parse_config(table(control={"address": "none"}), BUILT_IN, Path()).control.address == "none"
+    with pytest.raises(ConfigError, match=r'control\.address is \'never\'; expected an address such as .*, or "none"'):
+        parse_config(table(control={"address": "never"}), BUILT_IN, Path())
+
+
 @pytest.mark.parametrize("key", ["rig", "volume", "source"])
 def test_a_missing_key_of_the_top_level_is_named(key: str) -> None:
     content = table()

@@ -9,12 +9,14 @@ from __future__ import annotations
 
 import argparse
 import importlib
+import logging
 import sys
 from collections.abc import Sequence
 from typing import Protocol
 
 from ..calib import CalibrationError
 from ..node import NodeError
+from .journal import goes_to_journal, journal_line
 
 VERBS = {
     "demo": "show the whole path at work on a rendered workshop with known truth",
@@ -57,12 +59,20 @@ def main(arguments: Sequence[str] | None = None) -> int:
     try:
         return verb.run(verb_parser.parse_args(words[1:]))
     except (CalibrationError, NodeError) as exc:
-        print(f"skewline {chosen}: {exc}", file=sys.stderr)
+        complain(f"skewline {chosen}: {exc}")
         return 2
     except BrokenPipeError:
         return 0
     except KeyboardInterrupt:
         return 130
+
+
+def complain(text: str) -> None:
+    """Write an error to standard error, each of its lines as an event of its own where that is the journal."""
+    lines = text.splitlines()
+    if goes_to_journal(sys.stderr):
+        lines = [journal_line(line, logging.ERROR) for line in lines]
+    print("\n".join(lines), file=sys.stderr)
 
 
 class _Plain(argparse.RawDescriptionHelpFormatter):

@@ -8,6 +8,8 @@ import sys
 import threading
 from typing import TextIO
 
+from .journal import JournalFormatter, goes_to_journal
+
 _ERASE = "\r\x1b[K"
 
 
@@ -19,6 +21,7 @@ class LiveLine:
         self._shown = ""
         self._lock = threading.Lock()  # log lines come from several threads
         self.live = stream.isatty()
+        self.journal = goes_to_journal(stream)
 
     def show(self, text: str) -> None:
         """Replace the line."""
@@ -44,12 +47,13 @@ class LiveLine:
 
 
 class LiveLineHandler(logging.Handler):
-    """Puts log records above the line; on anything but a terminal they begin with the time of day."""
+    """Puts log records above the line; elsewhere they begin with the time of day, or are such as the journal takes."""
 
     def __init__(self, line: LiveLine) -> None:
         super().__init__()
         self._line = line
-        self.setFormatter(logging.Formatter("%(message)s" if line.live else "%(asctime)s %(levelname)s %(message)s"))
+        plain = logging.Formatter("%(message)s" if line.live else "%(asctime)s %(levelname)s %(message)s")
+        self.setFormatter(JournalFormatter() if line.journal else plain)
 
     def emit(self, record: logging.LogRecord) -> None:
         """Write one record."""

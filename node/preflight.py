@@ -25,7 +25,6 @@ from .sources import Source, SourceKind
 
 _Made = TypeVar("_Made")
 
-_NOWHERE = "none"
 _SOCKETS = ("publish.depth", "publish.status", "control.address")
 
 
@@ -94,7 +93,8 @@ class _Look:
         sources = self._sources()
         policy = self._policy()
         addresses = {key: self._reading.sound[key] for key in _SOCKETS if key in self._reading.sound}
-        addresses = {key: address for key, address in addresses.items() if address != _NOWHERE}
+        if self._reading.sound.get("control.on") is False:
+            addresses.pop("control.address", None)
         self._faults += self._unreachable(policy, addresses)
         return Preflight(
             faults=tuple(self._faults),

@@ -135,10 +135,12 @@ def test_float32_pixels_lift_the_limit_on_far() -> None:
     assert config.volume.far_m == 20
 
 
-def test_a_control_address_of_none_is_taken_and_any_other_word_is_not() -> None:
-    assert parse_config(table(control={"address": "none"}), BUILT_IN, Path()).control.address == "none"
-    with pytest.raises(ConfigError, match=r'control\.address is \'never\'; expected an address such as .*, or "none"'):
-        parse_config(table(control={"address": "never"}), BUILT_IN, Path())
+def test_control_may_be_turned_off_and_its_port_is_free_then() -> None:
+    quiet = {"on": False, "address": "tcp://127.0.0.1:7601"}
+
+    assert not parse_config(table(control=quiet), BUILT_IN, Path()).control.on
+    with pytest.raises(ConfigError, match=r"publish\.depth and control\.address are both tcp://127\.0\.0\.1:7601"):
+        parse_config(table(control=quiet | {"on": True}), BUILT_IN, Path())
 
 
 @pytest.mark.parametrize("key", ["rig", "volume", "source"])

@@ -139,7 +139,7 @@ def test_what_running_refuses_is_what_the_look_finds(plane_bench: Any) -> None:
     folder = plane_bench.folder
     unscaled = replace(plane_bench.rig, scale_known=False, t=plane_bench.rig.t / plane_bench.rig.baseline_m)
     unscaled.save(folder / "unscaled.rig.json")
-    quiet = '[publish]\ndepth = "tcp://127.0.0.1:0"\nstatus = "tcp://127.0.0.1:0"\n[control]\naddress = "none"\n'
+    quiet = '[publish]\ndepth = "tcp://127.0.0.1:0"\nstatus = "tcp://127.0.0.1:0"\n[control]\non = false\n'
     cases = [
         GOOD.replace("bench.rig", "gone.rig") + quiet,
         GOOD.replace("bench.rig", "unscaled.rig") + quiet,

@@ -4,19 +4,30 @@ from __future__ import annotations
 
 import argparse
 import logging
+from importlib.resources import files
+from typing import Any
 
 import msgspec
 
 from ...node import NodeStatus
-from ...node.config import load_config
+from ...node.config import NodeConfig, load_config
+from ...node.preflight import preflight
 from ...node.runner import NodeAddresses, run_node
-from ..cli import CAUTION
+from ...node.service_manager import STATUS_EVERY_S, ServiceManager
+from ..cli import CAUTION, complain
 from ..live_line import LiveLine, make_log, standard_error
+from ..preflight_text import as_values, summary_lines
 from ..sources import SOURCES
 from ..stopping import stop_on_signals
 
 _LOG_EVERY = 10
 """On anything but a terminal, every tenth status (one each ten seconds) becomes a log line."""
+
+_LOG_EVERY_IN_SERVICE = 300
+"""A service manager is told every status, so that its log needs one each five minutes."""
+
+_TIME_TO_START_S = 60.0
+"""Asked of the service manager beyond the wait for a subscriber: loading, planning, making maps."""
 
 _DESCRIPTION = "Run the node: pairs of images in, metric depth frames out over ZeroMQ, until it is stopped."
 
@@ -72,6 +83,9 @@ Two cameras that run free have a source each, and the pictures are paired by the
   key = "keys/bench-node.secret.key"
   allowed = "keys/allowed"
 
+skewline run --check node.toml says all that is wrong with it, and starts nothing; skewline run --example prints a file
+with every option explained, skewline run --unit a unit that makes the node a service of systemd.
+
 In another terminal: skewline listen tcp://127.0.0.1:7601, or skewline control tcp://127.0.0.1:7603 pause
 Ctrl-C, SIGINT or SIGTERM ends it within a second, with status 0.
 """
@@ -82,13 +96,48 @@ def configure(parser: argparse.ArgumentParser) -> None:
     parser.description = _DESCRIPTION
     parser.epilog = f"{_EXAMPLE}\n{CAUTION}"
     parser.add_argument("config", metavar="node.toml", help="the node's configuration")
+    parser.add_argument(
+        "--check", action="store_true", help="start nothing; say all faults (status 2), or what would run"
+    )
     parser.add_argument("--json", action="store_true", help="at the end, print the figures of the run as JSON")
+    parser.add_argument(
+        "--example", action=_PrintFile, file="node.toml", help="print a configuration with every option explained"
+    )
+    parser.add_argument("--unit", action=_PrintFile, file="skewline@.service", help="print a unit for systemd")
+
+
+class _PrintFile(argparse.Action):
+    """Prints a file of the folder ``deploy`` and ends, as ``--help`` does."""
+
+    def __init__(self, option_strings: list[str], dest: str, *, file: str, **named: Any) -> None:
+        super().__init__(option_strings, dest, nargs=0, default=argparse.SUPPRESS, help=named["help"])
+        self._file = file
+
+    def __call__(self, parser: argparse.ArgumentParser, *_: Any) -> None:
+        print((files("skewline.tools") / "deploy" / self._file).read_text(encoding="utf-8"), end="")
+        parser.exit()
 
 
 def run(arguments: argparse.Namespace) -> int:
-    """Run the node; 0 when it was stopped or its source ended."""
+    """Run the node, or look at its configuration alone; 0 when it was stopped, its source ended or nothing is wrong."""
+    return _check(arguments) if arguments.check else _run(arguments)
+
+
+def _check(arguments: argparse.Namespace) -> int:
+    found = preflight(arguments.config, SOURCES)
+    if arguments.json:
+        print(msgspec.json.format(msgspec.json.encode(as_values(found)), indent=2).decode())
+    elif not found.faults:
+        print("\n".join(summary_lines(found)))
+    if found.faults:
+        complain("\n".join(f"{arguments.config}: {fault}" for fault in found.faults))
+    return 2 if found.faults else 0
+
+
+def _run(arguments: argparse.Namespace) -> int:
     line = standard_error()
     log = make_log("skewline", line)
+    manager = ServiceManager()
     with stop_on_signals() as stop:
         config = load_config(arguments.config, SOURCES)
         try:
@@ -97,10 +146,11 @@ def run(arguments: argparse.Namespace) -> int:
                 SOURCES,
                 stop,
                 log=log,
-                on_ready=lambda addresses: _greet(log, addresses),
-                on_status=_Display(line, log),
+                on_ready=lambda addresses: _greet(log, addresses, config, manager),
+                on_status=_Display(line, log, manager),
             )
         finally:
+            manager.stopping()
             line.end()
     if arguments.json:
         print(msgspec.json.format(msgspec.json.encode(summary), indent=2).decode())
@@ -108,7 +158,7 @@ def run(arguments: argparse.Namespace) -> int:
     return 0
 
 
-def _greet(log: logging.Logger, addresses: NodeAddresses) -> None:
+def _greet(log: logging.Logger, addresses: NodeAddresses, config: NodeConfig, manager: ServiceManager) -> None:
     log.info("%s", CAUTION)
     log.info("rig %s, baseline %.1f mm", addresses.rig.fingerprint, addresses.rig.baseline_m * 1e3)
     log.info("depth on %s", addresses.publisher.depth_address)
@@ -117,20 +167,34 @@ def _greet(log: logging.Logger, addresses: NodeAddresses) -> None:
         log.info("control on %s", addresses.control.address)
     level = logging.WARNING if addresses.policy.open_to_all else logging.INFO
     log.log(level, "may connect: %s", addresses.policy.describe())
+    if manager.too_impatient:
+        log.warning(
+            "the service manager's watchdog waits %g s, less than two statuses take; expected WatchdogSec=%g or more",
+            manager.watchdog_s,
+            2 * STATUS_EVERY_S,
+        )
+    # The first status, with which the node is ready, comes after the engine was made and a subscriber was waited for.
+    manager.starting(config.publish.wait_for_subscriber_s + _TIME_TO_START_S, "making the engine")
 
 
 class _Display:
-    """Shows each status on the terminal's line, or logs every tenth, the first among them."""
+    """Shows each status on the terminal's line and tells the service manager; logs some, the first among them.
 
-    def __init__(self, line: LiveLine, log: logging.Logger) -> None:
+    Called from the node's own loop, so that the manager hears nothing of a node that hangs.
+    """
+
+    def __init__(self, line: LiveLine, log: logging.Logger, manager: ServiceManager) -> None:
         self._line = line
         self._log = log
+        self._manager = manager
+        self._log_every = _LOG_EVERY_IN_SERVICE if manager.listening else _LOG_EVERY
         self._seen = 0
 
     def __call__(self, status: NodeStatus) -> None:
         text = status_line(status)
         self._line.show(text)
-        if not self._line.live and self._seen % _LOG_EVERY == 0:
+        self._manager.alive(text)
+        if not self._line.live and self._seen % self._log_every == 0:
             self._log.info("%s", text)
         self._seen += 1
 

@@ -97,7 +97,7 @@ def _can_record(*values: Any) -> Iterator[str]:
         yield str(exc)
 
 
-def _two_addresses(first: str, second: str, one: str, other: str, controlled: bool) -> Iterator[str]:  # noqa: FBT001 - a value
+def _two_addresses(first: str, second: str, one: str, other: str, controlled: bool) -> Iterator[str]:
     """Two sockets cannot listen on one port of one host; every host's addresses ("*") hold each single one."""
     if not controlled and "control.address" in (first, second):
         return

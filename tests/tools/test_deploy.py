@@ -29,6 +29,7 @@ from skewline.node.config import (
     WatchConfig,
     parse_config,
 )
+from skewline.node.record_config import RecordConfig
 from skewline.tools.cli import VERBS, main
 from skewline.tools.sources import SOURCES
 
@@ -125,6 +126,7 @@ TABLES: dict[str, type[msgspec.Struct]] = {
     "trust": TrustConfig,
     "access": AccessConfig,
     "control": ControlConfig,
+    "record": RecordConfig,
 }
 
 

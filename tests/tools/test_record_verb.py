@@ -15,6 +15,7 @@ import cv2
 import numpy as np
 import pytest
 from msgspec import Struct
+from scripted_source import ScriptedCamera
 from skewline.calib import Rig
 from skewline.node.recording_info import RecordingInfo, find_recording, read_recording
 from skewline.node.shot import BOTH, LostShot, Shot
@@ -169,6 +170,29 @@ def test_cameras_that_give_nothing_make_no_success(
     assert status == 1
     assert "no image came from either camera, so the recording is empty" in err
     assert "the configuration names no rig" in err
+
+
+def test_a_live_camera_that_comes_late_is_awaited_while_the_other_is_recorded(
+    plane_bench: Any, verb: Verb, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    cameras = {camera: ScriptedCamera(camera) for camera in BOTH}
+    cameras["b"].present = False
+    monkeypatch.setitem(SOURCES, "scripted", SourceKind(Nothing, lambda _, __, names: cameras[names[0]], both=False))
+    config, name = plane_bench.folder / "live.toml", plane_bench.folder / "shift"
+    config.write_text(
+        'source = { a = { kind = "scripted" }, b = { kind = "scripted" } }\nwatch = { retry_s = 0.05, retry_most_s = 0.1 }\n'
+    )
+    timer = threading.Timer(0.4, setattr, (cameras["b"], "present", True))
+    timer.start()
+    status, err = verb(config, "-o", name, "--seconds", 2)
+    timer.join()
+
+    assert status == 0, err
+    assert "camera B: absent: scripted camera b is not there" in err
+    assert "camera B: delivering" in err
+    topics = info_of(name).topics
+    assert topics["image/a"].count > topics["image/b"].count > 5
+    assert topics["image/a"].dropped == topics["image/b"].dropped == 0
 
 
 def test_bad_input_is_refused_before_anything_is_written(plane_bench: Any, verb: Verb) -> None:

@@ -12,7 +12,6 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 
-import cv2
 import numpy as np
 from numpy.typing import NDArray
 
@@ -232,13 +231,27 @@ class _Way:
             np.where(self.shown, np.rint(place), 0).astype(np.intp) for place in (self.place[1], self.place[0])
         )
         nearest, sigma = frame.depth[row, column], frame.sigma[row, column]
-        inverse = cv2.remap(
-            1 / frame.depth, *self.place, cv2.INTER_LINEAR, borderMode=cv2.BORDER_CONSTANT, borderValue=float("nan")
-        )
+        inverse = _interpolated(np.float32(1) / frame.depth, *self.place)
         smooth = np.isfinite(nearest) & np.isfinite(inverse) & (inverse > 0)
         depth = np.where(smooth, 1 / np.where(smooth, inverse, 1), nearest)
         shown_depth = np.where(self.shown, depth * self.other_stretch, nothing)
         return shown_depth.astype(np.float32), sigma * self.other_stretch
+
+
+def _interpolated(
+    image: NDArray[np.float32], column: NDArray[np.float32], row: NDArray[np.float32]
+) -> NDArray[np.float32]:
+    """Give an image's bilinear values at places, going on straight beyond its edges; NaN beside a NaN.
+
+    OpenCV's remapping rounds places to 1/32 of a pixel, in some of its versions, which shows on slanted surfaces.
+    """
+    height, width = image.shape
+    left = np.clip(np.floor(column), 0, width - 2).astype(np.intp)
+    above = np.clip(np.floor(row), 0, height - 2).astype(np.intp)
+    x, y = (column - left).astype(np.float32), (row - above).astype(np.float32)
+    upper = image[above, left] * (1 - x) + image[above, left + 1] * x
+    lower = image[above + 1, left] * (1 - x) + image[above + 1, left + 1] * x
+    return (upper * (1 - y) + lower * y).astype(np.float32)
 
 
 def _through_picture(directions: NDArray[np.float64], camera: Camera, other: Camera) -> NDArray[np.float64]:

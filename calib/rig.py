@@ -6,6 +6,7 @@ differ in geometry differ in fingerprint.
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import json
 import os
@@ -110,15 +111,22 @@ class Rig:
         RigFileError
             Where the folder is missing or cannot be written, or the notes are no plain JSON.
         """
-        target = Path(path)
+        write_rig_text(Path(path), self.to_text(str(path)))
+
+    def to_text(self, name: str = "") -> str:
+        """Give what :meth:`save` writes; ``name`` stands in messages.
+
+        Raises
+        ------
+        RigFileError
+            Where the notes are no plain JSON.
+        """
         try:
             text = json.dumps({**self._header(), **self._geometry(), **self._extras()}, indent=2, allow_nan=False)
         except (TypeError, ValueError) as exc:
-            raise RigFileError(f"cannot write rig file {target}: notes hold {exc}; expected plain JSON values") from exc
-        try:
-            write_atomically(target, (text + "\n").encode())
-        except OSError as exc:
-            raise RigFileError(f"cannot write rig file {target}: {exc}; expected a folder that can be written") from exc
+            file = f"rig file {name}".rstrip()
+            raise RigFileError(f"cannot write {file}: notes hold {exc}; expected plain JSON values") from exc
+        return text + "\n"
 
     @classmethod
     def load(cls, path: str | os.PathLike[str]) -> Rig:
@@ -367,8 +375,25 @@ def _read_storage(path: str | os.PathLike[str]) -> dict[str, Any]:
     return {name: matrix for name, matrix in matrices.items() if matrix is not None}
 
 
+def write_rig_text(path: Path, text: str) -> None:
+    """Write a rig file's text; a reader sees the file that was there before or the new one, never a part.
+
+    Raises
+    ------
+    RigFileError
+        Where the folder is missing or cannot be written.
+    """
+    try:
+        write_atomically(path, text.encode())
+    except OSError as exc:
+        raise RigFileError(f"cannot write rig file {path}: {exc}; expected a folder that can be written") from exc
+
+
 def write_atomically(path: Path, data: bytes) -> None:
-    """Write to a temporary file in the same folder, flush to disk, then rename over ``path``."""
+    """Write to a temporary file in the same folder, flush to disk, rename over ``path``, flush the folder.
+
+    Without the last step a power cut may bring the old file back after this has returned.
+    """
     handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
     try:
         with os.fdopen(handle, "wb") as file:
@@ -380,3 +405,16 @@ def write_atomically(path: Path, data: bytes) -> None:
     except BaseException:
         Path(temporary).unlink(missing_ok=True)
         raise
+    _flush_folder(path.parent)
+
+
+def _flush_folder(folder: Path) -> None:
+    """Bring a folder's names to disk, where the system can: the file is whole already, so that not to is no failure."""
+    if os.name != "posix":  # Windows opens no folders
+        return
+    with contextlib.suppress(OSError):
+        handle = os.open(folder, os.O_RDONLY)
+        try:
+            os.fsync(handle)
+        finally:
+            os.close(handle)

@@ -3,6 +3,7 @@
 ``CalibrationError``
     anything that keeps a camera, a rig or a calibration from being made, read or used
     ├── ``RigFileError``: the file, not the caller, is at fault; a node keeps the rig it has
+    ├── ``HistoryError``: the history of a rig cannot be read or written; the rig itself is as it was
     └── ``ImageFileError``: one image file is missing or unreadable; a node counts it and goes on
 """
 
@@ -15,6 +16,10 @@ class CalibrationError(ValueError):
 
 class RigFileError(CalibrationError):
     """A rig file is missing, cut short, edited or of another version."""
+
+
+class HistoryError(CalibrationError):
+    """The history of a rig is damaged, foreign, of another version, held by others or cannot be written."""
 
 
 class ImageFileError(CalibrationError):

@@ -64,9 +64,13 @@ def reading(path: Path) -> Iterator[sqlite3.Connection | None]:
     HistoryError
         Where the file is damaged, another program's, of another layout or cannot be read.
     """
-    if not path.exists():
+    try:
+        path.stat()
+    except FileNotFoundError:
         yield None
         return
+    except OSError as exc:
+        raise HistoryError(f"cannot read history {path} ({exc}); expected a file that can be read") from exc
     with _opened(path) as db:
         yield db if _is_laid_out(db, path) else None
 

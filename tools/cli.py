@@ -23,6 +23,7 @@ VERBS = {
     "target": "print a calibration target to scale as PDF or SVG",
     "calibrate": "intrinsics of both cameras and R, t between them from views of a target",
     "pose": "R and t between two cameras from any scene, without a target",
+    "history": "what became of a rig: list, compare, draw its drift, put an earlier rig back",
     "run": "run the node: frame pairs in, metric depth out over ZeroMQ",
     "control": "ask a running node: status, pause, resume, record, another rig, stop",
     "record": "keep the images of both cameras as they come, for replaying",

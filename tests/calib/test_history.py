@@ -13,7 +13,7 @@ import numpy as np
 import pytest
 from drifting_rigs import drifted
 from read_only import read_only_folder
-from skewline.calib import CalibrationError, Rig, RigFileError, history_file
+from skewline.calib import CalibrationError, Rig, RigFileError, history_file, rig_swap
 from skewline.calib.errors import HistoryError
 from skewline.calib.history import (
     Kind,
@@ -239,6 +239,38 @@ def test_a_rig_file_that_cannot_be_written_is_said_to_be_abandoned(tmp_path: Pat
         replace_rig(tmp_path / "gone" / "bench.rig.json", drifted(0), history=history)
     events = read_events(history)
     assert [event.kind for event in events] == [Kind.SWAPPING_IN, Kind.ABANDONED]
+    assert open_replacements(events) == ()
+
+
+@pytest.mark.parametrize(
+    ("meanwhile", "between"),
+    [
+        (settle, ["abandoned", "swapping in"]),
+        (lambda path: replace_rig(path, drifted(2)), ["swapping in", "swapped in"]),
+        (lambda path: drifted(2).save(path), ["abandoned", "adopted", "swapping in"]),
+    ],
+    ids=["settled by another", "another replacement", "written over by hand"],
+)
+def test_what_others_do_between_announcement_and_file_costs_nothing_but_another_try(
+    path: Path, monkeypatch: pytest.MonkeyPatch, meanwhile: Callable[[Path], object], between: list[str]
+) -> None:
+    drifted(0).save(path)
+    adopt(path)
+    announce = rig_swap._announce
+    calls = []
+
+    def interrupted(*arguments: Any) -> object:
+        event = announce(*arguments)
+        calls.append(event)
+        if len(calls) == 1:
+            meanwhile(path)
+        return event
+
+    monkeypatch.setattr(rig_swap, "_announce", interrupted)
+    done = replace_rig(path, drifted(1))
+    assert in_file(path) == done.fingerprint == drifted(1).fingerprint
+    events = read_events(history_path(path))
+    assert [str(event.kind) for event in events] == ["adopted", "swapping in", *between, "swapped in"]
     assert open_replacements(events) == ()
 
 

@@ -6,6 +6,7 @@ history holds a whole rig file of it, so that any rig can be put back. Order is 
 
 from __future__ import annotations
 
+import functools
 import getpass
 import importlib.metadata
 import json
@@ -149,6 +150,7 @@ def login_name() -> str:
         return "unknown"
 
 
+@functools.cache
 def program_version() -> str:
     """Give the installed program's version."""
     try:

@@ -344,7 +344,7 @@ def stored_rig(events: Sequence[Event], fingerprint: str) -> tuple[Rig, str]:
             f"the history holds no rig {fingerprint[:12]}; expected the fingerprint of one that it names"
         )
     text = texts[-1].rig_text or ""
-    rig = Rig.from_text(text, f"in event {texts[-1].id} of the history")
+    rig = Rig.parse(text, f"in event {texts[-1].id} of the history")
     if rig.fingerprint != fingerprint:
         raise HistoryError(
             f"event {texts[-1].id} of the history says rig {fingerprint[:12]} and holds rig {rig.fingerprint[:12]}; somebody "

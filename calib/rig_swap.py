@@ -54,7 +54,7 @@ class _Place:
         """Give fingerprint and text of the rig file that stands; None where it is missing or no whole rig file."""
         try:
             text = self.path.read_bytes().decode()
-            return Rig.from_text(text, str(self.path)).fingerprint, text
+            return Rig.parse(text, str(self.path)).fingerprint, text
         except (OSError, UnicodeDecodeError, RigFileError):
             return None
 

@@ -121,6 +121,9 @@ def _fault_of(value: Any, kind: Any, key: str, table: str) -> str | None:
     """Say what is wrong with one key's value; None where nothing is."""
     if isinstance(value, float) and not math.isfinite(value):
         return f"{_path(table, key)} is {value}; expected {_describe(inspect.type_info(kind))}"
+    texts = value if isinstance(value, list) else [value]
+    if any(isinstance(text, str) and "\0" in text for text in texts):  # TOML can say it, no path or name can hold it
+        return f"{_path(table, key)} is {value!r}; expected {_describe(inspect.type_info(kind))}, without a zero byte"
     try:
         msgspec.convert(value, kind)
     except msgspec.ValidationError as exc:

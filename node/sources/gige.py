@@ -70,15 +70,14 @@ class GigeSource:
     def __init__(self, settings: GigeSettings, base: Path, cameras: tuple[CameraName, ...]) -> None:  # noqa: ARG002
         (self._name,) = cameras
         self.cameras = cameras
-        key = f"source.{self._name}"
-        if not settings.camera.strip():
-            raise ConfigError(f"{key}.camera is empty; expected an IP address, serial number, device id or MAC address")
-        if settings.pixel_format is not None and settings.pixel_format not in BY_NAME:
-            raise ConfigError(
-                f"{key}.pixel_format is {settings.pixel_format!r}; expected one of: {', '.join(sorted(BY_NAME))}"
-            )
+        faults = tuple(_faults(settings, f"source.{self._name}"))
+        try:
+            self._library: Library = load_library()
+        except ConfigError as exc:
+            raise ConfigError(*faults, *exc.faults) from exc
+        if faults:
+            raise ConfigError(*faults)
         self._settings = settings
-        self._library: Library = load_library()
         self._session: _Session | None = None
         self._remarks: tuple[str, ...] = ()
 
@@ -205,6 +204,13 @@ class GigeSource:
             stamp_ns = session.stamp_ns + 1
         session.stamp_ns = stamp_ns
         return stamp_ns
+
+
+def _faults(settings: GigeSettings, key: str) -> Iterator[str]:
+    if not settings.camera.strip():
+        yield f"{key}.camera is empty; expected an IP address, serial number, device id or MAC address"
+    if settings.pixel_format is not None and settings.pixel_format not in BY_NAME:
+        yield f"{key}.pixel_format is {settings.pixel_format!r}; expected one of: {', '.join(sorted(BY_NAME))}"
 
 
 def missing_between(before: int, frame_id: int) -> int:

@@ -274,26 +274,32 @@ def _period_ns(capture: Capture) -> int:
 
 def _checked_stream(settings: UrlSettings, table: str) -> str:
     name = address.checked(settings.url, f"{table}.url")
-    if settings.rate_hz is not None or settings.loop:
-        key = "loop" if settings.rate_hz is None else "rate_hz"
-        raise ConfigError(
-            f"{table}.{key} is given for the stream {name}; expected it for files alone, since a camera has a pace of its "
-            "own: take the key out"
-        )
+    given = {"rate_hz": settings.rate_hz is not None, "loop": settings.loop}
+    faults = [
+        f"{table}.{key} is given for the stream {name}; expected it for files alone, since a camera has a pace of its "
+        "own: take the key out"
+        for key, is_given in given.items()
+        if is_given
+    ]
+    if faults:
+        raise ConfigError(*faults)
     return name
 
 
 def _checked_file(settings: UrlSettings, base: Path, table: str) -> Path:
     path = (base / settings.url).resolve()
+    faults = []
     if not path.is_file():
-        raise ConfigError(
+        faults.append(
             f'{table}.url is "{address.shown(settings.url)}", and there is no such file in {base.resolve()}; expected a video '
             "file, or an address that begins "
             f"with {', '.join(f'{scheme}://' for scheme in address.SCHEMES)}"
         )
     if settings.delay_ms:
-        raise ConfigError(
+        faults.append(
             f"{table}.delay_ms is {settings.delay_ms:g} for the file {path}; expected it for streams alone, since a file's "
             "images have times of their own: take the key out"
         )
+    if faults:
+        raise ConfigError(*faults)
     return path

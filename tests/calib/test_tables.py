@@ -52,3 +52,9 @@ def test_what_the_value_class_says_of_the_whole_comes_where_each_key_is_good() -
     reading = read_table({"watts": 40, "places": [3], "spare": 2}, Lamp, "lamp")
 
     assert (reading.value, reading.faults) == (None, ("lamp: `spare` is 2; expected no more than there are places",))
+
+
+def test_a_zero_byte_which_no_path_can_hold_is_refused() -> None:
+    reading = read_table({"watts": 40, "places": [3], "name": "a\0b"}, Lamp, "lamp")
+
+    assert reading.faults == (r"lamp.name is 'a\x00b'; expected text, without a zero byte",)

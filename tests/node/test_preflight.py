@@ -169,6 +169,24 @@ def test_two_sources_of_one_camera_and_one_that_waits_beside_one_that_runs_are_b
     assert "runs at its own pace and" in only_fault(plane_bench.folder, mixed)
 
 
+def test_every_fault_of_a_source_is_told_not_its_first_alone(plane_bench: Any) -> None:
+    text = TWO.replace(
+        'kind = "device"\ndevice = "/dev/video-none-such"', 'kind = "url"\nurl = "gone.avi"\ndelay_ms = 3'
+    )
+    text = text.replace(
+        'kind = "socket"\naddress = "tcp://127.0.0.1:7701"',
+        'kind = "url"\nurl = "rtsp://h/x"\nrate_hz = 5\nloop = true',
+    )
+
+    faults = look(plane_bench.folder, text).faults
+    assert [fault.split()[0] for fault in faults] == [
+        "source.a.url",
+        "source.a.delay_ms",
+        "source.b.rate_hz",
+        "source.b.loop",
+    ]
+
+
 def test_a_port_that_images_come_to_is_none_to_publish_on(plane_bench: Any) -> None:
     text = TWO + '[publish]\ndepth = "tcp://localhost:7701"\n'
 

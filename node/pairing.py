@@ -136,10 +136,13 @@ class Pairer:
         jump_ns = self._jump_ns(stream, stamp_ns, shot.arrived_ns)
         if jump_ns:
             out += self._restart(stream, jump_ns)
+        untold = bool(jump_ns) and not any(isinstance(item, LostShot) and item.reason == CLOCK_JUMP for item in out)
         if self._live:
             self._clocks.add(shot.camera, stamp_ns, shot.arrived_ns)
         offset_ns = self._offset_ns
         stream.see(stamp_ns, shot.arrived_ns)
+        if untold and self._live:  # nothing of this camera waited: its first image by the new clock has to tell
+            return [*out, LostShot(shot.camera, CLOCK_JUMP, _jumped(stream, jump_ns))]
         if offset_ns is None:
             return [*out, LostShot(shot.camera, NO_OFFSET)]
         behind_ns = stream.insert(shot, stamp_ns)
@@ -252,7 +255,7 @@ class Pairer:
         return ahead_ns if fallen_ns and ahead_ns < -STEP_NS else -fallen_ns
 
     def _restart(self, stream: StampStream, jump_ns: int) -> list[Decision]:
-        detail = f"camera {stream.camera.upper()}'s stamps jumped by {jump_ns / 1e9:+.3f} s"
+        detail = _jumped(stream, jump_ns)
         out: list[Decision] = [LostShot(stream.camera, CLOCK_JUMP, detail) for _ in stream.take(len(stream.shots))]
         stream.begin()
         self._clocks.forget(stream.camera)
@@ -286,3 +289,7 @@ class Pairer:
             f'{self._tolerance_ns / 1e6:g} ms: give offset_ms = {offset_ns / 1e6:.0f}, offset_ms = "estimate", '
             'or stamps = "arrival"'
         )
+
+
+def _jumped(stream: StampStream, jump_ns: int) -> str:
+    return f"camera {stream.camera.upper()}'s stamps jumped by {jump_ns / 1e9:+.3f} s"

@@ -10,6 +10,7 @@ import pytest
 from scripted_source import SIZE, ScriptedCamera
 from skewline.node import ConfigError, NodeError
 from skewline.node.feed import Feed, Inbox, by_stamp
+from skewline.node.pairing import PairingSettings
 from skewline.node.shot import CameraName, LostShot, Pair, Shot, StampedImage
 from skewline.node.stream import StallWatch, WatchConfig
 
@@ -20,9 +21,9 @@ SIZES: dict[CameraName, tuple[int, int]] = {"a": SIZE, "b": SIZE}
 class Running:
     """A feed that runs in a thread, with what came out of it."""
 
-    def __init__(self, *cameras: ScriptedCamera) -> None:
+    def __init__(self, *cameras: ScriptedCamera, pairing: PairingSettings | None = None) -> None:
         self.told: list[tuple[str, str, str]] = []
-        self.feed = Feed(cameras, watch=WATCH, sizes=SIZES, tell=lambda *change: self.told.append(change))
+        self.feed = Feed(cameras, pairing, WATCH, sizes=SIZES, tell=lambda *change: self.told.append(change))
         self.pairs: list[Pair] = []
         self.lost: list[LostShot] = []
         self.stop = threading.Event()
@@ -48,8 +49,8 @@ class Running:
 
 
 @contextmanager
-def running(*cameras: ScriptedCamera) -> Iterator[Running]:
-    run = Running(*cameras)
+def running(*cameras: ScriptedCamera, pairing: PairingSettings | None = None) -> Iterator[Running]:
+    run = Running(*cameras, pairing=pairing)
     run.start()
     try:
         yield run
@@ -216,6 +217,22 @@ def test_black_images_are_not_taken_for_one_camera(a: ScriptedCamera, b: Scripte
     with running(a, b) as run:
         more_pairs(run)
         assert "same picture" not in {run.state("a"), run.state("b")}
+
+
+def test_a_clock_that_is_set_while_running_is_told_by_its_camera_and_pairs_come_back_where_it_is_estimated(
+    a: ScriptedCamera, b: ScriptedCamera
+) -> None:
+    with running(a, b, pairing=PairingSettings(offset_ms="estimate")) as run:
+        more_pairs(run)
+        b.shift_s = 3600.0
+        until(lambda: any(lost.reason == "clock jump" for lost in run.lost) or len(run.pairs) > 500)
+        more_pairs(run)
+        offset_ms = run.feed.view().clock_offset_ms
+    assert run.pairs[-1].offset_ns == pytest.approx(3600e9, abs=20e6)
+    assert offset_ms == pytest.approx(3_600_000, abs=20)
+    assert abs(run.pairs[-1].skew_ns) <= 15_000_000
+    details = {lost.detail for lost in run.lost if lost.reason in ("clock jump", "no offset yet")}
+    assert any("camera B's stamps jumped by +3600" in detail for detail in details)
 
 
 def test_sources_that_cannot_make_pairs_are_refused_at_once(a: ScriptedCamera, b: ScriptedCamera) -> None:

@@ -10,33 +10,27 @@ import threading
 import time
 from collections.abc import Callable, Mapping
 from contextlib import ExitStack, closing
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Protocol
 
 from msgspec import structs
 
 from ..calib import Rig
 from .access import AccessPolicy
-from .camera_report import CameraState
 from .commands import node_commands
 from .config import NodeConfig
 from .control import ControlServer
-from .engine import DepthEngine
-from .errors import UNKNOWN_SCALE, ConfigError, NodeError, PairError
-from .feed import Feed
+from .errors import PairError
 from .frame import DepthFrame
 from .gatekeeper import Gatekeeper
 from .hand_over import PairFeed, read_ahead
-from .kept_config import without_passwords
+from .parts import begin_recording, check_same_cameras, depth_engine, equipment, make_feed
 from .publisher import Publisher
 from .record_switch import RecordSwitch
-from .recording import TOLD_TO_STOP, Recorder
-from .recording_format import Heading
-from .shot import CameraName, LostShot, Pair, Shot
+from .shot import LostShot, Pair
 from .sources import SourceKind
 from .status import NodeStatus, Tally
 from .steering import Engine, Equipment, Steering
-from .trust import TrustConfig, judge, skew_depth_error_m, skew_reasons
 
 _STATUS_EVERY_S = 1.0
 _COMPLAIN_EVERY_S = 5.0
@@ -208,65 +202,6 @@ class _RationedLog:
         self._silent_until_s = time.monotonic() + _COMPLAIN_EVERY_S
 
 
-def depth_engine(rig: Rig, config: NodeConfig) -> Engine:
-    """Make the engine that the configuration asks for.
-
-    Raises
-    ------
-    NodeError
-        Where the rig's scale is not known, so that there would be no metres to publish; or as the engine says.
-    """
-    if not rig.scale_known:
-        raise NodeError(f"the depth of {config.rig} would not be in metres, since {UNKNOWN_SCALE}")
-    return DepthEngine(
-        rig,
-        near=config.volume.near_m,
-        far=config.volume.far_m,
-        settings=config.match.settings,
-        resolution=config.match.resolution,
-    )
-
-
-def judged(frame: DepthFrame, baseline_m: float, limits: TrustConfig) -> DepthFrame:
-    """Say of a frame how far it may be trusted."""
-    error_m = skew_depth_error_m(frame.skew_ns, limits.scene_speed_m_s, frame.far_m, baseline_m)
-    return replace(
-        frame,
-        skew_depth_error_m=error_m,
-        scene_speed_m_s=limits.scene_speed_m_s,
-        trust=judge(skew_reasons(error_m, limits)),
-    )
-
-
-def make_feed(
-    config: NodeConfig,
-    kinds: Mapping[str, SourceKind],
-    rig: Rig,
-    log: logging.Logger,
-    tap: Callable[[Shot], None] = lambda _: None,
-) -> Feed:
-    """Make the feed that the configuration asks for, of cameras as large as the rig's; ``tap`` sees every image.
-
-    Raises
-    ------
-    ConfigError
-        As the sources say.
-    """
-
-    def tell(camera: CameraName, state: CameraState, detail: str) -> None:
-        level = logging.INFO if state in ("opening", "delivering", "ended") else logging.WARNING
-        log.log(level, "camera %s: %s%s", camera.upper(), state, f": {detail}" if detail else "")
-
-    return Feed(
-        config.sources.make(kinds),
-        config.sources.pairing,
-        config.sources.watch,
-        sizes={"a": (rig.a.width, rig.a.height), "b": (rig.b.width, rig.b.height)},
-        tell=tell,
-        tap=tap,
-    )
-
-
 @dataclass(frozen=True, eq=False)
 class NodeAddresses:
     """Where a node that is ready can be reached, and by whom."""
@@ -372,65 +307,6 @@ def run_node(
         summary = node.run(stop)
         publisher.close(linger_s=0.0 if stop.is_set() else _LAST_WORDS_S)
     return summary
-
-
-def equipment(rig: Rig, config: NodeConfig, make_engine: Callable[[Rig, NodeConfig], Engine]) -> Equipment:
-    """Make what a rig comes to in a node of this configuration.
-
-    Raises
-    ------
-    NodeError
-        Where the rig's scale is not known, or it does not see the volume.
-    """
-    return Equipment(
-        make_engine(rig, config), rig.fingerprint, lambda frame: judged(frame, rig.baseline_m, config.trust)
-    )
-
-
-def check_same_cameras(rig: Rig, running: Rig) -> None:
-    """Refuse a rig of other image sizes than those that the cameras were found to give.
-
-    Raises
-    ------
-    NodeError
-        Where a size differs.
-    """
-    for name, camera, expected in (("A", rig.a, running.a), ("B", rig.b, running.b)):
-        given, wanted = (camera.width, camera.height), (expected.width, expected.height)
-        if given != wanted:
-            raise NodeError(
-                f"the rig's camera {name} gives {given[0]} x {given[1]} pixels; expected {wanted[0]} x {wanted[1]} as the "
-                "running node's: solve a rig for these cameras at this size, or start the node anew"
-            )
-
-
-def begin_recording(config: NodeConfig, session: str, log: logging.Logger) -> Recorder:
-    """Begin a recording as the configuration says, with rig and configuration inside.
-
-    Raises
-    ------
-    NodeError
-        Where it says nothing of recording, or no file can be made.
-    CalibrationError
-        Where the rig file cannot be read.
-    """
-    if config.record is None:
-        raise ConfigError("record is missing; expected a table [record]: give it one")
-    heading = Heading(
-        session=session,
-        rig=config.rig.read_text(encoding="utf-8") if config.rig.is_file() else None,
-        config=without_passwords(config.text) if config.text else None,
-    )
-    recorder = Recorder(
-        config.record,
-        config.base,
-        heading,
-        on_stop=lambda reason: log.log(
-            logging.INFO if reason == TOLD_TO_STOP else logging.WARNING, "recording ended: %s", reason
-        ),
-    )
-    log.info("recording to %s", recorder.status.file)
-    return recorder
 
 
 def _await_subscriber(timeout_s: float, publisher: Publisher, stop: threading.Event, log: logging.Logger) -> None:

@@ -20,6 +20,7 @@ from ..node import ConfigError, DepthFrame, NodeError, NodeStatus
 from ..node.depth_difference import DepthDifference, DifferenceFigures
 from ..node.feed import Feed
 from ..node.hand_over import PairFeed
+from ..node.parts import depth_engine, judged
 from ..node.publisher import Publisher
 from ..node.recording_format import DEPTH_TOPIC
 from ..node.recording_info import RecordingInfo
@@ -34,7 +35,7 @@ from ..node.replaying import (
     holds_images,
     settings_from,
 )
-from ..node.runner import Node, depth_engine, judged
+from ..node.runner import Node
 from ..node.sources.recording import RecordingSettings, RecordingSource, window_of
 from ..node.steering import Engine
 from ..node.wire import decode_depth, encode_depth

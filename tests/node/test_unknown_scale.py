@@ -11,7 +11,7 @@ from skewline.calib import Camera, Rig
 from skewline.node import DepthEngine, DepthFrame, NodeError
 from skewline.node.config import load_config
 from skewline.node.errors import WireError
-from skewline.node.runner import depth_engine
+from skewline.node.parts import depth_engine
 from skewline.node.sources import BUILT_IN
 from skewline.node.wire import encode_depth
 

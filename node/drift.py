@@ -38,6 +38,9 @@ LARGEST_NOISE_PX = 1.0
 """Share of the matches that must agree, and to what: wrong matches alone scatter over the whole reach of the search."""
 
 _MAD_TO_SIGMA = 1.4826
+_CORE_SIGMAS, _CORE_SPREAD, _CORE_ROUNDS = 2.5, 0.9546, 8
+"""A normal distribution cut off at 2.5 sigma has 0.9546 of its standard deviation."""
+
 _LEAST_NOISE = 0.02
 _TRIALS = 100
 _TRIPLE = (PITCH, ROLL, YAW)
@@ -46,7 +49,8 @@ _STEADY = 1e-3
 _BLOCKS = (8, 6)
 """Parts of the view, across and down, within which errors may go together."""
 
-_LENS_DEGREE = 3
+_LENS_DEGREE = 2
+"""Of the fields that lens models are taken to leave: of finer ones less turns into a pose."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -238,9 +242,21 @@ def _settled(sight: _Sight, step: FloatArray) -> tuple[FloatArray, float]:
 
 
 def _noise(misses: FloatArray, sight: _Sight) -> float:
-    """Estimate the common factor of the matches' errors from the middle of their misses."""
+    """Estimate the common factor of the matches' errors from the core of their misses.
+
+    The middle of the absolute misses starts it; the spread of what lies within 2.5 of it, over that of a normal
+    distribution cut off there, takes its place until it stands still. The middle alone is twice too large where two fifths
+    of the matches lie on what moved, and then lets those in that moved by a pixel.
+    """
+    sizes = np.abs(misses) / sight.sigma_px
+    noise = _MAD_TO_SIGMA * float(np.median(sizes))
+    for _ in range(_CORE_ROUNDS):
+        core = sizes[sizes < _CORE_SIGMAS * noise]
+        if len(core) < LEAST_MATCHES / 2:
+            break
+        noise = float(np.sqrt(np.mean(core**2))) / _CORE_SPREAD
     freedom = np.sqrt(len(misses) / (len(misses) - UNKNOWNS))
-    return max(_MAD_TO_SIGMA * float(np.median(np.abs(misses) / sight.sigma_px)) * float(freedom), _LEAST_NOISE)
+    return max(noise * float(freedom), _LEAST_NOISE)
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -288,7 +304,7 @@ class _Fit:
     def lasting(self, lens_px: float) -> FloatArray:
         """Say what rows that are off by some smooth field over the view make of the step, shape (5, 5).
 
-        The field is a random polynomial of the third degree, as what a lens model leaves looks: Legendre terms of equal
+        The field is a random polynomial, for want of anything known of it: Legendre terms of equal
         strength, with ``lens_px`` as the root mean square of all of them together.
         """
         x, y = (np.polynomial.legendre.legvander(axis, _LENS_DEGREE) for axis in self.place.T)

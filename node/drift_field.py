@@ -105,6 +105,13 @@ def drifted(rig: Rig, plan: ViewPlan, step: FloatArray) -> Rig:
     return replace(rig, R=R, t=-R @ plan.R_view_a.T @ (_centre(step) * rig.baseline_m), covariance=None)
 
 
+def step_to(rig: Rig, plan: ViewPlan) -> FloatArray:
+    """Give the drift, shape (5,), that takes the rig a plan was made for to another one; of its baseline the direction."""
+    turn = Rotation.from_matrix(plan.R_view_b @ rig.R @ plan.R_view_a.T).as_rotvec()
+    centre = plan.R_view_a @ rig.centre_b
+    return np.concatenate([turn, centre[1:] / centre[0]])
+
+
 def depth_effect(plan: ViewPlan, step: FloatArray, covariance: FloatArray, distance_m: float) -> Effect:
     """Say how wrong depth at a distance is where the cameras have drifted and depth is still made with the old rig.
 

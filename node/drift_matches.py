@@ -142,7 +142,8 @@ def _lies_in(inside: Grey, places: NDArray[np.float32]) -> NDArray[np.bool_]:
     column, row = np.rint(places / _COARSE).astype(int).T
     height, width = inside.shape
     within = (column >= 0) & (column < width) & (row >= 0) & (row < height)
-    return within & (inside[np.clip(row, 0, height - 1), np.clip(column, 0, width - 1)] > 0)
+    within &= inside[np.clip(row, 0, height - 1), np.clip(column, 0, width - 1)] > 0
+    return np.asarray(within, dtype=np.bool_)
 
 
 def _corners(view: Grey, inside: Grey, plan: ViewPlan) -> NDArray[np.float32]:
@@ -170,15 +171,14 @@ def _coarse_places(
     view_a: Grey, view_b: Grey, corners: NDArray[np.float32], plan: ViewPlan
 ) -> tuple[NDArray[np.float32], NDArray[np.bool_]]:
     """Give each corner's likeliest place in B, shape (N, 2), in pixels of the view, and whether it is alike."""
-    small_a, small_b = (_softened(view) for view in (view_a, view_b))
     radius = _BLOCK_PX // 2
     across, along = -(-REACH_PX // _COARSE), -(-_ALONG_PX // _COARSE)
     span = -(-plan.disparities // _COARSE)
     # Room on all sides, so that every search is whole.
     left = span + along + radius
     right, around = along + radius, across + radius
-    small_a = cv2.copyMakeBorder(small_a, radius, radius, radius, radius, cv2.BORDER_REPLICATE)
-    small_b = cv2.copyMakeBorder(small_b, around, around, left, right, cv2.BORDER_REPLICATE)
+    small_a = cv2.copyMakeBorder(_softened(view_a), radius, radius, radius, radius, cv2.BORDER_REPLICATE)
+    small_b = cv2.copyMakeBorder(_softened(view_b), around, around, left, right, cv2.BORDER_REPLICATE)
     centre = np.rint((corners - (_COARSE - 1) / 2) / _COARSE).astype(int)
     places = np.empty_like(corners)
     likeness = np.empty(len(corners), dtype=np.float32)
@@ -211,4 +211,4 @@ def _refined(
         criteria=(cv2.TERM_CRITERIA_EPS | cv2.TERM_CRITERIA_COUNT, 12, 0.01),
         flags=cv2.OPTFLOW_USE_INITIAL_FLOW | cv2.OPTFLOW_LK_GET_MIN_EIGENVALS,
     )
-    return end[:, 0], sharp[:, 0], status[:, 0] > 0
+    return end[:, 0].astype(np.float32), sharp[:, 0].astype(np.float32), status[:, 0] > 0

@@ -1,4 +1,4 @@
-"""What successive pairs say of the pose, summed up: has the rig been knocked, and what does that make of depth?
+"""What successive pairs say of the pose, summed up: whether the rig was knocked, and what that makes of depth.
 
 Errors of successive estimates go together in a way that nobody knows: a scene that stands still repeats them, and lens
 models bring the same ones into all. So estimates are joined by covariance intersection (Julier and Uhlmann, "A
@@ -131,12 +131,12 @@ class _Held:
 
     @classmethod
     def of(cls, drift: Drift, time_s: float) -> _Held:
-        information = np.linalg.inv(drift.total)
+        information = np.asarray(np.linalg.inv(drift.total), dtype=np.float64)
         return cls(information=information, vector=information @ drift.step, count=1, time_s=time_s, last=drift)
 
     @property
     def step(self) -> FloatArray:
-        return np.linalg.solve(self.information, self.vector)
+        return np.asarray(np.linalg.solve(self.information, self.vector), dtype=np.float64)
 
     def joined(self, drift: Drift, time_s: float, time_constant_s: float) -> _Held:
         faded = 1 - math.exp(-max(0.0, time_s - self.time_s) / time_constant_s)
@@ -197,7 +197,7 @@ class DriftWatch:
         held = self._held
         if held is None or now_s - held.time_s > self.config.stale_s:
             return NoOpinion(reason=self._silence)
-        covariance = np.linalg.inv(held.information)
+        covariance = np.asarray(np.linalg.inv(held.information), dtype=np.float64)
         rows = row_effect(self._plan, held.step, covariance)
         near, far = (
             depth_effect(self._plan, held.step, covariance, end) for end in (self._plan.near_m, self._plan.far_m)

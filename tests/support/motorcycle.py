@@ -60,14 +60,23 @@ def original() -> Scene:
     return Scene(rig, bgr[0], bgr[1], points * depth[:, None], whole)
 
 
+def knocked(yaw_deg: float, camera: str, turn: np.ndarray, seed: int = 0) -> Scene:
+    """The re-imaged pair after one camera was turned about its own centre; turned axes ``x_new = turn.T @ x_old``."""
+    turn_a, turn_b = _turns(yaw_deg)
+    return _reimaged(*((turn.T @ turn_a, turn_b) if camera == "a" else (turn_a, turn.T @ turn_b)), seed)
+
+
 @lru_cache(maxsize=8)
 def reimaged(yaw_deg: float, seed: int = 0) -> Scene:
     """The pair as two unlike cameras would have seen it, B turned from A by ``yaw_deg`` and both by a few degrees more.
 
     Camera B is 0.85 times the size, at gain 0.8 with noise of 1 grey level; both lenses distort.
     """
+    return _reimaged(*_turns(yaw_deg), seed)
+
+
+def _reimaged(turn_a: np.ndarray, turn_b: np.ndarray, seed: int) -> Scene:
     source = original()
-    turn_a, turn_b = _turns(yaw_deg)
     a = Camera(
         width=741, height=500, K=[[960, 0, 365], [0, 962, 252], [0, 0, 1]], distortion=[-0.12, 0.05, 4e-4, -3e-4, 0]
     )

@@ -52,7 +52,7 @@ class DriftConfig(Struct, frozen=True, kw_only=True, forbid_unknown_fields=True)
     """
 
     time_constant_s: Annotated[float, Meta(gt=0, le=3600)] = 10.0
-    stale_s: Annotated[float, Meta(gt=0, le=3600)] = 20.0
+    stale_s: Annotated[float, Meta(gt=0, le=3600)] = 10.0
     lens_px: Annotated[float, Meta(gt=0, le=2)] = LENS_PX
     rows_doubtful_px: Annotated[float, Meta(gt=0, le=100)] = 0.5
     rows_bad_px: Annotated[float, Meta(gt=0, le=100)] = 2.0

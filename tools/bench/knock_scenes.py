@@ -17,7 +17,7 @@ from ...calib.camera import FloatArray
 from ...node import DepthEngine
 from ...node.drift import estimate_drift
 from ...node.drift_watch import DriftState, DriftWatch, NoOpinion
-from ...node.rectify import ViewPlan, plan_views
+from ...node.rectify import ViewPlan, rectifying_rotation
 from ...node.shot import CameraName
 from ..cell import Box, Cell, Scene, make_cell, moved, workshop_scene
 from ..cell.render import Image, expose, radiance
@@ -75,7 +75,7 @@ def knocked(cell: Cell, knock: Knock) -> Cell:
     T_old_new[:3, :3] = Rotation.from_rotvec(np.deg2rad(knock.turn_deg)).as_matrix()
     places = {"a": cell.T_world_a, "b": cell.T_world_b}
     places[knock.camera] = places[knock.camera] @ T_old_new
-    R_view_a = plan_views(cell.rig, cell.near_m, cell.far_m).R_view_a
+    R_view_a = rectifying_rotation(cell.rig)
     places[knock.camera][:3, 3] += cell.T_world_a[:3, :3] @ R_view_a.T @ np.array(knock.shift_mm) / 1e3
     T_b_a = np.linalg.inv(places["b"]) @ places["a"]
     return replace(cell, T_world_a=places["a"], rig=replace(cell.rig, R=T_b_a[:3, :3], t=T_b_a[:3, 3]))
@@ -174,7 +174,7 @@ def person(cell: Cell, plan: ViewPlan, across: float, rows_px: float) -> Cell:
         How far it has moved along the columns.
     """
     x, y, width, height = plan.window
-    distance = cell.near_m * 1.2
+    distance = cell.near_m * 1.05
     size = np.array([width / 3, 1.2 * height, 1.0]) / plan.focal_px * distance
     middle = (x + width / 2 + across * width / 3 - plan.principal_a[0], y + height / 2 + rows_px - plan.principal_a[1])
     place = np.append(np.array(middle) / plan.focal_px, 1.0) * distance

@@ -49,10 +49,13 @@ from .knock_scenes import (
 
 DEGREES = (0.02, 0.05, 0.1, 0.3, 1.0)
 SHIFT_MM = 0.5
-PERIODS, BEFORE = 20, 8
+PERIODS, BEFORE = 20, 6
 """How long a rig is watched after its knock, and before, in periods of two seconds."""
 
-_PHASES = 4
+_SETTLED = 4
+"""A knock that was bad for so many periods is watched no longer."""
+
+_PHASES = 2
 _ROWS_PX = (0.3, 0.6, 0.8, 1.0, 1.5, 3.0, 10.0)
 _LENS_PX = 0.1
 
@@ -78,9 +81,9 @@ class KnockRow:
     verdict : str or None
         What it said in the end.
     depth_mm, depth_sigma_mm : float
-        Error of depth foretold at the middle of the volume, root mean square over the view.
+        Error of depth foretold at the scene's median distance, root mean square over the view.
     true_mm : float
-        The same by the true pose: exact geometry.
+        The same by the true pose: exact geometry, with what a change of the baseline's length adds.
     measured_mm, coverage : float
         Median error of the depth map itself, and the share of the commonly seen volume that still has depth.
     """
@@ -115,15 +118,18 @@ def watch_knock(knock: Knock, periods: int = PERIODS, phases: int = _PHASES) -> 
     lights = [
         light_again(hit, phase / phases, knock.camera, before[phase][knock.camera == "a"]) for phase in range(phases)
     ]
-    states = [watched.show(exposed(hit, lights[period % phases], rng)) for period in range(periods)]
-    verdicts = [state.verdict for state in states]
-    last = states[-1]
+    verdicts: list[str | None] = []
+    last = watched.watch.state(watched.now_s)
+    for period in range(periods):
+        last = watched.show(exposed(hit, lights[period % phases], rng))
+        verdicts.append(last.verdict)
+        if verdicts[-_SETTLED:] == ["bad"] * _SETTLED:
+            break
     if isinstance(last, NoOpinion):
         raise NodeError(f"the watch has no opinion after {knock.name} for {periods} periods: {last.reason}")
-    measured_mm, coverage = _measured(watched.engine, hit, exposed(hit, lights[0], rng))
+    distance_m, measured_mm, coverage = _measured(watched.engine, hit, exposed(hit, lights[0], rng))
     plan, true = watched.engine.plan, step_to(hit.rig, watched.engine.plan)
-    mid = (plan.near_m + plan.far_m) / 2
-    foretold, exact = (depth_effect(plan, step, last.covariance, mid) for step in (last.step, true))
+    foretold, exact = (depth_effect(plan, step, last.covariance, distance_m) for step in (last.step, true))
     turn, shift = _along(last, true, slice(0, 3)), _along(last, true, slice(3, 5))
     lost_mm = abs(hit.rig.baseline_m - cell.rig.baseline_m) * 1e3
     return KnockRow(
@@ -140,7 +146,7 @@ def watch_knock(knock: Knock, periods: int = PERIODS, phases: int = _PHASES) -> 
         verdict=last.verdict,
         depth_mm=foretold.value * 1e3,
         depth_sigma_mm=foretold.sigma * 1e3,
-        true_mm=exact.value * 1e3 + lost_mm * mid / plan.baseline_m,
+        true_mm=exact.value * 1e3 + lost_mm * distance_m / plan.baseline_m,
         measured_mm=measured_mm,
         coverage=coverage,
     )
@@ -162,13 +168,17 @@ def _first(verdicts: Sequence[str | None], wanted: tuple[str, ...]) -> int | Non
     return next((number for number, verdict in enumerate(verdicts, start=1) if verdict in wanted), None)
 
 
-def _measured(engine: DepthEngine, hit: Any, pair: Any) -> tuple[float, float]:
-    """Compare the depth map made with the old rig with what is there, in the view that hangs on A where it now stands."""
+def _measured(engine: DepthEngine, hit: Any, pair: Any) -> tuple[float, float, float]:
+    """Compare the depth map made with the old rig with what is there, in the view that hangs on A where it now stands.
+
+    Gives the scene's median distance in metres, the median error in millimetres and the share of the view with depth.
+    """
     frame = engine.compute(*pair)
     truth = true_view(hit, moved(hit.scene, 0.0), frame)
     given = truth.common & np.isfinite(frame.depth)
     errors = np.abs(frame.depth[given] - truth.depth[given])
-    return float(np.median(errors)) * 1e3 if errors.size else float("nan"), float(given.sum() / truth.common.sum())
+    median_mm = float(np.median(errors)) * 1e3 if errors.size else float("nan")
+    return float(np.median(truth.depth[truth.common])), median_mm, float(given.sum() / truth.common.sum())
 
 
 def quiet_rig(number: int, scenes: int = 5, repeats: int = 25) -> list[dict[str, Any]]:
@@ -205,7 +215,7 @@ def watch_moving(case: tuple[float, float], periods: int = 15) -> dict[str, Any]
     watched = Watched(cell.rig, cell)
     plan = watched.engine.plan
     at_a, at_b = person(cell, plan, across, 0.0), person(cell, plan, across, rows_px)
-    fallen = light(at_a, 0.0)[0], light(at_b, 0.0)[1]
+    fallen = light_again(at_b, 0.0, "b", light_again(at_a, 0.0, "a", np.empty((0, 0), np.float32))[0])
     rng = np.random.default_rng(0)
     states = [watched.show(exposed(cell, fallen, rng)) for _ in range(periods)]
     last = states[-1]

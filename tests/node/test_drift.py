@@ -236,8 +236,13 @@ def test_what_lens_models_leave_lies_within_the_lasting_errors() -> None:
 
 
 @cache
+def in_order(yaw_deg: float) -> motorcycle.Scene:
+    return motorcycle.reimaged(yaw_deg)
+
+
+@cache
 def engine(yaw_deg: float) -> DepthEngine:
-    return DepthEngine(motorcycle.reimaged(yaw_deg).rig, motorcycle.NEAR_M, motorcycle.FAR_M)
+    return DepthEngine(in_order(yaw_deg).rig, motorcycle.NEAR_M, motorcycle.FAR_M)
 
 
 def estimated(yaw_deg: float, image_a: np.ndarray, image_b: np.ndarray) -> Drift | NoDrift:
@@ -247,7 +252,7 @@ def estimated(yaw_deg: float, image_a: np.ndarray, image_b: np.ndarray) -> Drift
 
 @pytest.mark.parametrize("yaw_deg", [10.0, 20.0])
 def test_a_real_pair_in_order_is_told_to_be_so_within_what_lens_models_leave(yaw_deg: float) -> None:
-    scene = motorcycle.reimaged(yaw_deg)
+    scene = in_order(yaw_deg)
 
     found = estimated(yaw_deg, scene.image_a, scene.image_b)
 
@@ -258,7 +263,7 @@ def test_a_real_pair_in_order_is_told_to_be_so_within_what_lens_models_leave(yaw
 
 @pytest.mark.parametrize(
     ("camera", "axis", "degrees"),
-    [("a", 0, 1.0), ("a", 1, 0.3), ("a", 2, 0.3), ("b", 0, 0.3), ("b", 1, 1.0), ("b", 2, 1.0)],
+    [("a", 0, 1.0), ("a", 1, 0.3), ("b", 1, 1.0), ("b", 2, 0.3)],
 )
 def test_a_real_pair_whose_camera_was_turned_tells_by_how_much(camera: str, axis: int, degrees: float) -> None:
     turn = np.deg2rad(degrees) * np.eye(3)[axis]
@@ -276,7 +281,7 @@ def test_a_real_pair_whose_camera_was_turned_tells_by_how_much(camera: str, axis
 
 @pytest.mark.parametrize("kind", ["blank", "dark", "noise", "unlike"])
 def test_pictures_that_show_nothing_in_common_are_no_opinion(kind: str) -> None:
-    scene = motorcycle.reimaged(10.0)
+    scene = in_order(10.0)
     rng = np.random.default_rng(0)
     shapes = scene.image_a.shape, scene.image_b.shape
     a, b = {
@@ -293,7 +298,7 @@ def test_pictures_that_show_nothing_in_common_are_no_opinion(kind: str) -> None:
 
 
 def test_one_pair_gives_one_answer() -> None:
-    scene = motorcycle.reimaged(10.0)
+    scene = in_order(10.0)
 
     one, other = (estimated(10.0, scene.image_a, scene.image_b) for _ in range(2))
 

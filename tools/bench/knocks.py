@@ -208,7 +208,7 @@ def quiet_rig(number: int, scenes: int = 5, repeats: int = 25) -> list[dict[str,
     return found
 
 
-def watch_moving(case: tuple[float, float], periods: int = 15) -> dict[str, Any]:
+def watch_moving(case: tuple[float, float], periods: int = 6) -> dict[str, Any]:
     """Show something that stands at one place of the view and is always seen moved in B: the worst that skew can do."""
     across, rows_px = case
     cell = a_cell()

@@ -87,6 +87,8 @@ class Node:
         Who may connect, in words.
     recorder : RecordSwitch, optional
         Keeps what is published, when it is on.
+    requests_refused : callable, optional
+        Tells how many requests were refused so far.
     """
 
     def __init__(
@@ -103,11 +105,13 @@ class Node:
         steering: Steering | None = None,
         access: str = "",
         recorder: RecordSwitch | None = None,
+        requests_refused: Callable[[], int] = lambda: 0,
     ) -> None:
         self._feed = feed
         self._access = access
         self._began_ns = time.time_ns() - _OLDEST_LIVE_NS
         self._recorder = recorder or RecordSwitch()
+        self._requests_refused = requests_refused
         self._equipment = Equipment(engine, fingerprint, judge_frame)
         self._steering = steering
         self._publisher = publisher
@@ -133,7 +137,13 @@ class Node:
         return self._complete(self._tally.summary(self._feed.view()))
 
     def _complete(self, status: NodeStatus) -> NodeStatus:
-        return structs.replace(status, paused=self._paused, access=self._access, recording=self._recorder.report())
+        return structs.replace(
+            status,
+            paused=self._paused,
+            access=self._access,
+            recording=self._recorder.report(),
+            requests_refused=self._requests_refused(),
+        )
 
     @property
     def _paused(self) -> bool:
@@ -302,6 +312,7 @@ def run_node(
             steering=steering,
             access=policy.describe(),
             recorder=recorder,
+            requests_refused=lambda: 0 if control is None else control.refused,
         )
         running.append(node)
         summary = node.run(stop)

@@ -86,6 +86,8 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
         How the recorder stands; None where the node was told to record nothing since it began.
     access : str
         Who may connect, in words.
+    requests_refused : int
+        Requests that were malformed, too many, unknown or not done, since the node began.
     """
 
     session: Text
@@ -110,6 +112,7 @@ class NodeStatus(Struct, frozen=True, kw_only=True):
     paused: bool = False
     recording: RecorderReport | None = None
     access: Text = ""
+    requests_refused: Count = 0
 
 
 class _Span:

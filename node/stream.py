@@ -13,7 +13,7 @@ from typing import Annotated
 
 from msgspec import Meta, Struct
 
-from .errors import NodeError, SourceError
+from .errors import SourceError
 from .shot import LostShot, Shot
 from .sources import Source
 
@@ -185,6 +185,3 @@ class StallWatch:
             return silent_s if silent_s > self._first_s else None
         silent_s = now_s - self._last_s
         return silent_s if silent_s > max(self._limit_s, 4 * self._interval_s) else None
-
-
-__all__ = ["Absent", "Ended", "NodeError", "Opened", "StallWatch", "Stream", "StreamItem", "WatchConfig"]

@@ -77,6 +77,7 @@ def test_what_a_node_was_told_to_record_stands_alone_and_gives_the_same_images_a
         assert ended["messages"] > 10
         with pytest.raises(RefusedError, match="not recording; expected record on first"):
             node.ask("record", on=False)
+        assert node.ask("status")["requests_refused"] == 2
 
     folder = plane_bench.folder / "recordings"
     info = read_recording(find_recording("night", folder))

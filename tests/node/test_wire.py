@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 from skewline.node import DepthFrame, NodeStatus, WireError
 from skewline.node.camera_report import CameraReport
+from skewline.node.status import RecorderReport
 from skewline.node.trust import Reason, Trust
 from skewline.node.wire import Packing, decode_depth, decode_status, encode_depth, encode_status, to_counts
 
@@ -81,6 +82,8 @@ def status() -> NodeStatus:
                 state="absent", state_s=3.5, detail="no camera at 0", images=9, rate_hz=0.0, lost={"no partner": 2}
             )
         },
+        recording=RecorderReport(on=True, file="shift.0001.mcap", messages=8, bytes=9000, dropped=1, reason=""),
+        requests_refused=3,
         clock_offset_ms=-1.5,
         clock_offset_sigma_ms=0.2,
     )
@@ -138,6 +141,8 @@ def keys_of(message: dict[str, Any]) -> Iterator[str]:
         yield key
         if key == "cameras":
             yield from keys_of(value["a"])
+        elif key == "recording":
+            yield from keys_of(value)
         elif key == "trust":
             yield from keys_of(value | value["reasons"][0])
 
